@@ -1,0 +1,94 @@
+"""What every transistor law offers, and the arrays that it is built from.
+
+Terminal voltages are relative to the bulk and in n-channel sense (a p-channel device has every sign turned by the
+caller). Arrays have the shape (T, N): transistors by designs; parameters may be (T, 1).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Protocol, Self
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Pick = slice | NDArray[np.intp]
+
+
+@dataclass(frozen=True)
+class Drain:
+    """The drain current and its derivatives, each of shape (T, N).
+
+    Attributes:
+        id: current into the drain [A].
+        gm, gds, gms: derivatives with respect to gate, drain and (negative) source voltage [S].
+    """
+
+    id: Array
+    gm: Array
+    gds: Array
+    gms: Array
+
+    @property
+    def gmb(self) -> Array:
+        """Bulk transconductance [S]: all four terminals moved together change nothing."""
+        return self.gms - self.gm - self.gds
+
+
+@dataclass(frozen=True)
+class Saturation:
+    """The saturation voltage and how it moves with the terminals, each of shape (T, N).
+
+    Attributes:
+        vdsat: drain-source voltage at which saturation begins [V].
+        by_gate, by_source: its derivatives with respect to gate and source voltage.
+        inversion: forward inversion level (drain current over specific current), no unit.
+    """
+
+    vdsat: Array
+    by_gate: Array
+    by_source: Array
+    inversion: Array
+
+
+@dataclass(frozen=True)
+class Capacitances:
+    """Capacitances between gate and the other terminals, overlaps included [F], each of shape (T, N)."""
+
+    cgs: Array
+    cgd: Array
+    cgb: Array
+
+
+class Law(Protocol):
+    """A transistor law bound to the parameters and sizes of T transistors in N designs."""
+
+    @classmethod
+    def bind(cls, parameters: Mapping[str, Array], width: Array, length: Array, ut: Array) -> Self:
+        """Build the law for widths and lengths [m] of shape (T, N) at thermal voltage `ut` [V]."""
+
+    def take(self, rows: Pick, columns: Pick) -> Self:
+        """Return the same law for some of its transistors and designs."""
+
+    def drain(self, vg: Array, vd: Array, vs: Array) -> Drain:
+        """Return current and derivatives at the terminal voltages [V]."""
+
+    def saturation(self, vg: Array, vd: Array, vs: Array) -> Saturation:
+        """Return the saturation voltage and the inversion level at the terminal voltages [V]."""
+
+    def capacitances(self, vg: Array, vd: Array, vs: Array) -> Capacitances:
+        """Return the gate capacitances at the terminal voltages [V]."""
+
+    def gate_voltage(self, current: Array, vs: Array) -> Array:
+        """Estimate the gate voltage at which a saturated device carries `current` [A]; a start for Newton."""
+
+    def source_voltage(self, current: Array, vg: Array) -> Array:
+        """Estimate the source voltage at which a saturated device carries `current` [A]; a start for Newton."""
+
+
+def taken(array: Array, rows: Pick, columns: Pick) -> Array:
+    """Index the two axes of a parameter array, either of which may have length one for "the same for all"."""
+    part = array if array.shape[0] == 1 else array[rows]
+    return part if part.shape[1] == 1 else part[:, columns]

@@ -1,0 +1,198 @@
+"""Engineering text to SI numbers and back: ``"250 nA"``, ``"6000 um^2"``, ``"3.5 mV*um"``.
+
+Inside the package every number is SI; text with prefixes lives in files, on the command line and in tables. Numbers
+and prefixes are read and written by quantiphy. Powers and products need a reading of their own, since a prefix on an
+area counts twice: 6000 um^2 are 6000e-12 m^2.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass
+from decimal import Decimal
+from functools import lru_cache
+from typing import Any
+
+ZERO_CELSIUS = 273.15
+
+_NUMBER = re.compile(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(.*?)\s*", re.DOTALL)
+_FACTOR = re.compile(r"([^\W\d_]+|%|1)(?:\^(-?\d+(?:\.\d+)?))?")
+_BASES = ("ohm", "degC", "dB", "Hz", "V", "A", "m", "F", "s", "K", "W", "S")
+_ALIASES = str.maketrans({"µ": "u", "μ": "u", "\u03a9": "ohm", "\u2126": "ohm", "²": "^2", "·": "*"})
+_NO_PREFIX = ("dB", "degC", "%", "1")
+
+
+class QuantityError(ValueError):
+    """A text is not a quantity of the unit that was asked for."""
+
+
+@lru_cache(maxsize=1024)
+def _parse_unit(expression: str) -> tuple[float, tuple[tuple[str, float], ...]]:
+    """Return the scale to SI and the sorted dimensions of a unit expression such as ``uA/V^2``.
+
+    Raises QuantityError when a factor is no known unit.
+    """
+    scale = 1.0
+    powers: Counter[str] = Counter()
+    text = expression.translate(_ALIASES).replace("°C", "degC").replace("√", "").strip()
+    if not text:
+        return 1.0, ()
+    for sign, factor in _factors(text):
+        match = _FACTOR.fullmatch(factor.strip())
+        if match is None:
+            raise QuantityError(f'"{expression}" is not a unit')
+        power = sign * float(match.group(2) or 1.0)
+        factor_scale, base = _parse_factor(match.group(1), expression)
+        scale *= factor_scale**power
+        if base:
+            powers[base] += power  # type: ignore[assignment]
+    return scale, tuple(sorted((base, float(p)) for base, p in powers.items() if p))
+
+
+def _factors(text: str) -> list[tuple[int, str]]:
+    """Split ``a*b/c`` into factors with the sign of their power."""
+    parts = re.split(r"([*/])", text)
+    signs = [1] + [1 if mark == "*" else -1 for mark in parts[1::2]]
+    return list(zip(signs, parts[::2], strict=True))
+
+
+def _parse_factor(name: str, expression: str) -> tuple[float, str]:
+    """Return scale and base of one factor: ``uA`` gives (1e-6, ``A``)."""
+    if name in ("%", "1"):
+        return (0.01 if name == "%" else 1.0), ""
+    if name in _BASES:
+        return 1.0, "K" if name == "degC" else name
+    for base in _BASES:
+        if base not in _NO_PREFIX and name.endswith(base):
+            scale = _prefix_scale(name.removesuffix(base))
+            if scale is not None:
+                return scale, base
+    raise QuantityError(f'"{expression}" is not a unit')
+
+
+def _prefix_scale(prefix: str) -> float | None:
+    """Return the scale that quantiphy gives a prefix, or None when it knows no such prefix."""
+    from quantiphy import Quantity
+
+    quantity = Quantity(f"1 {prefix}V")
+    return float(quantity.real) if len(prefix) == 1 and quantity.units == "V" else None
+
+
+def read(value: object, unit: str) -> float:
+    """Return a quantity in SI units.
+
+    Args:
+        value: text such as ``"250 nA"``, or a number already in SI units.
+        unit: the SI unit that is wanted, such as ``"A"`` or ``"F/m^2"``; ``""`` for a plain number.
+
+    Raises:
+        QuantityError: not a finite number, or not of that unit.
+    """
+    if isinstance(value, bool) or not isinstance(value, int | float | str):
+        raise QuantityError(f"a quantity{_example(unit)} is needed")
+    number, dimensions = _read_any(value, unit)
+    if not math.isfinite(number):
+        raise QuantityError("a finite number is needed")
+    wanted = _parse_unit(unit)[1]
+    if dimensions != wanted:
+        named = f'is in "{value.split()[-1]}"' if isinstance(value, str) and dimensions else "has no unit"
+        raise QuantityError(f"{named}, but {_unit_phrase(unit)} is needed{_example(unit)}")
+    return number
+
+
+def _read_any(value: int | float | str, unit: str) -> tuple[float, tuple[tuple[str, float], ...]]:
+    """Return the number and the dimensions of a text; a bare number is in the unit that is wanted."""
+    if not isinstance(value, str):
+        return float(value), _parse_unit(unit)[1]
+    match = _NUMBER.fullmatch(value)
+    if match is None:
+        raise QuantityError(f"is not a number with a unit{_example(unit)}")
+    expression = match.group(2)
+    if expression.translate(_ALIASES).replace("°C", "degC") == "degC" and unit == "K":
+        return float(match.group(1)) + ZERO_CELSIUS, (("K", 1.0),)
+    scale, dimensions = _parse_unit(expression)
+    return _scaled(match.group(1), scale), dimensions
+
+
+def _scaled(figure: str, scale: float) -> float:
+    """Return figure times scale, without rounding where the scale is a power of ten (250 nA is 2.5e-07 A)."""
+    exponent = round(math.log10(scale))
+    if math.isclose(scale, 10.0**exponent, rel_tol=1e-12):
+        return float(Decimal(figure).scaleb(exponent))
+    return float(figure) * scale
+
+
+def _unit_phrase(unit: str) -> str:
+    return f'a quantity in "{unit}"' if unit else "a plain number"
+
+
+def _example(unit: str) -> str:
+    examples = {
+        "V": "1.8 V", "A": "250 nA", "m": "1.2 um", "m^2": "6000 um^2", "ohm": "5 kohm", "F": "500 fF",
+        "Hz": "1 MHz", "K": "27 degC", "W": "60 uW", "dB": "40 dB", "V/s": "2 V/us",
+    }  # fmt: skip
+    return f' (such as "{examples[unit]}")' if unit in examples else ""
+
+
+def write(value: float, unit: str, digits: int = 4) -> str:
+    """Return a number in engineering notation: ``write(2.5e-7, "A")`` is ``250 nA``.
+
+    Areas are written in um^2, slopes in V/us, decibels without a prefix; an infinite value is ``unlimited``.
+    """
+    from quantiphy import Quantity
+
+    if math.isnan(value):
+        return "undefined"
+    if math.isinf(value):
+        return "unlimited" if value > 0 else "-unlimited"
+    if unit in _PREFERRED:
+        return write_in(value, _PREFERRED[unit], digits)
+    if unit in ("", "dB", "V/V"):
+        return write_in(value, unit, digits)
+    return str(Quantity(value, unit).render(prec=digits - 1))
+
+
+_PREFERRED = {"m^2": "um^2", "V/s": "V/us"}
+
+
+def write_in(value: float, unit: str, digits: int = 4) -> str:
+    """Return a number in exactly the unit given, without choosing a prefix: ``8.5 fF/um^2``."""
+    figure = value / _parse_unit(unit)[0] if unit else value
+    return f"{figure:.{digits}g} {unit}".strip()
+
+
+def scale_of(unit: str) -> float:
+    """Return how many SI units one `unit` is: ``scale_of("um^2")`` is 1e-12."""
+    return _parse_unit(unit)[0]
+
+
+@dataclass(frozen=True)
+class In:
+    """Marks a number of a pydantic model as a quantity of one unit: ``Annotated[float, In("V")]``.
+
+    Attributes:
+        unit: the SI unit in which the number is kept.
+        shown: the unit in which tables show it; a prefix is chosen where it is empty.
+    """
+
+    unit: str
+    shown: str = ""
+
+    def text(self, value: float) -> str:
+        """Return the value as tables show it."""
+        return write_in(value, self.shown) if self.shown else write(value, self.unit)
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: Callable[[Any], Any]) -> Any:
+        """Read text before pydantic checks the number and its bounds."""
+        from pydantic_core import core_schema
+
+        return core_schema.no_info_before_validator_function(lambda value: read(value, self.unit), handler(source))
+
+    def __get_pydantic_json_schema__(self, schema: Any, handler: Callable[[Any], Any]) -> dict[str, Any]:
+        """Describe a number in SI units or a text with its unit."""
+        unit = self.shown or self.unit or "1"
+        number = {key: value for key, value in handler(schema).items() if key not in ("title", "description")}
+        return {"anyOf": [number, {"type": "string", "pattern": r"^\s*[-+]?[0-9.]"}], "x-unit": unit}

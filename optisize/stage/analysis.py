@@ -1,0 +1,237 @@
+"""One population of sized stages, solved as far as it is asked: every measure takes what it needs from here.
+
+Each quantity is computed when it is first asked for and kept, so a measure that nobody asks for costs nothing.
+"""
+
+from __future__ import annotations
+
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from optisize.process.law import Array, Capacitances, Drain, Saturation
+from optisize.stage.bias import OperatingPoint, operating_point
+from optisize.stage.circuit import Circuit
+from optisize.stage.excursion import follow
+from optisize.stage.linear import Transfer, crossing, solve
+
+UNLIMITED = 1e-11  # a common-mode gain below this part of the terms it is summed from is rounding, hence zero
+
+
+class Analysis:
+    """The solved and linearised stages of N designs; arrays end in the designs' axis."""
+
+    def __init__(self, circuit: Circuit) -> None:
+        """Take the sized designs; nothing is solved yet."""
+        self.circuit = circuit
+        self.wiring = circuit.wiring
+        self.topology = circuit.topology
+
+    @cached_property
+    def point(self) -> OperatingPoint:
+        """The operating point in the middle of the common-mode range."""
+        middle = np.full(self.circuit.designs, self.circuit.conditions.middle)
+        return operating_point(self.circuit, self.circuit.driven(middle, middle))
+
+    @cached_property
+    def range_points(self) -> OperatingPoint:
+        """The operating points at both ends of the common-mode range, (A, 2N): the low ends first."""
+        low, high = self.circuit.conditions.common_mode
+        if low == high:
+            return self.point
+        n, unknowns = self.circuit.designs, self.wiring.unknowns
+        twice, common = self.range_circuit, np.repeat([low, high], n)
+        start = np.tile(self.point.v, 2)
+        start[:unknowns] += np.tile(self.responses[:, 1], 2) * (common - self.circuit.conditions.middle)
+        start = np.clip(start, 0.0, self.circuit.conditions.supply)
+        return operating_point(twice, twice.driven(common, common), start)
+
+    @cached_property
+    def range_circuit(self) -> Circuit:
+        """The designs as often as `range_points` has ends."""
+        low, high = self.circuit.conditions.common_mode
+        return self.circuit if low == high else self.circuit.repeated(2)
+
+    def take(self, columns: NDArray[np.intp]) -> Analysis:
+        """Return the analysis of some of the designs, with their operating points."""
+        part = Analysis(self.circuit.take(columns))
+        part.point = OperatingPoint(self.point.v[:, columns], self.point.converged[columns])
+        return part
+
+    @cached_property
+    def converged(self) -> Any:
+        """Which designs have an operating point in the middle of the common-mode range, (N,) of bool."""
+        return self.point.converged
+
+    @cached_property
+    def terminals(self) -> tuple[Array, Array, Array]:
+        """Gate, drain and source voltages relative to the bulk in n-channel sense, each (T, N)."""
+        return self.circuit.terminals(self.point.v)
+
+    @cached_property
+    def drain(self) -> Drain:
+        """Currents and derivatives of the transistors, (T, N)."""
+        return self.circuit.law.drain(*self.terminals)
+
+    @cached_property
+    def saturation(self) -> Saturation:
+        """Saturation voltages and inversion levels, (T, N)."""
+        return self.circuit.law.saturation(*self.terminals)
+
+    @cached_property
+    def matrix(self) -> Array:
+        """The conductance matrix between the unknown nodes, (U, U, N)."""
+        return self.circuit.jacobian(self.drain)
+
+    @cached_property
+    def drives(self) -> Array:
+        """The differential and the common-mode drive over all nodes, (A, 2): half a volt each way, one volt."""
+        differential = self.wiring.drive(positive=0.5, negative=-0.5)
+        return np.stack([differential, self.wiring.drive(positive=1.0, negative=1.0)], axis=1)
+
+    @cached_property
+    def pulls(self) -> Array:
+        """How the residual moves with the two drives, (U, 2, N)."""
+        return self.circuit.driven_slopes(self.drain, self.drives)
+
+    @cached_property
+    def responses(self) -> Array:
+        """How the unknown nodes move with the two drives, (U, 2, N)."""
+        return solve(self.matrix, -self.pulls)
+
+    @cached_property
+    def adm(self) -> Array:
+        """Differential gain of the output, signed, (N,)."""
+        return self.wiring.output(self.responses[:, 0])
+
+    @cached_property
+    def acm(self) -> Array:
+        """Common-mode gain, signed, (N,).
+
+        Of a single-ended output: its own change. Of a differential output: that of its common mode, the mean of the
+        two sides. Exactly zero where the figure is no more than the rounding of the terms that it is summed from.
+        """
+        nodes = [self.wiring.index[node] for node, _ in self.topology.output]
+        gain = self.responses[nodes, 1].mean(axis=0)
+        return np.where(np.abs(gain) < UNLIMITED * self._rounding_scale, 0.0, gain)
+
+    @cached_property
+    def _rounding_scale(self) -> Array:
+        """The size of the terms that cancel in the common-mode gain: gms times the resistance at the output."""
+        node = self.wiring.index[self.topology.output[0][0]]
+        row = self.wiring.pair[1]
+        return np.maximum(self.drain.gms[row] / np.maximum(self.matrix[node, node], 1e-30), 1.0)
+
+    @cached_property
+    def capacitances(self) -> Capacitances:
+        """Gate capacitances of the transistors, (T, N)."""
+        return self.circuit.law.capacitances(*self.terminals)
+
+    @cached_property
+    def capacitance_branches(self) -> Array:
+        """All capacitances [F] in the order of the wiring's stamp, (5T + R + 1, N)."""
+        gate, drawn, p = self.capacitances, self.circuit.drawn, self.circuit.parameters
+        _, vd, vs = self.terminals
+
+        def junction(area: Array, edge: Array, reverse: Array) -> Array:
+            bias = 1.0 + np.maximum(reverse, -0.4 * p["junction_potential"]) / p["junction_potential"]
+            bottom = p["junction_capacitance"] * area * bias ** -p["junction_grading"]
+            return bottom + p["sidewall_capacitance"] * edge * bias ** -p["sidewall_grading"]
+
+        return np.concatenate(
+            [
+                gate.cgs,
+                gate.cgd,
+                gate.cgb,
+                junction(drawn.drain_area, drawn.drain_edge, vd),
+                junction(drawn.source_area, drawn.source_edge, vs),
+                self.circuit.resistor_capacitances,
+                np.full((1, self.circuit.designs), self.circuit.conditions.load_capacitance),
+            ]
+        )
+
+    @cached_property
+    def capacitance_matrix(self) -> Array:
+        """The capacitance matrix between the unknown nodes, (U, U, N)."""
+        w = self.wiring
+        stamp = w.capacitance_stamp[:, : w.unknowns].reshape(w.unknowns**2, -1)
+        return (stamp @ self.capacitance_branches).reshape(w.unknowns, w.unknowns, -1)
+
+    @cached_property
+    def output_capacitance(self) -> Array:
+        """All capacitance at one output node [F], (N,)."""
+        node = self.wiring.index[self.topology.output[0][0]]
+        return self.capacitance_matrix[node, node]
+
+    @cached_property
+    def differential_transfer(self) -> Transfer:
+        """The output over the differential input as a function of frequency."""
+        w = self.wiring
+        output = np.zeros(w.unknowns)
+        for node, sign in self.topology.output:
+            output[w.index[node]] = sign
+        stamp = np.einsum("uae,a->ue", w.capacitance_stamp, self.drives[:, 0])
+        pull_c = stamp @ self.capacitance_branches
+        return Transfer(self.matrix, self.capacitance_matrix, self.pulls[:, 0], pull_c, output)
+
+    def gain_crossing(self, level: Array) -> Array:
+        """Return the frequency [Hz] at which |Adm(0)/Adm(f)|^2 - 1 has risen to `level`, (N,).
+
+        Not a number where it never does, or where the level is not above zero.
+        """
+        result = np.full(self.circuit.designs, np.nan)
+        columns = np.flatnonzero(level > 1e-6)
+        if len(columns):
+            part = level[columns]
+            start = self._first_pole[columns] * np.sqrt(part)
+            result[columns] = crossing(self.differential_transfer.take(columns), part, start) / (2.0 * np.pi)
+        return result
+
+    @cached_property
+    def _first_pole(self) -> Array:
+        """First-moment estimate of the dominant pole [rad/s], (N,)."""
+        w = self.wiring
+        moved = np.einsum("uvn,vn->un", self.capacitance_matrix, self.responses[:, 0])
+        moment = w.output(solve(self.matrix, moved[:, None])[:, 0])
+        return np.abs(self.adm) / np.maximum(np.abs(moment), 1e-30)
+
+    @cached_property
+    def room(self) -> Array:
+        """Smallest vds - vdsat of the transistors that have to be saturated, worst over the range [V], (N,).
+
+        Not a number where an end of the range has no operating point.
+        """
+        if self.range_points is self.point:
+            return self.room_at_rest
+        terminals = self.range_circuit.terminals(self.range_points.v)
+        room = _room(self.range_circuit, terminals, self.range_circuit.law.saturation(*terminals))
+        room = np.where(self.range_points.converged, room, np.nan)
+        return room.reshape(2, self.circuit.designs).min(axis=0)
+
+    @cached_property
+    def room_at_rest(self) -> Array:
+        """Smallest vds - vdsat in the middle of the common-mode range [V], (N,)."""
+        return _room(self.circuit, self.terminals, self.saturation)
+
+    @cached_property
+    def output_excursions(self) -> tuple[Array, Array]:
+        """How far the output can go down and up from its rest [V], each (N,).
+
+        Zero where a transistor is out of saturation at rest; not a number where the end was not found.
+        """
+        moved = np.zeros((2, self.circuit.designs))
+        columns = np.flatnonzero(self.room_at_rest > 0.0)
+        if len(columns):
+            twice = self.circuit.take(np.tile(columns, 2))
+            start = np.tile(self.point.v[:, columns], 2)
+            end = follow(twice, start, self.drives[:, 0], np.repeat([-1.0, 1.0], len(columns)))
+            reach = np.abs(self.wiring.output(end.v) - self.wiring.output(start))
+            moved[:, columns] = np.where(end.found, reach, np.nan).reshape(2, -1)
+        return moved[0], moved[1]
+
+
+def _room(circuit: Circuit, terminals: tuple[Array, Array, Array], saturation: Saturation) -> Array:
+    _, vd, vs = terminals
+    return (vd - vs - saturation.vdsat)[circuit.wiring.saturating].min(axis=0)

@@ -1,0 +1,132 @@
+"""The operating point of a whole population by damped Newton iteration."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from optisize.process.law import Array
+from optisize.stage.circuit import Circuit, Indices
+from optisize.stage.linear import solve
+from optisize.stage.topology import DRIVEN, INPUTS
+
+ITERATIONS = 40
+BEYOND = 0.5  # V; how far beyond the rails a node may be sought
+PINNED = 5  # steps against that bound after which a design is given up: it has no operating point inside
+STEP_LIMIT = 0.25  # V; a step of any node beyond it shortens the whole step
+STEP_DONE = 1e-7  # V; the step after which the next one would be at rounding (convergence is quadratic)
+LEAK = 1e-15  # S; keeps the matrix regular where every device at a node is off; not in the residual
+
+
+@dataclass(frozen=True)
+class OperatingPoint:
+    """Node voltages (A, N), the unknown nodes first, and which designs converged (N,) of bool."""
+
+    v: Array
+    converged: Array
+
+
+class _Start:
+    """What the first guesses of a topology ask for; see `topology.Start`."""
+
+    def __init__(self, circuit: Circuit, driven: Array) -> None:
+        self._circuit = circuit
+        self._driven = dict(zip(DRIVEN, driven, strict=True))
+
+    def rail(self, node: str) -> Array:
+        return self._driven[self._circuit.topology.rail(node)]
+
+    def size(self, name: str) -> Array:
+        return self._circuit.sizes[name]
+
+    def tail_current(self) -> Array:
+        return self._circuit.topology.tail_current(self)
+
+    def away(self, node: str, voltage: Array) -> Array:
+        rail = self.rail(node)
+        supply = self._driven["supply"]
+        return np.where(rail > 0.5 * supply, rail - voltage, rail + voltage)
+
+    def gate_drive(self, transistor: str, current: Array) -> Array:
+        row = self._circuit.wiring.rows[transistor]
+        law = self._circuit.law.take(slice(row, row + 1), slice(None))
+        return law.gate_voltage(current[None], np.zeros((1, 1)))[0]
+
+    def follow(self, transistor: str, current: Array) -> Array:
+        """Return the source voltage under a gate at the common mode, its bulk at the rail of its channel."""
+        circuit = self._circuit
+        row = circuit.wiring.rows[transistor]
+        law = circuit.law.take(slice(row, row + 1), slice(None))
+        common = 0.5 * (self._driven["in+"] + self._driven["in-"])
+        if circuit.topology.bulk == "source":
+            return common - circuit.topology.polarity * law.gate_voltage(current[None], np.zeros((1, 1)))[0]
+        if INPUTS[circuit.topology.input] == "n":
+            return law.source_voltage(current[None], common[None])[0]
+        supply = self._driven["supply"]
+        return supply - law.source_voltage(current[None], (supply - common)[None])[0]
+
+
+def first_guess(circuit: Circuit, driven: Array) -> Array:
+    """Return node voltages (A, N) to start Newton from, each inside the rails."""
+    start = _Start(circuit, driven)
+    unknown = np.array([guess(start) for _, guess in circuit.topology.guesses])
+    supply = circuit.conditions.supply
+    return np.concatenate([np.clip(unknown, 0.02 * supply, 0.98 * supply), driven])
+
+
+def operating_point(circuit: Circuit, driven: Array, start: Array | None = None) -> OperatingPoint:
+    """Solve the operating point of every design.
+
+    Args:
+        circuit: N sized designs.
+        driven: voltages of the driven nodes, (4, N).
+        start: node voltages (A, N) to start from; the topology's own guess where None.
+
+    Returns:
+        Node voltages, always finite, and a flag for each design. A design that has not converged keeps its start.
+    """
+    begin = first_guess(circuit, driven) if start is None else start
+    begin = np.concatenate([begin[: circuit.wiring.unknowns], driven])
+    v = begin.copy()
+    converged = np.zeros(circuit.designs, dtype=bool)
+    active: Indices = np.arange(circuit.designs)
+    part, vp = circuit, v.copy()
+    pinned = np.zeros(circuit.designs, dtype=int)
+    for _ in range(ITERATIONS):
+        size = newton_step(part, vp)
+        done = size < STEP_DONE
+        pinned = np.where(_at_bound(part, vp), pinned + 1, 0)
+        over = done | (pinned >= PINNED)
+        if over.all() or 3 * np.count_nonzero(over) > len(over):
+            v[:, active[done]] = vp[:, done]
+            converged[active[done]] = True
+            active = active[~over]
+            if not len(active):
+                break
+            part, vp, pinned = part.take(np.flatnonzero(~over)), vp[:, ~over], pinned[~over]
+    v[:, ~converged] = begin[:, ~converged]
+    return OperatingPoint(np.where(np.isfinite(v), v, 0.5 * circuit.conditions.supply), converged)
+
+
+def newton_step(circuit: Circuit, v: Array) -> Array:
+    """Move the unknown node voltages `v` in place by one damped step; return the size of the full step, (N,) [V]."""
+    unknowns = circuit.wiring.unknowns
+    drain = circuit.law.drain(*circuit.terminals(v))
+    matrix = circuit.jacobian(drain)
+    matrix[np.arange(unknowns), np.arange(unknowns)] += LEAK
+    step = solve(matrix, -circuit.residual(v, drain)[:, None])[:, 0]
+    size = np.abs(step).max(axis=0)
+    bad = ~np.isfinite(size)
+    if bad.any():
+        step[:, bad], size[bad] = 0.0, np.inf
+    v[:unknowns] += step * np.minimum(1.0, STEP_LIMIT / np.maximum(size, 1e-30))
+    np.clip(v[:unknowns], -BEYOND, circuit.conditions.supply + BEYOND, out=v[:unknowns])
+    return size
+
+
+def _at_bound(circuit: Circuit, v: Array) -> NDArray[np.bool_]:
+    """Tell which designs have a node at the bound of the search, (N,)."""
+    nodes = v[: circuit.wiring.unknowns]
+    return (nodes.min(axis=0) <= -BEYOND) | (nodes.max(axis=0) >= circuit.conditions.supply + BEYOND)

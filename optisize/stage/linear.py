@@ -1,0 +1,144 @@
+"""Linear algebra and small-signal transfer over whole populations: matrices (U, U, N), the last axis is the designs."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from optisize.process.law import Array, Pick
+
+
+def solve(matrix: NDArray[Any], right: NDArray[Any]) -> NDArray[Any]:
+    """Solve N small systems at once by elimination without exchange of rows.
+
+    Nodal matrices of transistor stages are eliminated in their own order: each diagonal is the sum of the conductances
+    at its node. A column whose pivot vanishes comes out as not finite; the caller flags it.
+
+    Args:
+        matrix: (U, U, N), real or complex.
+        right: (U, K, N).
+
+    Returns:
+        The solutions, (U, K, N).
+    """
+    size = matrix.shape[0]
+    work = np.concatenate([matrix, right], axis=1)
+    with np.errstate(all="ignore"):
+        for k in range(size - 1):
+            factor = work[k + 1 :, k] / work[k, k]
+            work[k + 1 :, k + 1 :] -= factor[:, None] * work[k, k + 1 :]
+        solution = work[:, size:]
+        for k in range(size - 1, -1, -1):
+            if k < size - 1:
+                solution[k] -= (work[k, k + 1 : size, None] * solution[k + 1 :]).sum(axis=0)
+            solution[k] /= work[k, k]
+    return solution
+
+
+@dataclass(frozen=True)
+class Transfer:
+    """A transfer function H(jw) of N designs: matrices, drive and output.
+
+    Attributes:
+        conductance, capacitance: matrices between the unknown nodes, (U, U, N).
+        pull_g, pull_c: how the drive enters the residual through conductances and capacitances, (U, N).
+        output: weights of the nodes in the output, (U,).
+    """
+
+    conductance: Array
+    capacitance: Array
+    pull_g: Array
+    pull_c: Array
+    output: Array
+
+    def take(self, columns: Pick) -> Transfer:
+        """Return the transfer functions of some of the designs."""
+        return Transfer(
+            self.conductance[..., columns],
+            self.capacitance[..., columns],
+            self.pull_g[:, columns],
+            self.pull_c[:, columns],
+            self.output,
+        )
+
+    def at(self, w: Array) -> NDArray[np.complex128]:
+        """Return H at angular frequencies [rad/s] of shape (N,)."""
+        matrix = self.conductance + 1j * w * self.capacitance
+        response = solve(matrix, -(self.pull_g + 1j * w * self.pull_c)[:, None])[:, 0]
+        return self.output @ response
+
+    @cached_property
+    def rest(self) -> Array:
+        """|H(0)|^2, (N,)."""
+        response = solve(self.conductance, -self.pull_g[:, None])[:, 0]
+        return (self.output @ response) ** 2
+
+    def fall(self, log_w: Array) -> Array:
+        """Return ln(|H(0)/H(w)|^2 - 1) at a logarithmic frequency: 2 ln(w/wp) exactly for a single pole."""
+        h = self.at(np.exp(log_w))
+        with np.errstate(all="ignore"):
+            return np.log(np.maximum(self.rest / (h.real**2 + h.imag**2) - 1.0, 1e-12))
+
+
+CROSSING_STEPS = 12
+CROSSING_DONE = 1e-7  # of the logarithmic frequency
+
+
+def crossing(transfer: Transfer, level: Array, start: Array) -> Array:
+    """Return the angular frequency at which a transfer has fallen to a given level.
+
+    The secant method on the logarithm of the frequency, where the fall is close to a straight line of slope two; the
+    few designs where that does not settle are searched on a grid of frequencies.
+
+    Args:
+        transfer: of N designs.
+        level: |H(0)/H|^2 - 1 at the crossing, (N,): 1 for -3 dB, |H(0)|^2 - 1 for unity gain; must be positive.
+        start: first estimate of the angular frequency, (N,).
+
+    Returns:
+        Angular frequency [rad/s], (N,); not a number where there is no crossing.
+    """
+    target = np.log(level)
+    result = np.full(len(level), np.nan)
+    active: NDArray[np.intp] = np.arange(len(level))
+    part, x0 = transfer, np.log(start)
+    f0 = part.fall(x0) - target
+    x1 = x0 - np.clip(0.5 * f0, -3.0, 3.0)
+    for _ in range(CROSSING_STEPS):
+        f1 = part.fall(x1) - target[active]
+        with np.errstate(all="ignore"):
+            slope = (f1 - f0) / (x1 - x0)
+        # A slope far from that of one to four poles says that the points are too near or not on the fall.
+        slope = np.where((slope > 0.3) & (slope < 12.0), slope, 2.0)
+        step = np.clip(-f1 / slope, -2.0, 2.0)
+        x0, f0, x1 = x1, f1, x1 + step
+        done = np.abs(step) < CROSSING_DONE
+        if done.all() or 3 * np.count_nonzero(done) > len(done):
+            result[active[done]] = np.exp(x1[done])
+            left = np.flatnonzero(~done)
+            active = active[left]
+            if not len(active):
+                return result
+            part, x0, x1, f0 = part.take(left), x0[left], x1[left], f0[left]
+    result[active] = _searched_crossing(part, target[active], np.log(start[active]))
+    return result
+
+
+def _searched_crossing(transfer: Transfer, target: Array, middle: Array) -> Array:
+    """Return the first crossing on a grid of frequencies around the estimate, refined by bisection; else NaN."""
+    designs = np.arange(len(target))
+    offsets = np.linspace(-7.0, 12.0, 96)
+    above = np.array([transfer.fall(middle + offset) > target for offset in offsets])
+    first = above.argmax(axis=0)
+    exists = above.any(axis=0) & (first > 0)
+    high = middle + offsets[first]
+    low = middle + offsets[np.maximum(first - 1, 0)]
+    for _ in range(40):
+        centre = 0.5 * (low + high)
+        fallen = transfer.fall(centre) > target
+        low, high = np.where(fallen, low, centre), np.where(fallen, centre, high)
+    return np.where(exists[designs], np.exp(high), np.nan)
