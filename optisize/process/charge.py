@@ -44,50 +44,63 @@ class ChargeParameters(TransistorParameters):
 
 @dataclass(frozen=True)
 class _Channel:
-    """Pinch-off and inversion of T transistors in N designs, shared by current, saturation and capacitances."""
+    """Pinch-off and inversion of T transistors in N designs; `u` and `s` are (2, T, N), source end first.
+
+    Attributes:
+        vp: pinch-off voltage [V].
+        root: the square root in it [V^0.5].
+        slope: d vp / d vg, the inverse of the slope factor.
+        u: ln(1 + exp(v / 2 ut)) of either end.
+        s: its derivative, times 2 ut.
+    """
 
     vp: Array
     root: Array
     slope: Array
-    uf: Array
-    ur: Array
-    sf: Array
-    sr: Array
+    u: Array
+    s: Array
 
 
 @dataclass(frozen=True)
 class ChargeLaw:
     """The charge law of T transistors in N designs; every array is (T, N) or broadcasts to it."""
 
-    beta: Array
+    strength: Array  # 2 beta ut^2
     threshold: Array
     body_effect: Array
-    root_phi: Array
+    body_half: Array
+    root_start: Array  # sqrt(phi) + gamma / 2
     root_floor: Array
     early: Array
-    vertical_field: Array
-    velocity: Array
+    field_half: Array
+    velocity2: Array
     oxide: Array
     overlap: Array
     ut: Array
+    delta2: Array
+    unmodulated: Array
 
     @classmethod
     def bind(cls, parameters: Mapping[str, Array], width: Array, length: Array, ut: Array) -> Self:
         """Build the law for widths and lengths [m] of shape (T, N) at thermal voltage `ut` [V]."""
         gamma = parameters["body_effect"]
+        early = 1.0 / (parameters["early_voltage"] * length)
         return cls(
-            beta=parameters["current_factor"] * width / length,
+            strength=2.0 * ut**2 * parameters["current_factor"] * width / length,
             threshold=parameters["threshold"],
             body_effect=gamma,
-            root_phi=np.sqrt(parameters["surface_potential"]) + 0.5 * gamma,
-            # Far below threshold the square root is held where the slope factor reaches 3; no current flows there.
+            body_half=0.5 * gamma,
+            root_start=np.sqrt(parameters["surface_potential"]) + 0.5 * gamma,
+            # Far below threshold the root is held where the slope factor reaches 3; no current flows there.
             root_floor=np.maximum(0.75 * gamma, 0.01) ** 2,
-            early=1.0 / (parameters["early_voltage"] * length),
-            vertical_field=0.5 * parameters["vertical_field"],
-            velocity=2.0 * ut / (parameters["critical_field"] * length),
+            early=early,
+            field_half=0.5 * parameters["vertical_field"],
+            velocity2=(2.0 * ut / (parameters["critical_field"] * length)) ** 2,
             oxide=parameters["oxide_capacitance"] * width * length,
             overlap=parameters["overlap_capacitance"] * width,
             ut=ut,
+            delta2=(4.0 * ut) ** 2,
+            unmodulated=1.0 - early * 4.0 * ut,
         )
 
     def take(self, rows: Pick, columns: Pick) -> Self:
@@ -97,61 +110,72 @@ class ChargeLaw:
     def _channel(self, vg: Array, vd: Array, vs: Array) -> _Channel:
         """Return the inversion of both ends of the channel at bulk-referenced voltages [V]."""
         drive = vg - self.threshold
-        root = np.sqrt(np.maximum(drive + self.root_phi**2, self.root_floor))
-        vp = drive - self.body_effect * (root - self.root_phi)
-        slope = 1.0 - 0.5 * self.body_effect / root
-        scale = 0.5 / self.ut
-        ef = np.exp(np.minimum((vp - vs) * scale, _EXPONENT_MAX))
-        er = np.exp(np.minimum((vp - vd) * scale, _EXPONENT_MAX))
-        ef1, er1 = ef + 1.0, er + 1.0
-        return _Channel(vp, root, slope, np.log(ef1), np.log(er1), ef / ef1, er / er1)
+        root = np.sqrt(np.maximum(drive + self.root_start**2, self.root_floor))
+        vp = drive - self.body_effect * (root - self.root_start)
+        ends = np.empty((2, *vp.shape))
+        np.subtract(vp, vs, out=ends[0])
+        np.subtract(vp, vd, out=ends[1])
+        ends *= 0.5 / self.ut
+        grown = np.exp(np.minimum(ends, _EXPONENT_MAX, out=ends), out=ends)
+        above = grown + 1.0
+        return _Channel(vp, root, 1.0 - self.body_half / root, np.log(above), grown / above)
+
+    def _drain(self, c: _Channel, vds: Array) -> Drain:
+        """Return current and derivatives of a channel."""
+        smooth_vds = np.sqrt(vds * vds + self.delta2)
+        modulation = self.unmodulated + self.early * smooth_vds
+        smooth_vp = np.sqrt(c.vp * c.vp + self.delta2)
+        positive_vp = c.vp + smooth_vp
+        field = 1.0 + self.field_half * positive_vp
+        gap = c.u[0] - c.u[1]
+        pull = self.velocity2 * gap
+        drag2 = 1.0 + pull * gap
+        # per_charge * (u_f^2 - u_r^2) is the current
+        per_charge = self.strength * modulation / (c.slope * field * np.sqrt(drag2))
+        current = per_charge * gap * (c.u[0] + c.u[1])
+        half_ut = 0.5 / self.ut
+        by_end = (2.0 * half_ut) * per_charge * c.u
+        by_end -= current * pull * half_ut / drag2
+        by_end *= c.s
+        by_vds = self.early * current * vds / (smooth_vds * modulation)
+        # d ln n / d vg, and d ln V / d vg
+        bend = 0.5 * self.body_half / (c.root * c.root * c.root * c.slope)
+        by_field = self.field_half * positive_vp * c.slope / (smooth_vp * field)
+        gm = (by_end[0] - by_end[1]) * c.slope - current * (bend + by_field)
+        return Drain(id=current, gm=gm, gds=by_end[1] + by_vds, gms=by_end[0] + by_vds)
+
+    def _saturation(self, c: _Channel) -> Saturation:
+        return Saturation(
+            vdsat=2.0 * self.ut * c.u[0] + 4.0 * self.ut,
+            by_gate=c.s[0] * c.slope,
+            by_source=-c.s[0],
+            inversion=c.u[0] * c.u[0],
+        )
 
     def drain(self, vg: Array, vd: Array, vs: Array) -> Drain:
         """Return current and derivatives at the terminal voltages [V], all of shape (T, N)."""
-        c = self._channel(vg, vd, vs)
-        vds, delta = vd - vs, 4.0 * self.ut
-        smooth_vds = np.sqrt(vds * vds + delta * delta)
-        modulation = 1.0 + self.early * (smooth_vds - delta)
-        smooth_vp = np.sqrt(c.vp * c.vp + delta * delta)
-        field = 1.0 + self.vertical_field * (c.vp + smooth_vp)
-        gap = c.uf - c.ur
-        pull = self.velocity * self.velocity * gap
-        drag2 = 1.0 + pull * gap
-        # per_charge * (uf^2 - ur^2) is the current
-        per_charge = 2.0 * self.beta * self.ut**2 * modulation / (c.slope * field * np.sqrt(drag2))
-        current = per_charge * gap * (c.uf + c.ur)
-        # Derivatives of uf (ur) with respect to the pinch-off voltage: sf (sr) / 2 ut.
-        drag_slope = current * pull / drag2
-        by_source = (2.0 * per_charge * c.uf - drag_slope) * c.sf * (0.5 / self.ut)
-        by_drain = (2.0 * per_charge * c.ur - drag_slope) * c.sr * (0.5 / self.ut)
-        by_vds = current * self.early * vds / (smooth_vds * modulation)
-        # n'/n with n = 1/slope: a half gamma over 2 root^3 and slope; held at the floor of the root
-        bend = np.where(c.root * c.root > self.root_floor, 0.25 * self.body_effect / (c.root**3 * c.slope), 0.0)
-        by_field = self.vertical_field * (1.0 + c.vp / smooth_vp) * c.slope / field
-        gm = (by_source - by_drain) * c.slope - current * (bend + by_field)
-        return Drain(id=current, gm=gm, gds=by_drain + by_vds, gms=by_source + by_vds)
+        return self._drain(self._channel(vg, vd, vs), vd - vs)
 
     def saturation(self, vg: Array, vd: Array, vs: Array) -> Saturation:
         """Return vdsat = 2 ut sqrt(if) + 4 ut and the forward inversion level if."""
+        return self._saturation(self._channel(vg, vd, vs))
+
+    def drain_and_saturation(self, vg: Array, vd: Array, vs: Array) -> tuple[Drain, Saturation]:
+        """Return both at once, for less than one after the other."""
         c = self._channel(vg, vd, vs)
-        return Saturation(
-            vdsat=2.0 * self.ut * c.uf + 4.0 * self.ut,
-            by_gate=c.sf * c.slope,
-            by_source=-c.sf,
-            inversion=c.uf * c.uf,
-        )
+        return self._drain(c, vd - vs), self._saturation(c)
 
     def capacitances(self, vg: Array, vd: Array, vs: Array) -> Capacitances:
         """Return gate capacitances [F]: the charge expressions of the same authors (value from memory).
 
-        With xf, xr = sqrt(1/4 + if, ir): cgs = 2/3 (1 - (xr^2 + xr + xf/2) / (xf + xr)^2), cgd with the roles turned,
-        cgb = (n - 1)/n (1 - cgs - cgd), all times the oxide capacitance.
+        With xf, xr = sqrt(1/4 + if, ir): cgs = 2/3 (1 - (xr^2 + xr + xf/2) / (xf + xr)^2), cgd with the roles
+        turned, cgb = (n - 1)/n (1 - cgs - cgd), all times the oxide capacitance.
         """
         c = self._channel(vg, vd, vs)
-        xf, xr = np.sqrt(0.25 + c.uf**2), np.sqrt(0.25 + c.ur**2)
+        xf, xr = np.sqrt(0.25 + c.u * c.u)
         total2 = (xf + xr) ** 2
-        source = 2.0 / 3.0 * (1.0 - (xr**2 + xr + 0.5 * xf) / total2)
-        drain = 2.0 / 3.0 * (1.0 - (xf**2 + xf + 0.5 * xr) / total2)
+        source = 2.0 / 3.0 * (1.0 - (xr * xr + xr + 0.5 * xf) / total2)
+        drain = 2.0 / 3.0 * (1.0 - (xf * xf + xf + 0.5 * xr) / total2)
         bulk = (1.0 - c.slope) * (1.0 - source - drain)
         return Capacitances(
             cgs=self.oxide * source + self.overlap,
@@ -161,20 +185,20 @@ class ChargeLaw:
 
     def _needed_inversion(self, current: Array) -> Array:
         """Return vp - vs [V] at which a saturated device carries `current`, without second-order effects."""
-        u = np.sqrt(current / (2.5 * self.beta * self.ut**2))  # slope factor of about 1.25
+        u = np.sqrt(current / (1.25 * self.strength))  # slope factor of about 1.25
         needed: Array = 2.0 * self.ut * np.log(np.expm1(np.clip(u, 1e-12, _EXPONENT_MAX)))
         return needed
 
     def gate_voltage(self, current: Array, vs: Array) -> Array:
         """Estimate the gate voltage at which a saturated device carries `current`; a start for Newton."""
         vp = self._needed_inversion(current) + vs
-        root_phi = self.root_phi - 0.5 * self.body_effect
+        root_phi = self.root_start - self.body_half
         root = np.sqrt(np.maximum(root_phi**2 + vp, 0.0))
         return self.threshold + vp + self.body_effect * (root - root_phi)
 
     def source_voltage(self, current: Array, vg: Array) -> Array:
         """Estimate the source voltage at which a saturated device carries `current`; a start for Newton."""
         drive = vg - self.threshold
-        root = np.sqrt(np.maximum(drive + self.root_phi**2, self.root_floor))
-        vp = drive - self.body_effect * (root - self.root_phi)
+        root = np.sqrt(np.maximum(drive + self.root_start**2, self.root_floor))
+        vp = drive - self.body_effect * (root - self.root_start)
         return vp - self._needed_inversion(current)

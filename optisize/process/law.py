@@ -78,6 +78,9 @@ class Law(Protocol):
     def saturation(self, vg: Array, vd: Array, vs: Array) -> Saturation:
         """Return the saturation voltage and the inversion level at the terminal voltages [V]."""
 
+    def drain_and_saturation(self, vg: Array, vd: Array, vs: Array) -> tuple[Drain, Saturation]:
+        """Return both at once, sharing what they share."""
+
     def capacitances(self, vg: Array, vd: Array, vs: Array) -> Capacitances:
         """Return the gate capacitances at the terminal voltages [V]."""
 

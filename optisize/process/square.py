@@ -107,6 +107,10 @@ class SquareLaw:
             inversion=(vov / (2.0 * slope_factor * self.ut)) ** 2,
         )
 
+    def drain_and_saturation(self, vg: Array, vd: Array, vs: Array) -> tuple[Drain, Saturation]:
+        """Return both at once."""
+        return self.drain(vg, vd, vs), self.saturation(vg, vd, vs)
+
     def capacitances(self, vg: Array, vd: Array, vs: Array) -> Capacitances:
         """Return gate capacitances [F] of a conducting device.
 

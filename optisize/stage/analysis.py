@@ -99,7 +99,7 @@ class Analysis:
     @cached_property
     def responses(self) -> Array:
         """How the unknown nodes move with the two drives, (U, 2, N)."""
-        return solve(self.matrix, -self.pulls)
+        return solve(self.matrix, -self.pulls, self.wiring.conductance_pattern)
 
     @cached_property
     def adm(self) -> Array:
@@ -174,7 +174,7 @@ class Analysis:
             output[w.index[node]] = sign
         stamp = np.einsum("uae,a->ue", w.capacitance_stamp, self.drives[:, 0])
         pull_c = stamp @ self.capacitance_branches
-        return Transfer(self.matrix, self.capacitance_matrix, self.pulls[:, 0], pull_c, output)
+        return Transfer(self.matrix, self.capacitance_matrix, self.pulls[:, 0], pull_c, output, w.pattern)
 
     def gain_crossing(self, level: Array) -> Array:
         """Return the frequency [Hz] at which |Adm(0)/Adm(f)|^2 - 1 has risen to `level`, (N,).
@@ -194,7 +194,7 @@ class Analysis:
         """First-moment estimate of the dominant pole [rad/s], (N,)."""
         w = self.wiring
         moved = np.einsum("uvn,vn->un", self.capacitance_matrix, self.responses[:, 0])
-        moment = w.output(solve(self.matrix, moved[:, None])[:, 0])
+        moment = w.output(solve(self.matrix, moved[:, None], w.conductance_pattern)[:, 0])
         return np.abs(self.adm) / np.maximum(np.abs(moment), 1e-30)
 
     @cached_property

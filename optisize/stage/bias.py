@@ -116,7 +116,7 @@ def newton_step(circuit: Circuit, v: Array) -> Array:
     drain = circuit.law.drain(*circuit.terminals(v))
     matrix = circuit.jacobian(drain)
     matrix[np.arange(unknowns), np.arange(unknowns)] += LEAK
-    step = solve(matrix, -circuit.residual(v, drain)[:, None])[:, 0]
+    step = solve(matrix, -circuit.residual(v, drain)[:, None], circuit.wiring.conductance_pattern)[:, 0]
     size = np.abs(step).max(axis=0)
     bad = ~np.isfinite(size)
     if bad.any():

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from optisize.process.card import Process
 from optisize.process.law import Array, Drain, Law, Pick, taken
 from optisize.stage.layout import Drawn, draw_transistors, resistor_area, resistor_length
+from optisize.stage.linear import Pattern
 from optisize.stage.topology import DRIVEN, Topology
 
 Indices = NDArray[np.intp]
@@ -99,6 +100,25 @@ class Wiring:
         return np.ascontiguousarray(self.conductance_stamp[:, :u].reshape(u * u, -1))
 
     @cached_property
+    def conductance_pattern(self) -> Pattern:
+        """Which elements of the conductance matrix between unknown nodes may differ from zero."""
+        return _pattern(self.conductance_stamp[:, : self.unknowns])
+
+    @cached_property
+    def pattern(self) -> Pattern:
+        """Which elements of the conductance or the capacitance matrix may differ from zero."""
+        both = np.concatenate([self.conductance_stamp, self.capacitance_stamp], axis=2)
+        return _pattern(both[:, : self.unknowns])
+
+    @cached_property
+    def terminal_stamp(self) -> Array:
+        """(3T, A): gate, drain and source voltages relative to the bulk in n-channel sense, from node voltages."""
+        unit = np.eye(len(self.nodes))
+        return np.concatenate(
+            [(unit[x] - unit[self.bulk]) * self.polarity for x in (self.gate, self.drain, self.source)]
+        )
+
+    @cached_property
     def saturating(self) -> Indices:
         """The rows of the transistors that have to be saturated."""
         return np.array([i for i, x in enumerate(self.topology.transistors) if x.saturates], dtype=np.intp)
@@ -120,6 +140,10 @@ class Wiring:
         """Return the output of node voltages (A, ...) as a combination of its nodes."""
         parts = [sign * voltages[self.index[node]] for node, sign in self.topology.output]
         return parts[0] if len(parts) == 1 else parts[0] + parts[1]
+
+
+def _pattern(stamp: Array) -> Pattern:
+    return tuple(tuple(bool(x) for x in row) for row in np.any(stamp != 0.0, axis=2))
 
 
 def _stamp_two_terminal(matrix: Array, a: int, b: int, value: float = 1.0) -> None:
@@ -226,9 +250,9 @@ class Circuit:
     def terminals(self, v: Array) -> tuple[Array, Array, Array]:
         """Return gate, drain and source voltages relative to the bulk, in n-channel sense, each (T, ...)."""
         w = self.wiring
-        polarity = w.polarity.reshape((-1,) + (1,) * (v.ndim - 1))
-        bulk = v[w.bulk]
-        return (v[w.gate] - bulk) * polarity, (v[w.drain] - bulk) * polarity, (v[w.source] - bulk) * polarity
+        stacked = w.terminal_stamp @ v.reshape(v.shape[0], -1)
+        gate, drain, source = stacked.reshape(3, -1, *v.shape[1:])
+        return gate, drain, source
 
     def branch_currents(self, v: Array, drain: Drain) -> Array:
         """Return the currents of all branches (T + R + S, N), from drain to source and from a to b."""

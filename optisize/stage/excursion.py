@@ -18,8 +18,8 @@ from optisize.stage.linear import solve
 
 STEERED = 0.01  # the part of the pair's current below which an input transistor counts as off
 ITERATIONS = 25
-STEP_LIMIT = 0.3  # V, of any node in one step
-SETTLED = 1e-6  # V, movement of any node after which the end is found
+STEP_LIMIT = 0.6  # V, of any node in one step
+SETTLED = 1e-4  # V; the step after which the next one would be a thousandth of it (convergence is quadratic)
 
 
 @dataclass(frozen=True)
@@ -70,7 +70,7 @@ def _step(circuit: Circuit, v: Array, amplitude: Array, drive: Array, sign: Arra
     """Move node voltages and amplitude in place by one damped step; return which designs have settled, (N,)."""
     unknowns = circuit.wiring.unknowns
     terminals = circuit.terminals(v)
-    drain, saturation = circuit.law.drain(*terminals), circuit.law.saturation(*terminals)
+    drain, saturation = circuit.law.drain_and_saturation(*terminals)
     toward = _responses(circuit, v, drain, drive, sign)
     margin, settle, rise = _margins(circuit, terminals, drain, saturation, toward)
     step = np.maximum(_amplitude_step(margin + settle, rise), -amplitude)
@@ -93,7 +93,7 @@ def _responses(circuit: Circuit, v: Array, drain: Drain, drive: Array, sign: Arr
     pull = circuit.driven_slopes(drain, drive[:, None])[:, 0] * sign
     right = -np.stack([circuit.residual(v, drain), pull], axis=1)
     toward = np.zeros((v.shape[0], 2, v.shape[1]))
-    toward[:unknowns] = solve(matrix, right)
+    toward[:unknowns] = solve(matrix, right, circuit.wiring.conductance_pattern)
     toward[unknowns:, 1] = drive[unknowns:, None] * sign
     return toward
 

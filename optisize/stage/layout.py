@@ -19,6 +19,13 @@ def steps(length: Array, step: float) -> Array:
     return np.rint(np.asarray(length) / step)
 
 
+def on_grid(count: Array, step: float) -> Array:
+    """Return whole grid steps as a length [m]; dividing by a whole number keeps decimal lengths exact (0.18 um)."""
+    per_metre = 1.0 / step
+    whole = np.rint(per_metre)
+    return count / whole if abs(per_metre - whole) < 1e-6 * per_metre else count * step
+
+
 def finger_count(width: Array, grid: Grid, even: bool) -> Array:
     """Return how many fingers a width is drawn with: as few as the widest finger allows, even where asked.
 
@@ -42,14 +49,14 @@ def snap_width(width: Array, grid: Grid, even: bool) -> Array:
     for _ in range(2):
         fingers = finger_count(width, grid, even)
         finger_steps = np.maximum(np.rint(steps(width, grid.step) / fingers), narrowest)
-        width = fingers * finger_steps * grid.step
+        width = on_grid(fingers * finger_steps, grid.step)
     return width
 
 
 def snap_length(length: Array, grid: Grid) -> Array:
     """Return the nearest channel length on the grid."""
     shortest = np.ceil(grid.minimum_length / grid.step - 1e-9)
-    return np.maximum(steps(length, grid.step), shortest) * grid.step
+    return on_grid(np.maximum(steps(length, grid.step), shortest), grid.step)
 
 
 def snap_resistance(resistance: Array, resistor: ResistorParameters, grid: Grid) -> Array:

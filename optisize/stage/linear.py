@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 from typing import Any
 
 import numpy as np
@@ -11,32 +11,75 @@ from numpy.typing import NDArray
 
 from optisize.process.law import Array, Pick
 
+Pattern = tuple[tuple[bool, ...], ...]
 
-def solve(matrix: NDArray[Any], right: NDArray[Any]) -> NDArray[Any]:
-    """Solve N small systems at once by elimination without exchange of rows.
 
-    Nodal matrices of transistor stages are eliminated in their own order: each diagonal is the sum of the conductances
-    at its node. A column whose pivot vanishes comes out as not finite; the caller flags it.
+@dataclass(frozen=True)
+class Elimination:
+    """The order and the steps of eliminating matrices of one sparsity: worked out once, followed for every batch.
+
+    Attributes:
+        order: the unknowns in the order of their elimination, fewest neighbours first.
+        steps: for each of them, the later rows it enters and the later columns it has, fill-in included.
+    """
+
+    order: tuple[int, ...]
+    steps: tuple[tuple[tuple[int, ...], tuple[int, ...]], ...]
+
+
+@lru_cache(maxsize=256)
+def elimination(pattern: Pattern) -> Elimination:
+    """Plan the elimination of matrices whose nonzero elements are known.
 
     Args:
-        matrix: (U, U, N), real or complex.
-        right: (U, K, N).
+        pattern: (U, U), which elements may differ from zero.
+    """
+    filled = np.array(pattern, dtype=bool)
+    left = list(range(len(pattern)))
+    order, steps = [], []
+    while left:
+        k = min(left, key=lambda i: (filled[left, i].sum() - 1) * (filled[i, left].sum() - 1))
+        left.remove(k)
+        rows = tuple(i for i in left if filled[i, k])
+        columns = tuple(j for j in left if filled[k, j])
+        filled[np.ix_(rows, columns)] = True
+        order.append(k)
+        steps.append((rows, columns))
+    return Elimination(tuple(order), tuple(steps))
+
+
+def solve(matrix: NDArray[Any], right: NDArray[Any], pattern: Pattern | None = None) -> NDArray[Any]:
+    """Solve N small systems at once by elimination without exchange of rows.
+
+    Nodal matrices of transistor stages need none: each diagonal is the sum of the conductances at its node. A design
+    whose pivot vanishes comes out as not finite; the caller flags it.
+
+    Args:
+        matrix: (U, U, N), real or complex; not changed.
+        right: (U, K, N); not changed.
+        pattern: which elements of the matrix may differ from zero; all where None.
 
     Returns:
         The solutions, (U, K, N).
     """
     size = matrix.shape[0]
-    work = np.concatenate([matrix, right], axis=1)
+    plan = elimination(pattern if pattern is not None else ((True,) * size,) * size)
+    element = [list(row) for row in matrix]
+    known = list(right)
+    inverse: dict[int, NDArray[Any]] = {}
     with np.errstate(all="ignore"):
-        for k in range(size - 1):
-            factor = work[k + 1 :, k] / work[k, k]
-            work[k + 1 :, k + 1 :] -= factor[:, None] * work[k, k + 1 :]
-        solution = work[:, size:]
-        for k in range(size - 1, -1, -1):
-            if k < size - 1:
-                solution[k] -= (work[k, k + 1 : size, None] * solution[k + 1 :]).sum(axis=0)
-            solution[k] /= work[k, k]
-    return solution
+        for k, (rows, columns) in zip(plan.order, plan.steps, strict=True):
+            inverse[k] = 1.0 / element[k][k]
+            for i in rows:
+                factor = element[i][k] * inverse[k]
+                for j in columns:
+                    element[i][j] = element[i][j] - factor * element[k][j]
+                known[i] = known[i] - factor * known[k]
+        for k, (_, columns) in zip(reversed(plan.order), reversed(plan.steps), strict=True):
+            for j in columns:
+                known[k] = known[k] - element[k][j] * known[j]
+            known[k] = known[k] * inverse[k]
+    return np.array(known)
 
 
 @dataclass(frozen=True)
@@ -47,6 +90,7 @@ class Transfer:
         conductance, capacitance: matrices between the unknown nodes, (U, U, N).
         pull_g, pull_c: how the drive enters the residual through conductances and capacitances, (U, N).
         output: weights of the nodes in the output, (U,).
+        pattern: which elements of the matrices may differ from zero; all where None.
     """
 
     conductance: Array
@@ -54,6 +98,7 @@ class Transfer:
     pull_g: Array
     pull_c: Array
     output: Array
+    pattern: Pattern | None = None
 
     def take(self, columns: Pick) -> Transfer:
         """Return the transfer functions of some of the designs."""
@@ -63,18 +108,19 @@ class Transfer:
             self.pull_g[:, columns],
             self.pull_c[:, columns],
             self.output,
+            self.pattern,
         )
 
     def at(self, w: Array) -> NDArray[np.complex128]:
         """Return H at angular frequencies [rad/s] of shape (N,)."""
         matrix = self.conductance + 1j * w * self.capacitance
-        response = solve(matrix, -(self.pull_g + 1j * w * self.pull_c)[:, None])[:, 0]
+        response = solve(matrix, -(self.pull_g + 1j * w * self.pull_c)[:, None], self.pattern)[:, 0]
         return self.output @ response
 
     @cached_property
     def rest(self) -> Array:
         """|H(0)|^2, (N,)."""
-        response = solve(self.conductance, -self.pull_g[:, None])[:, 0]
+        response = solve(self.conductance, -self.pull_g[:, None], self.pattern)[:, 0]
         return (self.output @ response) ** 2
 
     def fall(self, log_w: Array) -> Array:

@@ -1,0 +1,174 @@
+"""From a problem file to a problem: every key checked against the stage and the process, with one clear message."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from optisize.errors import InputError, listing, nearest, shorten
+from optisize.files import read_bytes, read_toml, validated
+from optisize.problem.evaluate import Goal, Limit, Problem
+from optisize.problem.schema import ProblemFile, SizingFile, flatten, read_size
+from optisize.problem.space import SizeRange, SizingSpace
+from optisize.process.card import Process, load_process, process_hash
+from optisize.process.law import Array
+from optisize.quantities import QuantityError, read, write
+from optisize.stage.circuit import Conditions
+from optisize.stage.measures import find
+from optisize.stage.topology import Size, Topology, build
+
+
+def load_problem(path: str | Path) -> Problem:
+    """Read a problem file.
+
+    Raises InputError for anything in it that is wrong.
+    """
+    path = Path(path)
+    data = read_toml(path)
+    file = validated(ProblemFile, data, str(path))
+    try:
+        process = load_process(file.process, path.parent)
+        topology = build(**file.stage.model_dump())
+        process.corner(file.conditions.corner)
+        conditions = Conditions(**file.conditions.model_dump())
+        _check_conditions(conditions)
+        space = SizingSpace(topology, process, _ranges(file.sizes, topology, process))
+        goals = _goals(file.goals, topology)
+        limits = _limits(file.limits, topology)
+        if not space.dimensions:
+            raise InputError("sizes: every size is fixed; free one by giving it two values, or use assess")
+    except InputError as error:
+        text = str(error)
+        raise InputError(text if text.startswith(str(path)) else f"{path}: {text}") from None
+    return Problem(
+        title=file.title,
+        process_name=file.process,
+        process=process,
+        topology=topology,
+        conditions=conditions,
+        space=space,
+        goals=goals,
+        limits=limits,
+        settings=file.search,
+        text=read_bytes(path).decode("utf-8"),
+        hashes={
+            "problem": hashlib.sha256(read_bytes(path)).hexdigest(),
+            "process": process_hash(file.process, path.parent),
+        },
+    )
+
+
+def load_sizing(path: str | Path, problem: Problem) -> dict[str, Array]:
+    """Read a manual sizing for a problem's stage: every size (1,) in SI units, snapped to the grid.
+
+    Raises InputError.
+    """
+    path = Path(path)
+    file = validated(SizingFile, read_toml(path), str(path))
+    try:
+        ranges = _ranges(file.sizes, problem.topology, problem.process)
+    except InputError as error:
+        raise InputError(f"{path}: {error}") from None
+    for r in ranges:
+        if r.free:
+            raise InputError(f"{path}: sizes.{r.size.name}: a range, but one value is needed")
+    return problem.space.snapped({r.size.name: np.array([r.low]) for r in ranges})
+
+
+def _check_conditions(conditions: Conditions) -> None:
+    low, high = conditions.common_mode
+    if low < 0.0 or high > conditions.supply:
+        raise InputError(
+            f"conditions.common_mode: found {write(low, 'V')} to {write(high, 'V')}; it must lie between the rails, "
+            f"0 V and {write(conditions.supply, 'V')}"
+        )
+
+
+def _ranges(table: Mapping[str, Any], topology: Topology, process: Process) -> tuple[SizeRange, ...]:
+    """Return the range of every size of the stage, in the stage's order."""
+    given = flatten(table, lambda value: False)
+    known = {size.name: size for size in topology.sizes}
+    for name in given:
+        if name not in known:
+            kind = f"input {topology.input}, load {topology.load}, tail {topology.tail}"
+            raise InputError(
+                f"sizes.{name}: no size of this stage ({kind}); its sizes are {listing(known)}{nearest(name, known)}"
+            )
+    missing = [name for name in known if name not in given]
+    if missing:
+        raise InputError(f"sizes.{missing[0]}: is missing; every size of the stage needs a value or a range")
+    return tuple(_range(size, given[size.name], topology, process) for size in topology.sizes)
+
+
+def _range(size: Size, value: object, topology: Topology, process: Process) -> SizeRange:
+    try:
+        low, high = read_size(value, size.unit)
+    except QuantityError as error:
+        raise InputError(f"sizes.{size.name}: {error}") from None
+    smallest, largest = _drawable(size, topology, process)
+    if low < smallest * (1 - 1e-9) or high > largest * (1 + 1e-9):
+        raise InputError(
+            f"sizes.{size.name}: found {shorten(value)}; the process can draw "
+            f"{write(smallest, size.unit)} to {write(largest, size.unit)}"
+        )
+    if size.kind == "count" and (low != round(low) or high != round(high)):
+        raise InputError(f"sizes.{size.name}: found {shorten(value)}; whole numbers are needed")
+    return SizeRange(size, low, high)
+
+
+def _drawable(size: Size, topology: Topology, process: Process) -> tuple[float, float]:
+    """Return the smallest and the largest value of a size that the process can draw."""
+    grid = process.grid
+    if size.kind == "length":
+        return grid.minimum_length, grid.maximum_length
+    if size.kind == "width":
+        group = size.name.split(".")[0]
+        even = any(t.even_fingers for t in topology.transistors if t.group == group)
+        return grid.minimum_width * (2.0 if even else 1.0), 1e-1
+    if size.kind == "resistance":
+        return process.resistor.sheet_resistance * grid.step / process.resistor.width, 1e12
+    return (1.0, 1e5) if size.kind == "count" else (1e-12, 10.0)
+
+
+def _goals(table: Mapping[str, Any], topology: Topology) -> tuple[Goal, ...]:
+    goals = []
+    for name, value in flatten(table, lambda v: False).items():
+        try:
+            measure = find(name, topology)
+        except InputError as error:
+            raise InputError(f"goals.{name}: {error}") from None
+        if value not in ("max", "min"):
+            raise InputError(f'goals.{name}: found {shorten(value)}; allowed are "max" and "min"')
+        goals.append(Goal(measure, value))
+    if not goals:
+        raise InputError("goals: there is none; name at least one measure to trade")
+    return tuple(goals)
+
+
+def _limits(table: Mapping[str, Any], topology: Topology) -> tuple[Limit, ...]:
+    limits = []
+    for name, bounds in flatten(table, lambda v: set(v) <= {"min", "max"} and bool(v)).items():
+        try:
+            measure = find(name, topology)
+        except InputError as error:
+            raise InputError(f"limits.{name}: {error}") from None
+        if not isinstance(bounds, dict):
+            raise InputError(f'limits.{name}: found {shorten(bounds)}; a bound such as {{ min = "…" }} is needed')
+        values = {}
+        for key, value in bounds.items():
+            try:
+                values[key] = read(value, measure.unit)
+            except QuantityError as error:
+                raise InputError(f"limits.{name}.{key}: found {shorten(value)}; {error}") from None
+            if measure.scale == "log" and values[key] <= 0.0:
+                raise InputError(f"limits.{name}.{key}: found {shorten(value)}; a value above zero is needed")
+        if values.get("min", -np.inf) > values.get("max", np.inf):
+            raise InputError(f"limits.{name}: the bounds are inverted: min is above max")
+        limits.append(Limit(measure, values.get("min"), values.get("max")))
+    if not any(limit.measure.name == "headroom" for limit in limits):
+        limits.append(Limit(find("headroom", topology), 0.0, None, implied=True))
+    return tuple(limits)

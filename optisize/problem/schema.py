@@ -1,0 +1,178 @@
+"""The problem file as it stands on disk: tables, types and units; its JSON Schema is the documentation."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Annotated, Any, Literal
+
+from pydantic import BeforeValidator, ConfigDict, Field, JsonValue, WithJsonSchema
+
+from optisize.errors import listing, nearest, shorten
+from optisize.process.parameters import Parameters
+from optisize.quantities import In, QuantityError, read
+from optisize.stage.topology import BULKS, INPUTS, LOADS, OUTPUTS, TAILS, Piece
+
+
+@dataclass(frozen=True)
+class OneOf:
+    """Marks a text of a pydantic model as one of the names of a register."""
+
+    names: tuple[str, ...]
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: Callable[[Any], Any]) -> Any:
+        """Refuse a name that is not in the register, and say which is nearest."""
+        from pydantic_core import core_schema
+
+        return core_schema.no_info_before_validator_function(self._check, handler(source))
+
+    def _check(self, value: object) -> object:
+        if value not in self.names:
+            raise ValueError(f"allowed are {listing(self.names)}{nearest(str(value), self.names)}")
+        return value
+
+    def __get_pydantic_json_schema__(self, schema: Any, handler: Callable[[Any], Any]) -> dict[str, Any]:
+        """List the names."""
+        return {**handler(schema), "enum": list(self.names)}
+
+
+def _read_range(value: object) -> tuple[float, float]:
+    """Read one voltage or a range of two."""
+    parts = value if isinstance(value, list) else [value, value]
+    if len(parts) != 2:
+        raise ValueError("one voltage or a range of two is needed")
+    low, high = (read(part, "V") for part in parts)
+    if low > high:
+        raise ValueError("the range is inverted: its first value must be the lower one")
+    return low, high
+
+
+_QUANTITY = {"anyOf": [{"type": "number"}, {"type": "string"}]}
+_RANGE = {"anyOf": [*_QUANTITY["anyOf"], {"type": "array", "items": _QUANTITY, "minItems": 2, "maxItems": 2}]}
+
+
+def _summaries(kinds: Mapping[str, Piece]) -> str:
+    return "; ".join(f"{name}: {kind.summary}" for name, kind in kinds.items())
+
+
+class StageTable(Parameters):
+    """The circuit: input pair, load, tail and output."""
+
+    input: Annotated[str, OneOf(tuple(INPUTS)), Field(description="channel of the input pair")]
+    load: Annotated[
+        str, OneOf(tuple(LOADS)), Field(description="; ".join(f"{k}: {v.summary}" for k, v in LOADS.items()))
+    ]
+    tail: Annotated[
+        str, OneOf(tuple(TAILS)), Field(description="; ".join(f"{k}: {v.summary}" for k, v in TAILS.items()))
+    ]
+    output: Annotated[
+        str,
+        OneOf(tuple(OUTPUTS)),
+        Field(description="one drain, or the difference of both"),
+    ] = "single-ended"
+    bulk: Annotated[
+        str,
+        OneOf(BULKS),
+        Field(description="bulk of the input pair: at its channel's rail, or tied to the source in a well of its own"),
+    ] = "rail"
+
+
+class ConditionsTable(Parameters):
+    """What the stage is exposed to."""
+
+    supply: Annotated[float, In("V"), Field(gt=0, le=100, description="supply voltage")]
+    common_mode: Annotated[
+        tuple[float, float],
+        BeforeValidator(_read_range),
+        WithJsonSchema(_RANGE),
+        Field(description="common-mode input voltage: a value, or a range that every design must live with"),
+    ]
+    load_capacitance: Annotated[
+        float, In("F"), Field(ge=0, le=1e-3, description="capacitance from each output to ground")
+    ]
+    temperature: Annotated[float, In("K"), Field(gt=150, lt=500, description="temperature")] = 300.15
+    corner: Annotated[str, Field(description="process corner")] = "typical"
+
+
+class SearchTable(Parameters):
+    """How long and from where to search."""
+
+    population: Annotated[int, Field(ge=8, le=20_000, description="designs of a generation")] = 200
+    generations: Annotated[int, Field(ge=1, le=1_000_000, description="generations at the most")] = 200
+    seed: Annotated[int, Field(ge=0, le=2**63 - 1, description="the same seed gives the same front")] = 1
+    patience: Annotated[
+        int,
+        Field(ge=0, description="generations without gain of hypervolume after which the search stops; 0: never"),
+    ] = 60
+
+
+class ProblemFile(Parameters):
+    """A problem: a stage in a process under conditions, its free sizes, its goals and limits."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, title="optisize problem file")
+
+    title: Annotated[str, Field(max_length=200, description="what the stage is for")]
+    process: Annotated[str, Field(description="a built-in process, or the path of a process file")]
+    stage: StageTable
+    conditions: ConditionsTable
+    sizes: Annotated[
+        dict[str, JsonValue],
+        Field(description="every size of the stage: one value fixes it, two values free it between them"),
+    ]
+    goals: Annotated[
+        dict[str, JsonValue],
+        Field(description='measures to trade on the front, each "max" or "min"'),
+    ]
+    limits: Annotated[
+        dict[str, JsonValue],
+        Field(description='bounds on measures: { min = "…" }, { max = "…" } or both', default_factory=dict),
+    ]
+    search: SearchTable = SearchTable()
+
+
+class SizingFile(Parameters):
+    """One sizing by hand: a value for every size of a stage."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, title="optisize sizing file")
+
+    title: Annotated[str, Field(max_length=200, description="what the sizing is")] = ""
+    sizes: Annotated[dict[str, JsonValue], Field(description="one value for every size")]
+
+
+Bound = Literal["min", "max"]
+
+
+def flatten(table: Mapping[str, Any], is_leaf: Callable[[Any], bool], prefix: str = "") -> dict[str, Any]:
+    """Return a nested table with dotted keys: ``{"input": {"width": 1}}`` becomes ``{"input.width": 1}``."""
+    flat: dict[str, Any] = {}
+    for key, value in table.items():
+        name = f"{prefix}{key}"
+        if isinstance(value, dict) and not is_leaf(value):
+            flat.update(flatten(value, is_leaf, f"{name}."))
+        else:
+            flat[name] = value
+    return flat
+
+
+def read_size(value: object, unit: str) -> tuple[float, float]:
+    """Read one value or a range of two.
+
+    Raises QuantityError.
+    """
+    parts = value if isinstance(value, list) else [value, value]
+    if len(parts) != 2:
+        raise QuantityError(f"found {shorten(value)}; one value or a range of two is needed")
+    low, high = (_positive(part, unit) for part in parts)
+    if low > high:
+        raise QuantityError(f"found {shorten(value)}; the range is inverted: its first value must be the lower one")
+    return low, high
+
+
+def _positive(value: object, unit: str) -> float:
+    try:
+        number = read(value, unit)
+    except QuantityError as error:
+        raise QuantityError(f"found {shorten(value)}; {error}") from None
+    if number <= 0.0:
+        raise QuantityError(f"found {shorten(value)}; a value above zero is needed")
+    return number

@@ -1,0 +1,112 @@
+"""The sizing space: which sizes are fixed, which are free, and what can be drawn.
+
+Free sizes are searched on a logarithmic scale as vectors in [0, 1]; every vector stands for a sizing that is snapped
+to the process grid, so that each design can be drawn as it was evaluated.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from optisize.process.card import Process
+from optisize.process.law import Array
+from optisize.stage.layout import snap_length, snap_resistance, snap_width
+from optisize.stage.topology import Size, Topology
+
+CURRENT_DIGITS = 3  # a bias current is set to three significant digits
+
+
+@dataclass(frozen=True)
+class SizeRange:
+    """The values that one size may take: one value where `low` equals `high`."""
+
+    size: Size
+    low: float
+    high: float
+
+    @property
+    def free(self) -> bool:
+        """Whether the size is searched."""
+        return self.high > self.low
+
+
+@dataclass(frozen=True)
+class SizingSpace:
+    """All sizes of a stage with their ranges, on the grid of a process."""
+
+    topology: Topology
+    process: Process
+    ranges: tuple[SizeRange, ...]
+
+    @cached_property
+    def free(self) -> tuple[SizeRange, ...]:
+        """The sizes that are searched, in the order of the vector."""
+        return tuple(r for r in self.ranges if r.free)
+
+    @property
+    def dimensions(self) -> int:
+        """The number of free sizes."""
+        return len(self.free)
+
+    @cached_property
+    def _bounds(self) -> tuple[Array, Array]:
+        """Logarithms of the lowest and highest value of the free sizes, (D, 1)."""
+        low = np.array([[np.log(r.low)] for r in self.free]).reshape(-1, 1)
+        high = np.array([[np.log(r.high)] for r in self.free]).reshape(-1, 1)
+        return low, high
+
+    @cached_property
+    def _even_groups(self) -> frozenset[str]:
+        return frozenset(t.group for t in self.topology.transistors if t.even_fingers)
+
+    def snap(self, size: Size, values: Array) -> Array:
+        """Return the nearest values of one size that can be drawn or set, (N,); snapping twice changes nothing."""
+        grid = self.process.grid
+        if size.kind == "width":
+            return snap_width(values, grid, size.name.split(".")[0] in self._even_groups)
+        if size.kind == "length":
+            return snap_length(values, grid)
+        if size.kind == "resistance":
+            return snap_resistance(values, self.process.resistor, grid)
+        if size.kind == "count":
+            return np.maximum(np.rint(values), 1.0)
+        return round_significant(values, CURRENT_DIGITS)
+
+    def snapped(self, sizes: Mapping[str, Array]) -> dict[str, Array]:
+        """Return every size of a population snapped to what can be drawn, each (N,)."""
+        return {s.name: self.snap(s, np.asarray(sizes[s.name], dtype=float)) for s in self.topology.sizes}
+
+    def decode(self, vectors: Array) -> dict[str, Array]:
+        """Return the sizing of every vector, each size (N,) in SI units and snapped.
+
+        Args:
+            vectors: positions of the free sizes between their bounds on a logarithmic scale, (D, N) in [0, 1].
+        """
+        low, high = self._bounds
+        values = np.exp(low + np.clip(vectors, 0.0, 1.0) * (high - low))
+        count = vectors.shape[1]
+        row = {r.size.name: i for i, r in enumerate(self.free)}
+        sizes = {}
+        for r in self.ranges:
+            name = r.size.name
+            value = np.clip(values[row[name]], r.low, r.high) if name in row else np.full(count, r.low)
+            sizes[name] = self.snap(r.size, value)
+        return sizes
+
+    def encode(self, sizes: Mapping[str, Array]) -> Array:
+        """Return the vectors (D, N) of sizings, each size (N,); values outside the ranges go to their ends."""
+        low, high = self._bounds
+        values = np.array([np.log(np.asarray(sizes[r.size.name], dtype=float)) for r in self.free])
+        return np.clip((values.reshape(len(self.free), -1) - low) / (high - low), 0.0, 1.0)
+
+
+def round_significant(values: Array, digits: int) -> Array:
+    """Return positive values rounded to significant decimal digits."""
+    exponent = digits - 1 - np.floor(np.log10(values)).astype(int)
+    up = 10.0 ** np.maximum(exponent, 0)
+    down = 10.0 ** np.maximum(-exponent, 0)
+    return np.rint(values * up / down) * down / up
