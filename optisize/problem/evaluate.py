@@ -127,6 +127,7 @@ class Problem:
     limits: tuple[Limit, ...]
     settings: SearchTable
     text: str
+    process_text: str
     hashes: Mapping[str, str]
 
     @property

@@ -14,7 +14,7 @@ from optisize.files import read_bytes, read_toml, validated
 from optisize.problem.evaluate import Goal, Limit, Problem
 from optisize.problem.schema import ProblemFile, SizingFile, flatten, read_size
 from optisize.problem.space import SizeRange, SizingSpace
-from optisize.process.card import Process, load_process, process_hash
+from optisize.process.card import Process, load_process, locate_process
 from optisize.process.law import Array
 from optisize.quantities import QuantityError, read, write
 from optisize.stage.circuit import Conditions
@@ -22,8 +22,12 @@ from optisize.stage.measures import find
 from optisize.stage.topology import Size, Topology, build
 
 
-def load_problem(path: str | Path) -> Problem:
+def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
     """Read a problem file.
+
+    Args:
+        path: of the problem file.
+        process_file: the process file to take in place of the one that the problem names.
 
     Raises InputError for anything in it that is wrong.
     """
@@ -31,7 +35,8 @@ def load_problem(path: str | Path) -> Problem:
     data = read_toml(path)
     file = validated(ProblemFile, data, str(path))
     try:
-        process = load_process(file.process, path.parent)
+        source = process_file or locate_process(file.process, path.parent)
+        process = load_process(source)
         topology = build(**file.stage.model_dump())
         process.corner(file.conditions.corner)
         conditions = Conditions(**file.conditions.model_dump())
@@ -55,9 +60,10 @@ def load_problem(path: str | Path) -> Problem:
         limits=limits,
         settings=file.search,
         text=read_bytes(path).decode("utf-8"),
+        process_text=read_bytes(source).decode("utf-8"),
         hashes={
             "problem": hashlib.sha256(read_bytes(path)).hexdigest(),
-            "process": process_hash(file.process, path.parent),
+            "process": hashlib.sha256(read_bytes(source)).hexdigest(),
         },
     )
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Sequence
 from functools import cached_property
 from importlib import resources
@@ -170,15 +169,17 @@ def locate_process(name: str, beside: Path | None = None) -> Path:
     )
 
 
-def load_process(name: str, beside: Path | None = None) -> Process:
-    """Read a built-in process or a process file.
+def load_process(source: str | Path) -> Process:
+    """Read a process file, or a built-in process by name.
 
     Raises InputError for an unknown name or a file that is not a valid process.
     """
-    path = locate_process(name, beside)
+    path = source if isinstance(source, Path) else locate_process(source)
     process = validated(Process, _with_law(read_toml(path), path), str(path))
     if process.grid.minimum_length > process.grid.maximum_length:
         raise InputError(f"{path}: grid.minimum_length is above grid.maximum_length")
+    if process.grid.minimum_width > process.grid.maximum_finger:
+        raise InputError(f"{path}: grid.minimum_width is above grid.maximum_finger")
     return process
 
 
@@ -194,8 +195,3 @@ def _with_law(data: dict[str, Any], path: Path) -> dict[str, Any]:
         if isinstance(data.get(table), dict)
     }
     return {**data, **tables}
-
-
-def process_hash(name: str, beside: Path | None = None) -> str:
-    """Return the SHA-256 of a process file."""
-    return hashlib.sha256(locate_process(name, beside).read_bytes()).hexdigest()

@@ -70,6 +70,7 @@ class ChargeLaw:
     body_effect: Array
     body_half: Array
     root_start: Array  # sqrt(phi) + gamma / 2
+    root_start2: Array
     root_floor: Array
     early: Array
     field_half: Array
@@ -77,6 +78,8 @@ class ChargeLaw:
     oxide: Array
     overlap: Array
     ut: Array
+    per_ut: Array
+    per_two_ut: Array
     delta2: Array
     unmodulated: Array
 
@@ -85,12 +88,14 @@ class ChargeLaw:
         """Build the law for widths and lengths [m] of shape (T, N) at thermal voltage `ut` [V]."""
         gamma = parameters["body_effect"]
         early = 1.0 / (parameters["early_voltage"] * length)
+        root_start = np.sqrt(parameters["surface_potential"]) + 0.5 * gamma
         return cls(
             strength=2.0 * ut**2 * parameters["current_factor"] * width / length,
             threshold=parameters["threshold"],
             body_effect=gamma,
             body_half=0.5 * gamma,
-            root_start=np.sqrt(parameters["surface_potential"]) + 0.5 * gamma,
+            root_start=root_start,
+            root_start2=root_start**2,
             # Far below threshold the root is held where the slope factor reaches 3; no current flows there.
             root_floor=np.maximum(0.75 * gamma, 0.01) ** 2,
             early=early,
@@ -99,6 +104,8 @@ class ChargeLaw:
             oxide=parameters["oxide_capacitance"] * width * length,
             overlap=parameters["overlap_capacitance"] * width,
             ut=ut,
+            per_ut=1.0 / ut,
+            per_two_ut=0.5 / ut,
             delta2=(4.0 * ut) ** 2,
             unmodulated=1.0 - early * 4.0 * ut,
         )
@@ -110,12 +117,12 @@ class ChargeLaw:
     def _channel(self, vg: Array, vd: Array, vs: Array) -> _Channel:
         """Return the inversion of both ends of the channel at bulk-referenced voltages [V]."""
         drive = vg - self.threshold
-        root = np.sqrt(np.maximum(drive + self.root_start**2, self.root_floor))
+        root = np.sqrt(np.maximum(drive + self.root_start2, self.root_floor))
         vp = drive - self.body_effect * (root - self.root_start)
         ends = np.empty((2, *vp.shape))
         np.subtract(vp, vs, out=ends[0])
         np.subtract(vp, vd, out=ends[1])
-        ends *= 0.5 / self.ut
+        ends *= self.per_two_ut
         grown = np.exp(np.minimum(ends, _EXPONENT_MAX, out=ends), out=ends)
         above = grown + 1.0
         return _Channel(vp, root, 1.0 - self.body_half / root, np.log(above), grown / above)
@@ -125,24 +132,24 @@ class ChargeLaw:
         smooth_vds = np.sqrt(vds * vds + self.delta2)
         modulation = self.unmodulated + self.early * smooth_vds
         smooth_vp = np.sqrt(c.vp * c.vp + self.delta2)
-        positive_vp = c.vp + smooth_vp
-        field = 1.0 + self.field_half * positive_vp
+        reduction = self.field_half * (c.vp + smooth_vp)
+        field = 1.0 + reduction
         gap = c.u[0] - c.u[1]
         pull = self.velocity2 * gap
         drag2 = 1.0 + pull * gap
         # per_charge * (u_f^2 - u_r^2) is the current
         per_charge = self.strength * modulation / (c.slope * field * np.sqrt(drag2))
         current = per_charge * gap * (c.u[0] + c.u[1])
-        half_ut = 0.5 / self.ut
-        by_end = (2.0 * half_ut) * per_charge * c.u
-        by_end -= current * pull * half_ut / drag2
+        by_end = self.per_ut * per_charge * c.u
+        by_end -= self.per_two_ut * current * pull / drag2
         by_end *= c.s
         by_vds = self.early * current * vds / (smooth_vds * modulation)
-        # d ln n / d vg, and d ln V / d vg
+        # d ln n / d vg with n = 1 / slope, and d ln V / d vg
         bend = 0.5 * self.body_half / (c.root * c.root * c.root * c.slope)
-        by_field = self.field_half * positive_vp * c.slope / (smooth_vp * field)
+        by_field = reduction * c.slope / (smooth_vp * field)
         gm = (by_end[0] - by_end[1]) * c.slope - current * (bend + by_field)
-        return Drain(id=current, gm=gm, gds=by_end[1] + by_vds, gms=by_end[0] + by_vds)
+        by_end += by_vds
+        return Drain(id=current, gm=gm, gds=by_end[1], gms=by_end[0])
 
     def _saturation(self, c: _Channel) -> Saturation:
         return Saturation(
@@ -199,6 +206,6 @@ class ChargeLaw:
     def source_voltage(self, current: Array, vg: Array) -> Array:
         """Estimate the source voltage at which a saturated device carries `current`; a start for Newton."""
         drive = vg - self.threshold
-        root = np.sqrt(np.maximum(drive + self.root_start**2, self.root_floor))
+        root = np.sqrt(np.maximum(drive + self.root_start2, self.root_floor))
         vp = drive - self.body_effect * (root - self.root_start)
         return vp - self._needed_inversion(current)

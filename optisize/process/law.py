@@ -7,8 +7,7 @@ caller). Arrays have the shape (T, N): transistors by designs; parameters may be
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
-from typing import Protocol, Self
+from typing import NamedTuple, Protocol, Self
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,8 +16,7 @@ Array = NDArray[np.float64]
 Pick = slice | NDArray[np.intp]
 
 
-@dataclass(frozen=True)
-class Drain:
+class Drain(NamedTuple):
     """The drain current and its derivatives, each of shape (T, N).
 
     Attributes:
@@ -37,8 +35,7 @@ class Drain:
         return self.gms - self.gm - self.gds
 
 
-@dataclass(frozen=True)
-class Saturation:
+class Saturation(NamedTuple):
     """The saturation voltage and how it moves with the terminals, each of shape (T, N).
 
     Attributes:
@@ -53,8 +50,7 @@ class Saturation:
     inversion: Array
 
 
-@dataclass(frozen=True)
-class Capacitances:
+class Capacitances(NamedTuple):
     """Capacitances between gate and the other terminals, overlaps included [F], each of shape (T, N)."""
 
     cgs: Array
@@ -94,4 +90,6 @@ class Law(Protocol):
 def taken(array: Array, rows: Pick, columns: Pick) -> Array:
     """Index the two axes of a parameter array, either of which may have length one for "the same for all"."""
     part = array if array.shape[0] == 1 else array[rows]
-    return part if part.shape[1] == 1 else part[:, columns]
+    if part.shape[1] == 1:
+        return part
+    return part[:, columns] if isinstance(columns, slice) else part.take(columns, axis=1)

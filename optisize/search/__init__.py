@@ -1,0 +1,1 @@
+"""The search: a genetic algorithm on arrays, its archive of non-dominated designs, its checkpoints."""

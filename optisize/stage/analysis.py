@@ -13,10 +13,11 @@ from numpy.typing import NDArray
 
 from optisize.process.law import Array, Capacitances, Drain, Saturation
 from optisize.stage.bias import OperatingPoint, operating_point
-from optisize.stage.circuit import Circuit
-from optisize.stage.excursion import follow
+from optisize.stage.circuit import Circuit, Equations, Terminals
+from optisize.stage.excursion import Linearised, follow
 from optisize.stage.linear import Transfer, crossing, solve
 
+RANGE_SETTLED = 2e-3  # V; leaves less than 0.1 mV at the ends of the range, where only the headroom is read
 UNLIMITED = 1e-11  # a common-mode gain below this part of the terms it is summed from is rounding, hence zero
 
 
@@ -43,10 +44,12 @@ class Analysis:
             return self.point
         n, unknowns = self.circuit.designs, self.wiring.unknowns
         twice, common = self.range_circuit, np.repeat([low, high], n)
-        start = np.tile(self.point.v, 2)
-        start[:unknowns] += np.tile(self.responses[:, 1], 2) * (common - self.circuit.conditions.middle)
-        start = np.clip(start, 0.0, self.circuit.conditions.supply)
-        return operating_point(twice, twice.driven(common, common), start)
+        start = np.concatenate([self.point.v, self.point.v], axis=1)
+        start[:unknowns] += np.concatenate([self.responses[:, 1]] * 2, axis=1) * (
+            common - self.circuit.conditions.middle
+        )
+        start = np.minimum(np.maximum(start, 0.0), self.circuit.conditions.supply)
+        return operating_point(twice, twice.driven(common, common), start, settled=RANGE_SETTLED)
 
     @cached_property
     def range_circuit(self) -> Circuit:
@@ -66,24 +69,23 @@ class Analysis:
         return self.point.converged
 
     @cached_property
-    def terminals(self) -> tuple[Array, Array, Array]:
-        """Gate, drain and source voltages relative to the bulk in n-channel sense, each (T, N)."""
+    def terminals(self) -> Terminals:
+        """The voltages at the terminals."""
         return self.circuit.terminals(self.point.v)
 
     @cached_property
+    def _solved(self) -> tuple[Drain, Saturation]:
+        return self.circuit.law.drain_and_saturation(*self.terminals.of_law)
+
+    @property
     def drain(self) -> Drain:
         """Currents and derivatives of the transistors, (T, N)."""
-        return self.circuit.law.drain(*self.terminals)
+        return self._solved[0]
 
-    @cached_property
+    @property
     def saturation(self) -> Saturation:
         """Saturation voltages and inversion levels, (T, N)."""
-        return self.circuit.law.saturation(*self.terminals)
-
-    @cached_property
-    def matrix(self) -> Array:
-        """The conductance matrix between the unknown nodes, (U, U, N)."""
-        return self.circuit.jacobian(self.drain)
+        return self._solved[1]
 
     @cached_property
     def drives(self) -> Array:
@@ -92,9 +94,19 @@ class Analysis:
         return np.stack([differential, self.wiring.drive(positive=1.0, negative=1.0)], axis=1)
 
     @cached_property
+    def equations(self) -> Equations:
+        """The linearised equations with both drives."""
+        return self.circuit.equations(self.terminals, self.drain, self.drives)
+
+    @property
+    def matrix(self) -> Array:
+        """The conductance matrix between the unknown nodes, (U, U, N)."""
+        return self.equations.matrix
+
+    @property
     def pulls(self) -> Array:
         """How the residual moves with the two drives, (U, 2, N)."""
-        return self.circuit.driven_slopes(self.drain, self.drives)
+        return self.equations.pulls
 
     @cached_property
     def responses(self) -> Array:
@@ -127,26 +139,27 @@ class Analysis:
     @cached_property
     def capacitances(self) -> Capacitances:
         """Gate capacitances of the transistors, (T, N)."""
-        return self.circuit.law.capacitances(*self.terminals)
+        return self.circuit.law.capacitances(*self.terminals.of_law)
 
     @cached_property
     def capacitance_branches(self) -> Array:
         """All capacitances [F] in the order of the wiring's stamp, (5T + R + 1, N)."""
         gate, drawn, p = self.capacitances, self.circuit.drawn, self.circuit.parameters
-        _, vd, vs = self.terminals
 
         def junction(area: Array, edge: Array, reverse: Array) -> Array:
-            bias = 1.0 + np.maximum(reverse, -0.4 * p["junction_potential"]) / p["junction_potential"]
-            bottom = p["junction_capacitance"] * area * bias ** -p["junction_grading"]
-            return bottom + p["sidewall_capacitance"] * edge * bias ** -p["sidewall_grading"]
+            """Depletion capacitance of an area and its edge; grading powers of one logarithm."""
+            built_in = p["junction_potential"]
+            bias = np.log1p(np.maximum(reverse / built_in, -0.4))
+            bottom = p["junction_capacitance"] * area * np.exp(-p["junction_grading"] * bias)
+            return bottom + p["sidewall_capacitance"] * edge * np.exp(-p["sidewall_grading"] * bias)
 
         return np.concatenate(
             [
                 gate.cgs,
                 gate.cgd,
                 gate.cgb,
-                junction(drawn.drain_area, drawn.drain_edge, vd),
-                junction(drawn.source_area, drawn.source_edge, vs),
+                junction(drawn.drain_area, drawn.drain_edge, self.terminals.drain),
+                junction(drawn.source_area, drawn.source_edge, self.terminals.source),
                 self.circuit.resistor_capacitances,
                 np.full((1, self.circuit.designs), self.circuit.conditions.load_capacitance),
             ]
@@ -172,8 +185,7 @@ class Analysis:
         output = np.zeros(w.unknowns)
         for node, sign in self.topology.output:
             output[w.index[node]] = sign
-        stamp = np.einsum("uae,a->ue", w.capacitance_stamp, self.drives[:, 0])
-        pull_c = stamp @ self.capacitance_branches
+        pull_c = np.tensordot(w.capacitance_stamp, self.drives[:, 0], (1, 0)) @ self.capacitance_branches
         return Transfer(self.matrix, self.capacitance_matrix, self.pulls[:, 0], pull_c, output, w.pattern)
 
     def gain_crossing(self, level: Array) -> Array:
@@ -206,7 +218,7 @@ class Analysis:
         if self.range_points is self.point:
             return self.room_at_rest
         terminals = self.range_circuit.terminals(self.range_points.v)
-        room = _room(self.range_circuit, terminals, self.range_circuit.law.saturation(*terminals))
+        room = _room(self.range_circuit, terminals, self.range_circuit.law.saturation(*terminals.of_law))
         room = np.where(self.range_points.converged, room, np.nan)
         return room.reshape(2, self.circuit.designs).min(axis=0)
 
@@ -214,6 +226,16 @@ class Analysis:
     def room_at_rest(self) -> Array:
         """Smallest vds - vdsat in the middle of the common-mode range [V], (N,)."""
         return _room(self.circuit, self.terminals, self.saturation)
+
+    def _at_rest(self, columns: NDArray[np.intp]) -> Linearised:
+        """Return the linearised stage of some designs with the differential drive."""
+
+        def chosen(record: Any) -> Any:
+            return type(record)(*(x[:, columns] for x in record))
+
+        residual, matrix, pulls = self.equations
+        equations = Equations(residual[:, columns], matrix[..., columns], pulls[:, :1, columns])
+        return Linearised(chosen(self.terminals), chosen(self.drain), chosen(self.saturation), equations)
 
     @cached_property
     def output_excursions(self) -> tuple[Array, Array]:
@@ -224,14 +246,14 @@ class Analysis:
         moved = np.zeros((2, self.circuit.designs))
         columns = np.flatnonzero(self.room_at_rest > 0.0)
         if len(columns):
-            twice = self.circuit.take(np.tile(columns, 2))
-            start = np.tile(self.point.v[:, columns], 2)
-            end = follow(twice, start, self.drives[:, 0], np.repeat([-1.0, 1.0], len(columns)))
+            both = np.concatenate([columns, columns])
+            start = self.point.v[:, both]
+            sign = np.repeat([-1.0, 1.0], len(columns))
+            end = follow(self.circuit.take(both), start, self._at_rest(both), self.drives[:, 0], sign)
             reach = np.abs(self.wiring.output(end.v) - self.wiring.output(start))
             moved[:, columns] = np.where(end.found, reach, np.nan).reshape(2, -1)
         return moved[0], moved[1]
 
 
-def _room(circuit: Circuit, terminals: tuple[Array, Array, Array], saturation: Saturation) -> Array:
-    _, vd, vs = terminals
-    return (vd - vs - saturation.vdsat)[circuit.wiring.saturating].min(axis=0)
+def _room(circuit: Circuit, terminals: Terminals, saturation: Saturation) -> Array:
+    return (terminals.vds - saturation.vdsat)[circuit.wiring.saturating].min(axis=0)

@@ -16,7 +16,7 @@ ITERATIONS = 40
 BEYOND = 0.5  # V; how far beyond the rails a node may be sought
 PINNED = 5  # steps against that bound after which a design is given up: it has no operating point inside
 STEP_LIMIT = 0.25  # V; a step of any node beyond it shortens the whole step
-STEP_DONE = 1e-7  # V; the step after which the next one would be at rounding (convergence is quadratic)
+SETTLED = 3e-7  # V; the step after which the next one would be some pV (convergence is quadratic)
 LEAK = 1e-15  # S; keeps the matrix regular where every device at a node is off; not in the residual
 
 
@@ -25,7 +25,7 @@ class OperatingPoint:
     """Node voltages (A, N), the unknown nodes first, and which designs converged (N,) of bool."""
 
     v: Array
-    converged: Array
+    converged: NDArray[np.bool_]
 
 
 class _Start:
@@ -76,54 +76,72 @@ def first_guess(circuit: Circuit, driven: Array) -> Array:
     return np.concatenate([np.clip(unknown, 0.02 * supply, 0.98 * supply), driven])
 
 
-def operating_point(circuit: Circuit, driven: Array, start: Array | None = None) -> OperatingPoint:
+@np.errstate(all="ignore")
+def operating_point(
+    circuit: Circuit, driven: Array, start: Array | None = None, settled: float = SETTLED
+) -> OperatingPoint:
     """Solve the operating point of every design.
 
     Args:
         circuit: N sized designs.
         driven: voltages of the driven nodes, (4, N).
         start: node voltages (A, N) to start from; the topology's own guess where None.
+        settled: the step [V] after which a design is done; convergence is quadratic, so what is left is about its
+            square over 50 mV.
 
     Returns:
         Node voltages, always finite, and a flag for each design. A design that has not converged keeps its start.
     """
     begin = first_guess(circuit, driven) if start is None else start
-    begin = np.concatenate([begin[: circuit.wiring.unknowns], driven])
-    v = begin.copy()
+    v = np.concatenate([begin[: circuit.wiring.unknowns], driven])
     converged = np.zeros(circuit.designs, dtype=bool)
     active: Indices = np.arange(circuit.designs)
-    part, vp = circuit, v.copy()
-    pinned = np.zeros(circuit.designs, dtype=int)
+    part, moving, pinned = circuit, v.copy(), np.zeros(circuit.designs, dtype=int)
     for _ in range(ITERATIONS):
-        size = newton_step(part, vp)
-        done = size < STEP_DONE
-        pinned = np.where(_at_bound(part, vp), pinned + 1, 0)
+        size = newton_step(part, moving)
+        done = size < settled
+        if done.all() and len(done) == circuit.designs:
+            return OperatingPoint(moving, done)
+        pinned = np.where(_at_bound(part, moving), pinned + 1, 0)
         over = done | (pinned >= PINNED)
-        if over.all() or 3 * np.count_nonzero(over) > len(over):
-            v[:, active[done]] = vp[:, done]
+        if 3 * np.count_nonzero(over) > len(over):
+            v[:, active[done]] = moving[:, done]
             converged[active[done]] = True
             active = active[~over]
             if not len(active):
                 break
-            part, vp, pinned = part.take(np.flatnonzero(~over)), vp[:, ~over], pinned[~over]
-    v[:, ~converged] = begin[:, ~converged]
-    return OperatingPoint(np.where(np.isfinite(v), v, 0.5 * circuit.conditions.supply), converged)
+            part, moving, pinned = part.take(np.flatnonzero(~over)), moving[:, ~over], pinned[~over]
+    return OperatingPoint(v, converged)
 
 
 def newton_step(circuit: Circuit, v: Array) -> Array:
     """Move the unknown node voltages `v` in place by one damped step; return the size of the full step, (N,) [V]."""
     unknowns = circuit.wiring.unknowns
-    drain = circuit.law.drain(*circuit.terminals(v))
-    matrix = circuit.jacobian(drain)
-    matrix[np.arange(unknowns), np.arange(unknowns)] += LEAK
-    step = solve(matrix, -circuit.residual(v, drain)[:, None], circuit.wiring.conductance_pattern)[:, 0]
+    terminals = circuit.terminals(v)
+    equations = circuit.equations(terminals, circuit.law.drain(*terminals.of_law))
+    step = regular_solve(circuit, equations.matrix, -equations.residual[:, None])[:, 0]
     size = np.abs(step).max(axis=0)
-    bad = ~np.isfinite(size)
-    if bad.any():
-        step[:, bad], size[bad] = 0.0, np.inf
-    v[:unknowns] += step * np.minimum(1.0, STEP_LIMIT / np.maximum(size, 1e-30))
-    np.clip(v[:unknowns], -BEYOND, circuit.conditions.supply + BEYOND, out=v[:unknowns])
+    if not size.max() < STEP_LIMIT:
+        step = np.where(np.isfinite(step), step, 0.0)
+        size = np.where(np.isfinite(size), size, np.inf)
+        step = step * (STEP_LIMIT / np.maximum(size, STEP_LIMIT))
+    nodes = v[:unknowns]
+    nodes += step
+    np.maximum(nodes, -BEYOND, out=nodes)
+    np.minimum(nodes, circuit.conditions.supply + BEYOND, out=nodes)
     return size
+
+
+def regular_solve(circuit: Circuit, matrix: Array, right: Array) -> Array:
+    """Solve the nodal equations; where every device at a node is off, a leak to ground keeps them regular."""
+    pattern = circuit.wiring.conductance_pattern
+    solution = solve(matrix, right, pattern)
+    if np.isfinite(solution.sum()):
+        return solution
+    leaky = matrix.copy()
+    unknowns = np.arange(len(matrix))
+    leaky[unknowns, unknowns] += LEAK
+    return solve(leaky, right, pattern)
 
 
 def _at_bound(circuit: Circuit, v: Array) -> NDArray[np.bool_]:

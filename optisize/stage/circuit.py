@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -39,6 +40,7 @@ class Wiring:
         self.polarity = np.array([[1.0 if topology.channel(x) == "n" else -1.0] for x in t])
         self.rows = {x.name: i for i, x in enumerate(t)}
         self.resistor_ends = (self._at([r.a for r in topology.resistors]), self._at([r.b for r in topology.resistors]))
+        self._equation_stamps: dict[bytes, Array] = {}
         self.current_stamp = self._current_stamp()
         self.conductance_stamp = self._conductance_stamp()
         self.capacitance_stamp = self._capacitance_stamp()
@@ -93,11 +95,36 @@ class Wiring:
             _stamp_two_terminal(full[:, :, -1], self.index[node], ground)
         return full[: self.unknowns]
 
-    @cached_property
-    def newton_stamp(self) -> Array:
-        """The conductance stamp between unknown nodes, as (U U, 3T + R)."""
-        u = self.unknowns
-        return np.ascontiguousarray(self.conductance_stamp[:, :u].reshape(u * u, -1))
+    def equation_stamp(self, drives: Array | None) -> Array:
+        """Return the constant array that turns `Circuit.branches` into residual, matrix and pulls of the drives.
+
+        Args:
+            drives: K patterns over all nodes, (A, K).
+
+        Returns:
+            (U + U U + U K, 4T + 2R + S): the rows of the residual, of the matrix and of the pulls.
+        """
+        key = b"" if drives is None else drives.tobytes()
+        if key not in self._equation_stamps:
+            self._equation_stamps[key] = self._equations(drives)
+        return self._equation_stamps[key]
+
+    def _equations(self, drives: Array | None) -> Array:
+        top, u = self.topology, self.unknowns
+        t, r, s = len(top.transistors), len(top.resistors), len(top.sources)
+        slopes = [self.conductance_stamp[:, :u].reshape(u * u, -1)]
+        if drives is not None:
+            slopes.append(np.einsum("uae,ak->uke", self.conductance_stamp, drives).reshape(u * drives.shape[1], -1))
+        rows = np.concatenate(slopes)
+        stamp = np.zeros((u + len(rows), 4 * t + 2 * r + s))
+        current = self.current_stamp[:u].copy()
+        current[:, :t] *= self.polarity[:, 0]
+        stamp[:u, :t] = current[:, :t]
+        stamp[:u, 4 * t : 4 * t + r] = current[:, t : t + r]
+        stamp[:u, 4 * t + 2 * r :] = current[:, t + r :]
+        stamp[u:, t : 4 * t] = rows[:, : 3 * t]
+        stamp[u:, 4 * t + r : 4 * t + 2 * r] = rows[:, 3 * t :]
+        return stamp
 
     @cached_property
     def conductance_pattern(self) -> Pattern:
@@ -112,11 +139,11 @@ class Wiring:
 
     @cached_property
     def terminal_stamp(self) -> Array:
-        """(3T, A): gate, drain and source voltages relative to the bulk in n-channel sense, from node voltages."""
+        """(3T + R, A): gate, drain and source voltages relative to the bulk in n-channel sense; resistor voltages."""
         unit = np.eye(len(self.nodes))
-        return np.concatenate(
-            [(unit[x] - unit[self.bulk]) * self.polarity for x in (self.gate, self.drain, self.source)]
-        )
+        ends = [(unit[x] - unit[self.bulk]) * self.polarity for x in (self.gate, self.drain, self.source)]
+        a, b = self.resistor_ends
+        return np.concatenate([*ends, unit[a] - unit[b]])
 
     @cached_property
     def saturating(self) -> Indices:
@@ -183,6 +210,44 @@ class Conditions:
         return 0.5 * (self.common_mode[0] + self.common_mode[1])
 
 
+class Terminals(NamedTuple):
+    """Voltages for node voltages (A, ...).
+
+    Attributes:
+        gate, drain, source: of the transistors, relative to the bulk and in n-channel sense, each (T, ...).
+        resistors: across the resistors, (R, ...).
+    """
+
+    gate: Array
+    drain: Array
+    source: Array
+    resistors: Array
+
+    @property
+    def vds(self) -> Array:
+        """Drain-source voltages in n-channel sense, (T, ...)."""
+        return self.drain - self.source
+
+    @property
+    def of_law(self) -> tuple[Array, Array, Array]:
+        """What a law takes: gate, drain and source voltages."""
+        return self.gate, self.drain, self.source
+
+
+class Equations(NamedTuple):
+    """The linearised equations of N designs.
+
+    Attributes:
+        residual: current that leaves each unknown node, (U, N); zero at the operating point.
+        matrix: its derivatives with respect to the unknown nodes, (U, U, N).
+        pulls: its derivatives with respect to the drives, (U, K, N).
+    """
+
+    residual: Array
+    matrix: Array
+    pulls: Array
+
+
 @dataclass(frozen=True)
 class Circuit:
     """A topology with sizes, in a process, under conditions: everything the equations need, for N designs.
@@ -222,6 +287,10 @@ class Circuit:
     def take(self, columns: Pick) -> Circuit:
         """Return the same circuit for some of the designs."""
         every = slice(None)
+        chosen = {
+            name: taken(getattr(self, name), every, columns)
+            for name in ("units", "width", "length", "conductances", "currents")
+        }
         return Circuit(
             wiring=self.wiring,
             process=self.process,
@@ -229,11 +298,7 @@ class Circuit:
             law=self.law.take(every, columns),
             parameters={k: taken(v, every, columns) for k, v in self.parameters.items()},
             sizes={k: v[columns] for k, v in self.sizes.items()},
-            units=self.units[:, columns],
-            width=self.width[:, columns],
-            length=self.length[:, columns],
-            conductances=self.conductances[:, columns],
-            currents=self.currents[:, columns],
+            **chosen,
         )
 
     def repeated(self, times: int) -> Circuit:
@@ -247,48 +312,32 @@ class Circuit:
         voltages[2], voltages[3] = self.conditions.supply, 0.0
         return voltages
 
-    def terminals(self, v: Array) -> tuple[Array, Array, Array]:
-        """Return gate, drain and source voltages relative to the bulk, in n-channel sense, each (T, ...)."""
-        w = self.wiring
-        stacked = w.terminal_stamp @ v.reshape(v.shape[0], -1)
-        gate, drain, source = stacked.reshape(3, -1, *v.shape[1:])
-        return gate, drain, source
+    def terminals(self, v: Array) -> Terminals:
+        """Return the voltages at the terminals for node voltages (A, ...)."""
+        t = len(self.topology.transistors)
+        stacked = self.wiring.terminal_stamp @ v.reshape(v.shape[0], -1)
+        stacked = stacked.reshape(-1, *v.shape[1:])
+        return Terminals(stacked[:t], stacked[t : 2 * t], stacked[2 * t : 3 * t], stacked[3 * t :])
 
-    def branch_currents(self, v: Array, drain: Drain) -> Array:
+    def branch_currents(self, terminals: Terminals, drain: Drain) -> Array:
         """Return the currents of all branches (T + R + S, N), from drain to source and from a to b."""
-        w = self.wiring
-        parts = [drain.id * w.polarity]
-        if len(self.conductances):
-            a, b = w.resistor_ends
-            parts.append((v[a] - v[b]) * self.conductances)
-        if len(self.currents):
-            parts.append(self.currents)
-        return np.concatenate(parts)
+        through = terminals.resistors * self.conductances
+        return np.concatenate([drain.id * self.wiring.polarity, through, self.currents])
 
-    def residual(self, v: Array, drain: Drain) -> Array:
-        """Return the current that leaves each unknown node (U, N); zero at the operating point."""
-        w = self.wiring
-        return w.current_stamp[: w.unknowns] @ self.branch_currents(v, drain)
-
-    def slopes(self, drain: Drain) -> Array:
-        """Return the branch derivatives (3T + R, N) that the conductance stamps take."""
-        return np.concatenate([drain.gm, drain.gds, drain.gms, self.conductances])
-
-    def jacobian(self, drain: Drain) -> Array:
-        """Return the conductance matrix between the unknown nodes (U, U, N)."""
-        w = self.wiring
-        return (w.newton_stamp @ self.slopes(drain)).reshape(w.unknowns, w.unknowns, -1)
-
-    def driven_slopes(self, drain: Drain, drives: Array) -> Array:
-        """Return (U, K, N): how the residual moves with K patterns of driven nodes.
+    def equations(self, terminals: Terminals, drain: Drain, drives: Array | None = None) -> Equations:
+        """Return the linearised equations at node voltages.
 
         Args:
-            drain: the linearised transistors.
+            terminals: the voltages at the terminals.
+            drain: current and derivatives of the transistors there.
             drives: K patterns over all nodes, (A, K).
         """
-        w = self.wiring
-        stamp = np.einsum("uae,ak->uke", w.conductance_stamp, drives)
-        return (stamp.reshape(-1, stamp.shape[2]) @ self.slopes(drain)).reshape(w.unknowns, drives.shape[1], -1)
+        u = self.wiring.unknowns
+        through = terminals.resistors * self.conductances
+        branches = np.concatenate([drain.id, drain.gm, drain.gds, drain.gms, through, self.conductances, self.currents])
+        rows = self.wiring.equation_stamp(drives) @ branches
+        end = u + u * u
+        return Equations(rows[:u], rows[u:end].reshape(u, u, -1), rows[end:].reshape(u, -1, rows.shape[1]))
 
     @cached_property
     def drawn(self) -> Drawn:

@@ -7,19 +7,19 @@ hand sides, the residual and the drive, and moves the amplitude to where the nea
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array, Drain, Saturation
-from optisize.stage.bias import LEAK
-from optisize.stage.circuit import Circuit
-from optisize.stage.linear import solve
+from optisize.stage.bias import regular_solve
+from optisize.stage.circuit import Circuit, Equations, Terminals
 
 STEERED = 0.01  # the part of the pair's current below which an input transistor counts as off
 ITERATIONS = 25
 STEP_LIMIT = 0.6  # V, of any node in one step
-SETTLED = 1e-4  # V; the step after which the next one would be a thousandth of it (convergence is quadratic)
+SETTLED = 2e-3  # V; the step after which the next one would be some 0.1 mV (convergence is quadratic)
 
 
 @dataclass(frozen=True)
@@ -37,7 +37,17 @@ class Excursion:
     found: NDArray[np.bool_]
 
 
-def follow(circuit: Circuit, start: Array, drive: Array, sign: Array) -> Excursion:
+class Linearised(NamedTuple):
+    """A stage at node voltages: terminals, transistors, and the equations with one drive."""
+
+    terminals: Terminals
+    drain: Drain
+    saturation: Saturation
+    equations: Equations
+
+
+@np.errstate(all="ignore")
+def follow(circuit: Circuit, start: Array, rest: Linearised, drive: Array, sign: Array) -> Excursion:
     """Raise a drive from the operating point until the first margin vanishes.
 
     Margins are vds - vdsat of every transistor that has to be saturated, and the current of each input transistor
@@ -46,6 +56,7 @@ def follow(circuit: Circuit, start: Array, drive: Array, sign: Array) -> Excursi
     Args:
         circuit: N designs.
         start: node voltages at the operating point, (A, N).
+        rest: the stage there, which saves the first step its linearisation.
         drive: pattern over all nodes, (A,), zero on the unknown ones.
         sign: direction of the drive for each design, (N,).
     """
@@ -53,8 +64,9 @@ def follow(circuit: Circuit, start: Array, drive: Array, sign: Array) -> Excursi
     found = np.zeros(circuit.designs, dtype=bool)
     active: NDArray[np.intp] = np.arange(circuit.designs)
     part, pv, pa, ps = circuit, v.copy(), amplitude.copy(), sign
-    for _ in range(ITERATIONS):
-        done = _step(part, pv, pa, drive, ps)
+    for iteration in range(ITERATIONS):
+        here = rest if iteration == 0 else _linearised(part, pv, drive)
+        done = _step(part, here, pv, pa, drive, ps)
         if done.all() or 3 * np.count_nonzero(done) > len(done):
             v[:, active[done]], amplitude[active[done]] = pv[:, done], pa[done]
             found[active[done]] = True
@@ -66,58 +78,52 @@ def follow(circuit: Circuit, start: Array, drive: Array, sign: Array) -> Excursi
     return Excursion(v=v, amplitude=amplitude, found=found)
 
 
-def _step(circuit: Circuit, v: Array, amplitude: Array, drive: Array, sign: Array) -> NDArray[np.bool_]:
+def _linearised(circuit: Circuit, v: Array, drive: Array) -> Linearised:
+    terminals = circuit.terminals(v)
+    drain, saturation = circuit.law.drain_and_saturation(*terminals.of_law)
+    return Linearised(terminals, drain, saturation, circuit.equations(terminals, drain, drive[:, None]))
+
+
+def _step(
+    circuit: Circuit, here: Linearised, v: Array, amplitude: Array, drive: Array, sign: Array
+) -> NDArray[np.bool_]:
     """Move node voltages and amplitude in place by one damped step; return which designs have settled, (N,)."""
     unknowns = circuit.wiring.unknowns
-    terminals = circuit.terminals(v)
-    drain, saturation = circuit.law.drain_and_saturation(*terminals)
-    toward = _responses(circuit, v, drain, drive, sign)
-    margin, settle, rise = _margins(circuit, terminals, drain, saturation, toward)
+    right = np.concatenate([here.equations.residual[:, None], here.equations.pulls * sign], axis=1)
+    toward = np.zeros((v.shape[0], 2, v.shape[1]))
+    toward[:unknowns] = regular_solve(circuit, here.equations.matrix, -right)
+    toward[unknowns:, 1] = drive[unknowns:, None] * sign
+    margin, settle, rise = _margins(circuit, here, toward)
     step = np.maximum(_amplitude_step(margin + settle, rise), -amplitude)
-    change = toward[:unknowns, 0] + step * toward[:unknowns, 1]
-    moved = np.abs(change).max(axis=0)
-    finite = np.isfinite(moved)
-    damping = np.where(finite, np.minimum(1.0, STEP_LIMIT / np.maximum(moved, 1e-30)), 0.0)
-    v[:unknowns] += np.where(finite, change * damping, 0.0)
-    amplitude += np.where(finite, step * damping, 0.0)
-    driven = drive[unknowns:, None] * sign
-    v[unknowns:] += driven * np.where(finite, step * damping, 0.0)
+    change = toward[:, 0] + step * toward[:, 1]
+    moved = np.abs(change[:unknowns]).max(axis=0)
+    if not moved.max() < STEP_LIMIT:
+        damping = np.where(np.isfinite(moved), STEP_LIMIT / np.maximum(moved, STEP_LIMIT), 0.0)
+        step, change = (np.where(damping > 0.0, x * damping, 0.0) for x in (step, change))
+    v += change
+    amplitude += step
     return moved < SETTLED
 
 
-def _responses(circuit: Circuit, v: Array, drain: Drain, drive: Array, sign: Array) -> Array:
-    """Return how all nodes move (A, 2, N): to settle the residual, and with the amplitude of the drive."""
-    unknowns = circuit.wiring.unknowns
-    matrix = circuit.jacobian(drain)
-    matrix[np.arange(unknowns), np.arange(unknowns)] += LEAK
-    pull = circuit.driven_slopes(drain, drive[:, None])[:, 0] * sign
-    right = -np.stack([circuit.residual(v, drain), pull], axis=1)
-    toward = np.zeros((v.shape[0], 2, v.shape[1]))
-    toward[:unknowns] = solve(matrix, right, circuit.wiring.conductance_pattern)
-    toward[unknowns:, 1] = drive[unknowns:, None] * sign
-    return toward
-
-
-def _margins(
-    circuit: Circuit, terminals: tuple[Array, Array, Array], drain: Drain, saturation: Saturation, toward: Array
-) -> tuple[Array, Array, Array]:
+def _margins(circuit: Circuit, here: Linearised, toward: Array) -> tuple[Array, Array, Array]:
     """Return the margins (K, N), how they settle with the residual, and how they rise with the amplitude."""
-    rows = circuit.wiring.saturating
-    pair = circuit.wiring.pair
-    _, vd, vs = terminals
-    dg, dd, ds = circuit.terminals(toward)
-    room = (vd - vs - saturation.vdsat)[rows]
-    by_gate, by_source = saturation.by_gate[rows, None], saturation.by_source[rows, None]
-    room_change = (dd - ds)[rows] - by_gate * dg[rows] - by_source * ds[rows]
+    terminals, drain, saturation, _ = here
+    rows, pair = circuit.wiring.saturating, circuit.wiring.pair
+    change = circuit.terminals(toward)
+    room = (terminals.vds - saturation.vdsat)[rows]
+    by_gate, by_source = saturation.by_gate[:, None], saturation.by_source[:, None]
+    room_change = (change.vds - by_gate * change.gate - by_source * change.source)[rows]
     current = drain.id[pair]
-    total = current.sum(axis=0)
-    change = drain.gm[pair, None] * dg[pair] + drain.gds[pair, None] * dd[pair] - drain.gms[pair, None] * ds[pair]
+    flow = (
+        drain.gm[pair, None] * change.gate[pair]
+        + drain.gds[pair, None] * change.drain[pair]
+        - drain.gms[pair, None] * change.source[pair]
+    )
+    total = current[0] + current[1]
     share = np.maximum(current / total, 1e-9)
     root = np.sqrt(share)
-    share_change = (change - share[:, None] * change.sum(axis=0)) / total
-    steering = root - np.sqrt(STEERED)
-    steering_change = share_change / (2.0 * root[:, None])
-    margin = np.concatenate([room, steering])
+    steering_change = (flow - share[:, None] * (flow[0] + flow[1])) / (2.0 * total * root[:, None])
+    margin = np.concatenate([room, root - np.sqrt(STEERED)])
     both = np.concatenate([room_change, steering_change])
     return margin, both[:, 0], both[:, 1]
 

@@ -115,7 +115,7 @@ def cmrr(a: Analysis) -> Array:
 @_measure("A", "min")
 def supply_current(a: Analysis) -> Array:
     """All current from the supply, with the bias branch."""
-    currents = a.circuit.branch_currents(a.point.v, a.drain)
+    currents = a.circuit.branch_currents(a.terminals, a.drain)
     return a.wiring.current_stamp[a.wiring.index["supply"]] @ currents
 
 
@@ -181,15 +181,13 @@ def id(a: Analysis) -> Array:
 @_figure("V", "min", scale="linear", step=0.1)
 def vgs(a: Analysis) -> Array:
     """Gate-source voltage, positive for a conducting device of either channel."""
-    vg, _, vs = a.terminals
-    return vg - vs
+    return a.terminals.gate - a.terminals.source
 
 
 @_figure("V", "max", scale="linear", step=0.1)
 def vds(a: Analysis) -> Array:
     """Drain-source voltage, positive for a conducting device of either channel."""
-    _, vd, vs = a.terminals
-    return vd - vs
+    return a.terminals.vds
 
 
 @_figure("V", "min", scale="linear", step=0.05)

@@ -1,0 +1,198 @@
+"""One search of a problem, from the sizing space to a front of finished sizings."""
+
+from __future__ import annotations
+
+import os
+import platform
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+import optisize
+from optisize.errors import NothingFeasible
+from optisize.front.run import Run
+from optisize.front.table import design_table
+from optisize.problem.evaluate import Problem
+from optisize.process.law import Array
+from optisize.quantities import write
+from optisize.search import genetic
+from optisize.search.state import Evaluated, Settings, State
+
+SURVEY = 512  # designs of the fixed sample that sets the box in which the hypervolume is measured
+Watch = Callable[[State], None]
+
+
+@dataclass
+class Evaluator:
+    """What the search calls: vectors in, losses and violations out; keeps the time that it takes.
+
+    Attributes:
+        problem: the problem.
+        threads: how many chunks of designs are solved at the same time.
+        seconds: the time spent in evaluation.
+    """
+
+    problem: Problem
+    threads: int = 1
+    seconds: float = field(default=0.0)
+
+    def __call__(self, vectors: Array) -> Evaluated:
+        """Evaluate vectors (D, N); those that come back are of the snapped sizings."""
+        begin = time.perf_counter()
+        sizes = self.problem.space.decode(vectors)
+        assessed = self.problem.assess(sizes, self.threads)
+        result = Evaluated(self.problem.space.encode(sizes), assessed.finite_losses, assessed.violation)
+        self.seconds += time.perf_counter() - begin
+        return result
+
+
+@dataclass(frozen=True)
+class Survey:
+    """The box in loss space in which hypervolume is measured: worst and best losses (M,) of a fixed sample."""
+
+    reference: Array
+    ideal: Array
+
+
+def survey(problem: Problem) -> Survey:
+    """Evaluate a fixed sample of the space, the same for every seed.
+
+    Raises InputError when a goal is the same for all of it.
+    """
+    from scipy.stats.qmc import Sobol
+
+    vectors = Sobol(problem.space.dimensions, scramble=False).random(SURVEY).T
+    assessed = problem.assess(problem.space.decode(vectors))
+    problem.check_goals_vary(assessed.losses)
+    losses = assessed.finite_losses
+    nearest = np.argsort(assessed.violation, kind="stable")[: SURVEY // 4]
+    chosen = losses[:, nearest]
+    worst, best = chosen.max(axis=1), chosen.min(axis=1)
+    margin = 0.05 * np.maximum(worst - best, 1e-6)
+    return Survey(reference=worst + margin, ideal=best - margin)
+
+
+def search(
+    problem: Problem,
+    *,
+    threads: int | None = None,
+    seeds: Mapping[str, Array] | None = None,
+    watch: Watch | None = None,
+    state: State | None = None,
+    settings: Settings | None = None,
+) -> Run:
+    """Search a problem and return the run with its front.
+
+    Args:
+        problem: what to search.
+        threads: threads of evaluation; those that there are where None. The front does not depend on it.
+        seeds: manual sizings to start from, each size (K,).
+        watch: called after every generation.
+        state: an interrupted search to go on with.
+        settings: in place of those of the problem.
+
+    Raises:
+        InputError: a goal that is constant.
+        NothingFeasible: no design meets every limit; the message says which ones stood in the way.
+    """
+    begin = time.perf_counter()
+    evaluator = Evaluator(problem, threads or os.cpu_count() or 1)
+    if settings is None:
+        settings = Settings(**problem.settings.model_dump())
+    if state is None:
+        box = survey(problem)
+        state = genetic.start(
+            evaluator,
+            dimensions=problem.space.dimensions,
+            goals=len(problem.goals),
+            settings=settings,
+            reference=box.reference,
+            ideal=box.ideal,
+            seeds=None if seeds is None else problem.space.encode(problem.space.snapped(seeds)),
+        )
+        if watch is not None:
+            watch(state)
+    state = genetic.run(state, evaluator, on_generation=watch)
+    if not state.front.size and state.stopped != "interrupted":
+        raise NothingFeasible(explain_infeasible(problem, state))
+    seconds = time.perf_counter() - begin
+    return _finished(problem, state, seconds, evaluator.seconds)
+
+
+def _finished(problem: Problem, state: State, seconds: float, evaluation: float) -> Run:
+    front = state.front.thinned(state.settings.population)
+    table = design_table(problem, problem.space.decode(front.vectors))
+    hypervolume = state.hypervolume
+    return Run(
+        problem=problem,
+        front=table,
+        history=pd.DataFrame([vars(record) for record in state.history]),
+        info={
+            "optisize": optisize.__version__,
+            "python": platform.python_version(),
+            "numpy": np.__version__,
+            "title": problem.title,
+            "stopped": state.stopped,
+            "seed": state.settings.seed,
+            "population": state.settings.population,
+            "generations": state.generation,
+            "evaluations": state.evaluations,
+            "designs": len(table),
+            "archive": state.front.size,
+            "hypervolume": hypervolume,
+            "hypervolume_box": _box(problem, state),
+            "seconds": round(seconds, 3),
+            "evaluation_seconds": round(evaluation, 3),
+            "sha256": dict(problem.hashes),
+        },
+        state=state,
+    )
+
+
+def _box(problem: Problem, state: State) -> dict[str, dict[str, float]]:
+    """Return the box of the hypervolume in the goals' own units."""
+    return {
+        goal.measure.name: {
+            "worst": float(goal.value(state.reference[i : i + 1])[0]),
+            "best": float(goal.value(state.ideal[i : i + 1])[0]),
+        }
+        for i, goal in enumerate(problem.goals)
+    }
+
+
+def explain_infeasible(problem: Problem, state: State) -> str:
+    """Say which limits stood in the way, and how far each had to be relaxed for the nearest design."""
+    sizes = problem.space.decode(state.population.vectors)
+    values = problem.measure(sizes)
+    assessed = problem.judge(values)
+    if not assessed.solved.any():
+        return "nothing feasible: no sizing of the space has an operating point under these conditions"
+    best = int(np.argmin(np.where(assessed.solved, assessed.violation, np.inf)))
+    lines = []
+    for limit, missed in zip(problem.limits, assessed.violations, strict=True):
+        if missed[best] <= 0.0:
+            continue
+        m = limit.measure
+        bounds = " and ".join(f"{name} {write(bound, m.unit)}" for name, bound in limit.bounds)
+        alone = (assessed.violations.sum(axis=0) - missed <= 0.0) & (missed > 0.0)
+        note = "; every other limit can be met without it" if alone.any() else ""
+        lines.append(f"  {m.name}: {bounds} wanted, nearest design has {_reached(values[m.name][best], m.unit)}{note}")
+    shown = "\n".join(lines)
+    conflict = "these limits conflict" if len(lines) > 1 else "this limit stands in the way"
+    return (
+        f"nothing feasible after {state.evaluations} evaluations: {conflict}; "
+        f"the nearest design would need each relaxed to its own figure:\n{shown}"
+    )
+
+
+def _reached(value: float, unit: str) -> str:
+    return "no such figure" if np.isnan(value) else write(float(value), unit)
+
+
+def versions() -> dict[str, Any]:
+    """Return the versions that a figure may depend on."""
+    return {"optisize": optisize.__version__, "python": platform.python_version(), "numpy": np.__version__}
