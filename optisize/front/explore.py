@@ -7,15 +7,14 @@ import platform
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
-from typing import Any
 
 import numpy as np
 import pandas as pd
 
 import optisize
-from optisize.errors import NothingFeasible
+from optisize.errors import InputError, NothingFeasible
 from optisize.front.run import Run
-from optisize.front.table import design_table
+from optisize.front.table import design_table, sizes_of
 from optisize.problem.evaluate import Problem
 from optisize.process.law import Array
 from optisize.quantities import write
@@ -76,6 +75,29 @@ def survey(problem: Problem) -> Survey:
     return Survey(reference=worst + margin, ideal=best - margin)
 
 
+def settings_of(problem: Problem, **changes: int) -> Settings:
+    """Return the settings of a problem's search, with some of them changed."""
+    return Settings(**{**problem.settings.model_dump(), **changes})
+
+
+def resume(run: Run, *, generations: int | None = None, threads: int | None = None, watch: Watch | None = None) -> Run:
+    """Go on with a search: an interrupted one bit for bit, a finished one from its front.
+
+    Args:
+        run: as it was read back.
+        generations: in all; those of the problem where None.
+        threads, watch: as for `search`.
+    """
+    wanted = generations or run.problem.settings.generations
+    if run.state is not None:
+        state = genetic.extended(run.state, wanted) if generations else run.state
+        return search(run.problem, threads=threads, watch=watch, state=state, settings=state.settings)
+    if not len(run.front):
+        raise InputError(f"{run.path}: has no design to go on from")
+    settings = settings_of(run.problem, seed=int(run.info["seed"]) + 1, generations=wanted)
+    return search(run.problem, threads=threads, watch=watch, seeds=sizes_of(run.problem, run.front), settings=settings)
+
+
 def search(
     problem: Problem,
     *,
@@ -102,7 +124,7 @@ def search(
     begin = time.perf_counter()
     evaluator = Evaluator(problem, threads or os.cpu_count() or 1)
     if settings is None:
-        settings = Settings(**problem.settings.model_dump())
+        settings = settings_of(problem)
     if state is None:
         box = survey(problem)
         state = genetic.start(
@@ -191,8 +213,3 @@ def explain_infeasible(problem: Problem, state: State) -> str:
 
 def _reached(value: float, unit: str) -> str:
     return "no such figure" if np.isnan(value) else write(float(value), unit)
-
-
-def versions() -> dict[str, Any]:
-    """Return the versions that a figure may depend on."""
-    return {"optisize": optisize.__version__, "python": platform.python_version(), "numpy": np.__version__}

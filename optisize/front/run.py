@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import contextlib
 import json
 import os
 import shutil
@@ -46,27 +45,34 @@ class Run:
     state: State | None = None
     path: Path | None = field(default=None)
 
-    def save(self, directory: str | Path) -> Path:
+    def save(self, directory: str | Path, *, replace: bool = False) -> Path:
         """Write the run as a directory, whole or not at all; return its path.
 
-        Raises InputError when it exists, OptisizeError when it cannot be written.
+        Args:
+            directory: where to.
+            replace: whether a run that is there gives way to this one.
+
+        Raises:
+            InputError: it exists.
+            OptisizeError: it cannot be written.
         """
         target = Path(directory)
-        check_free(target)
+        if not replace:
+            check_free(target)
         try:
             target.parent.mkdir(parents=True, exist_ok=True)
             beside = Path(tempfile.mkdtemp(prefix=f".{target.name}.", dir=target.parent))
+            try:
+                self._write(beside)
+                beside.chmod(0o755)
+                if replace and target.exists():
+                    os.rename(target, beside.with_name(f"{beside.name}.old"))
+                os.rename(beside, target)
+            finally:
+                for leftover in (beside, beside.with_name(f"{beside.name}.old")):
+                    shutil.rmtree(leftover, ignore_errors=True)
         except OSError as error:
             raise OptisizeError(f"{target}: cannot be written: {error.strerror or error}") from None
-        try:
-            self._write(beside)
-            beside.chmod(0o755)
-            os.rename(beside, target)
-        except OSError as error:
-            raise OptisizeError(f"{target}: cannot be written: {error.strerror or error}") from None
-        finally:
-            with contextlib.suppress(OSError):
-                shutil.rmtree(beside)
         self.path = target
         return target
 

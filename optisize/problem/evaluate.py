@@ -74,6 +74,11 @@ class Limit:
         """Tell whether the limit is met, rounding aside, (N,) of bool."""
         return self.violation(values) <= TOLERANCE
 
+    def distance(self, values: Array, bound: float) -> Array:
+        """Return how far values are from one of the bounds, on the scale of `violation`, (N,)."""
+        magnitude = np.abs(values) if self.measure.signed else values
+        return np.abs(self._units(magnitude) - self._units(np.asarray(bound)))
+
     def _units(self, values: Array) -> Array:
         if self.measure.scale == "log":
             return np.log2(np.maximum(values, 1e-30))

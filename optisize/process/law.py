@@ -90,6 +90,9 @@ class Law(Protocol):
 def taken(array: Array, rows: Pick, columns: Pick) -> Array:
     """Index the two axes of a parameter array, either of which may have length one for "the same for all"."""
     part = array if array.shape[0] == 1 else array[rows]
-    if part.shape[1] == 1:
-        return part
-    return part[:, columns] if isinstance(columns, slice) else part.take(columns, axis=1)
+    return part if part.shape[1] == 1 else picked(part, columns)
+
+
+def picked(array: Array, columns: Pick) -> Array:
+    """Index the columns of an array that has one for every design, however few they are."""
+    return array[:, columns] if isinstance(columns, slice) else array.take(columns, axis=1)

@@ -97,14 +97,14 @@ def operating_point(
     converged = np.zeros(circuit.designs, dtype=bool)
     active: Indices = np.arange(circuit.designs)
     part, moving, pinned = circuit, v.copy(), np.zeros(circuit.designs, dtype=int)
-    for _ in range(ITERATIONS):
+    for left in reversed(range(ITERATIONS)):
         size = newton_step(part, moving)
         done = size < settled
         if done.all() and len(done) == circuit.designs:
             return OperatingPoint(moving, done)
         pinned = np.where(_at_bound(part, moving), pinned + 1, 0)
         over = done | (pinned >= PINNED)
-        if 3 * np.count_nonzero(over) > len(over):
+        if not left or 3 * np.count_nonzero(over) > len(over):
             v[:, active[done]] = moving[:, done]
             converged[active[done]] = True
             active = active[~over]

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.card import Process
-from optisize.process.law import Array, Drain, Law, Pick, taken
+from optisize.process.law import Array, Drain, Law, Pick, picked, taken
 from optisize.stage.layout import Drawn, draw_transistors, resistor_area, resistor_length
 from optisize.stage.linear import Pattern
 from optisize.stage.topology import DRIVEN, Topology
@@ -288,7 +288,7 @@ class Circuit:
         """Return the same circuit for some of the designs."""
         every = slice(None)
         chosen = {
-            name: taken(getattr(self, name), every, columns)
+            name: picked(getattr(self, name), columns)
             for name in ("units", "width", "length", "conductances", "currents")
         }
         return Circuit(

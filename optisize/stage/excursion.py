@@ -67,7 +67,7 @@ def follow(circuit: Circuit, start: Array, rest: Linearised, drive: Array, sign:
     for iteration in range(ITERATIONS):
         here = rest if iteration == 0 else _linearised(part, pv, drive)
         done = _step(part, here, pv, pa, drive, ps)
-        if done.all() or 3 * np.count_nonzero(done) > len(done):
+        if iteration == ITERATIONS - 1 or 3 * np.count_nonzero(done) > len(done):
             v[:, active[done]], amplitude[active[done]] = pv[:, done], pa[done]
             found[active[done]] = True
             left = np.flatnonzero(~done)

@@ -1,0 +1,58 @@
+"""What a front says in a few lines: its extremes, and the limits that shape it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from optisize.front.run import Run
+from optisize.front.table import column
+
+AT_BOUND = 0.03  # in the units of a limit's violation: 2 % of a logarithmic measure, a little of a linear one
+
+
+@dataclass(frozen=True)
+class Extreme:
+    """The design that is best in one goal, with its values of all goals."""
+
+    goal: str
+    design: int
+    values: dict[str, float]
+
+
+@dataclass(frozen=True)
+class Binding:
+    """A limit at which designs of the front stand, and what share of them."""
+
+    name: str
+    unit: str
+    bound_name: str
+    bound: float
+    share: float
+
+
+def extremes(run: Run) -> list[Extreme]:
+    """Return the best design of each goal."""
+    result = []
+    goals = run.problem.goals
+    columns = {g.measure.name: column(g.measure.name, g.measure.unit) for g in goals}
+    for goal in goals:
+        losses = goal.loss(run.front[columns[goal.measure.name]].to_numpy(dtype=float))
+        row = run.front.iloc[int(np.argmin(losses))]
+        values = {name: float(row[c]) for name, c in columns.items()}
+        result.append(Extreme(goal.measure.name, int(row["design"]), values))
+    return result
+
+
+def binding_limits(run: Run) -> list[Binding]:
+    """Return the limits at which some designs of the front stand, the most binding first."""
+    found = []
+    for limit in run.problem.limits:
+        m = limit.measure
+        values = run.front[column(m.name, m.unit)].to_numpy(dtype=float)
+        for name, bound in limit.bounds:
+            share = float(np.mean(limit.distance(values, bound) <= AT_BOUND)) if len(values) else 0.0
+            if share > 0.0:
+                found.append(Binding(m.name, m.unit, name, bound, share))
+    return sorted(found, key=lambda b: -b.share)

@@ -1,0 +1,188 @@
+"""Tables and summaries in the terminal: results on stdout, progress and messages on stderr."""
+
+from __future__ import annotations
+
+import math
+import sys
+import time
+from collections.abc import Iterable, Sequence
+
+import numpy as np
+import pandas as pd
+from rich.console import Console
+from rich.markup import escape
+from rich.table import Table
+
+from optisize.front.assess import Assessment
+from optisize.front.run import Run
+from optisize.front.summary import Binding, Extreme
+from optisize.front.table import column, unit_of
+from optisize.problem.evaluate import Problem
+from optisize.quantities import write
+from optisize.search.state import State
+from optisize.stage.measures import find
+
+CAUTION = "A starting point for your simulator, not a sign-off: layout, reliability and ESD need the foundry's models."
+
+
+def console(stderr: bool = False) -> Console:
+    """Return a console that keeps its lines whole when it is no terminal."""
+    out = Console(stderr=stderr, highlight=False)
+    if not out.is_terminal:
+        out = Console(stderr=stderr, highlight=False, width=200, no_color=True)
+    return out
+
+
+def _table(title: str, headings: Iterable[str], left: int = 1) -> Table:
+    """Return an empty table whose first `left` columns hold words and the rest numbers."""
+    table = Table(
+        title=escape(title) if title else None, title_justify="left", title_style="bold", box=None, pad_edge=False
+    )
+    for i, heading in enumerate(headings):
+        table.add_column(heading, justify="left" if i < left else "right", no_wrap=i >= left or i == 0, overflow="fold")
+    return table
+
+
+def print_table(title: str, headings: Sequence[str], rows: Iterable[Sequence[str]], left: int = 1) -> None:
+    """Print rows of text as a table on stdout."""
+    table = _table(title, headings, left)
+    for row in rows:
+        table.add_row(*(escape(cell) for cell in row))
+    console().print(table)
+
+
+class Progress:
+    """Shows how a search goes on: one line that is rewritten in a terminal, a line every few seconds elsewhere."""
+
+    def __init__(self, budget: int, quiet: bool = False) -> None:
+        """Prepare for a number of generations."""
+        self._budget = budget
+        self._quiet = quiet
+        self._begin = self._last = time.monotonic()
+        self._live = sys.stderr.isatty()
+
+    def __call__(self, state: State) -> None:
+        """Show the state of the search after a generation, if it is time to."""
+        now = time.monotonic()
+        if self._quiet or not state.records or now - self._last < (0.1 if self._live else 2.0):
+            return
+        self._last = now
+        record = state.records[-1]
+        text = (
+            f"generation {record.generation}/{self._budget}  evaluations {record.evaluations}  "
+            f"feasible {100 * record.feasible_share:.0f} %  hypervolume {record.hypervolume:.4f}"
+        )
+        print(f"\r{text}\x1b[K" if self._live else text, end="" if self._live else "\n", file=sys.stderr, flush=True)
+
+    def close(self) -> None:
+        """Leave the line."""
+        if self._live and not self._quiet and self._last > self._begin:
+            print("\r\x1b[K", end="", file=sys.stderr, flush=True)
+
+
+def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Binding]) -> None:
+    """Print what a search found: the extremes of the front, how many designs, which limits bind, time and place."""
+    info, problem = run.info, run.problem
+    goals = [(g.measure.name, g.measure.unit, g.sense) for g in problem.goals]
+    print_table(
+        problem.title,
+        ["best", *(f"{name} ({sense})" for name, _, sense in goals), "design"],
+        [[e.goal, *(write(e.values[name], unit) for name, unit, _ in goals), str(e.design)] for e in extremes],
+    )
+    out = console()
+    out.print(
+        f"{info['designs']} designs on the front, thinned from {info['archive']}; "
+        f"hypervolume {info['hypervolume']:.4f} of the box in run.json"
+    )
+    if binding:
+        parts = [f"{b.name} ({b.bound_name} {write(b.bound, b.unit)}: {100 * b.share:.0f} %)" for b in binding]
+        out.print("limits that bind, with the share of designs at each: " + escape(", ".join(parts)))
+    else:
+        out.print("no limit binds: the goals alone shape the front")
+    stopped = {"budget": "budget used up", "stalled": "stalled: no more gain", "interrupted": "interrupted"}
+    out.print(
+        f"{info['evaluations']} evaluations in {info['seconds']:.1f} s, {info['generations']} generations "
+        f"({stopped[info['stopped']]})"
+    )
+    out.print(f"run: {escape(str(run.path))}")
+    out.print(CAUTION)
+
+
+def print_front(run: Run, table: pd.DataFrame) -> None:
+    """Print designs: the goals first, then the sizes, then the limits."""
+    problem = run.problem
+    goals = [column(g.measure.name, g.measure.unit) for g in problem.goals]
+    sizes = [column(s.name, s.unit) for s in problem.topology.sizes]
+    free = [column(r.size.name, r.size.unit) for r in problem.space.free]
+    limits = [column(x.measure.name, x.measure.unit) for x in problem.limits]
+    chosen = list(dict.fromkeys(["design", *goals, *(c for c in sizes if c in free), *limits]))
+    headings = [c.split(" [")[0] for c in chosen]
+    rows = [
+        [str(int(row["design"]))] + [write(float(row[c]), unit_of(c)) for c in chosen[1:]]
+        for _, row in table[chosen].iterrows()
+    ]
+    print_table(f"{problem.title}: {len(table)} of {len(run.front)} designs", headings, rows, left=0)
+
+
+_SHOWN = {"id": "A", "vgs": "V", "vds": "V", "vdsat": "V", "gm": "S", "gds": "S", "inversion": ""}
+
+
+def print_assessment(problem: Problem, report: Assessment) -> None:
+    """Print a manual sizing: its measures, its operating point, its limits, and the front designs that beat it."""
+    units = {s.name: s.unit for s in problem.topology.sizes}
+    print_table(
+        "sizes, on the process grid", ["size", "value"], [[n, write(v, units[n])] for n, v in report.sizes.items()]
+    )
+    rows = [
+        [name, write(value, find(name, problem.topology).unit)]
+        for name, value in report.measures.items()
+        if "." not in name
+    ]
+    print_table("\nmeasures", ["measure", "value"], rows)
+    rows = [
+        [t, *(write(report.measures[f"{t}.{figure}"], unit, 3) for figure, unit in _SHOWN.items())]
+        for t in report.transistors
+    ]
+    print_table("\noperating point", ["transistor", *_SHOWN], rows)
+    rows = [
+        [
+            x["name"],
+            f"{x['kind']} {write(x['bound'], x['unit'])}",
+            write(x["value"], x["unit"]),
+            "met" if x["met"] else "MISSED",
+        ]
+        for x in report.limits
+    ]
+    print_table("\nlimits", ["limit", "bound", "value", ""], rows)
+    _print_better(problem, report)
+    console().print(CAUTION)
+
+
+def _print_better(problem: Problem, report: Assessment) -> None:
+    out = console()
+    if report.better is None:
+        out.print("\nno run of this problem to compare with: search it first, or name one with --against")
+        return
+    if not report.better:
+        out.print(f"\nno design of {escape(str(report.against))} beats this sizing in its goals")
+        return
+    goals = [(g.measure.name, g.measure.unit) for g in problem.goals]
+    rows = [[str(b.design), *(_gain(b.gains[name], unit) for name, unit in goals)] for b in report.better[:10]]
+    print_table(
+        f"\n{len(report.better)} designs of {report.against} beat this sizing; the furthest ahead",
+        ["design", *(name for name, _ in goals)],
+        rows,
+    )
+
+
+def _gain(value: float, unit: str) -> str:
+    return "as good" if value == 0.0 else f"better by {write(value, unit, 3)}"
+
+
+def json_number(value: float) -> float | str | None:
+    """Return a number as JSON can hold it: ``unlimited`` for infinity, null for what is undefined."""
+    if isinstance(value, np.generic):
+        value = value.item()
+    if math.isnan(value):
+        return None
+    return "unlimited" if math.isinf(value) else value
