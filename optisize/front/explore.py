@@ -21,6 +21,7 @@ from optisize.quantities import write
 from optisize.search import genetic
 from optisize.search.state import Evaluated, Settings, State
 
+BATCH = 800  # designs that are evaluated at once where the population is smaller
 SURVEY = 512  # designs of the fixed sample that sets the box in which the hypervolume is measured
 Watch = Callable[[State], None]
 
@@ -76,8 +77,12 @@ def survey(problem: Problem) -> Survey:
 
 
 def settings_of(problem: Problem, **changes: int) -> Settings:
-    """Return the settings of a problem's search, with some of them changed."""
-    return Settings(**{**problem.settings.model_dump(), **changes})
+    """Return the settings of a problem's search, with some of them changed.
+
+    A small population is bred in broods, so that the arrays of the evaluation are not too small to be fast.
+    """
+    chosen = {**problem.settings.model_dump(), **changes}
+    return Settings(**{"brood": max(1, BATCH // chosen["population"]), **chosen})
 
 
 def resume(run: Run, *, generations: int | None = None, threads: int | None = None, watch: Watch | None = None) -> Run:

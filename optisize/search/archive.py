@@ -17,7 +17,7 @@ from optisize.search.ranking import distinct
 
 _EXACT_GOALS = 4  # exact hypervolume up to here: above, its cost grows as size ** (goals - 2)
 _DIRECTIONS = 4096  # of the approximation above; within about 1 % for five to ten goals
-_GATHER, _GROWTH = 3, 0.75  # gather so many populations before a merge, and this share of the archive
+_GATHER, _GROWTH = 0.5, 0.05  # gather so many populations before a merge, and this share of the archive
 
 
 @dataclass(frozen=True)

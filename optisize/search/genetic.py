@@ -75,18 +75,19 @@ def start(
 
 
 def step(state: State, evaluate: Evaluate) -> State:
-    """The state after one more generation; the given one remains as it is."""
+    """The state after one more generation, or as many as are bred at once; the given one remains as it is."""
     settings = state.settings
     random = Generator(PCG64(0))
     random.bit_generator.state = state.random
+    brood = max(min(settings.brood, settings.generations - state.generation), 1)
     vectors = offspring(
         np.clip(state.population.vectors, 0.0, 1.0),
-        settings.population,
+        settings.population * brood,
         de_share=settings.de_share,
         fresh=state.repeats,
         random=random,
     )
-    return advanced(state, evaluated(evaluate, vectors, state.ideal.size), random)
+    return advanced(state, evaluated(evaluate, vectors, state.ideal.size), random, brood)
 
 
 def run(state: State, evaluate: Evaluate, *, on_generation: Callable[[State], None] | None = None) -> State:
@@ -126,8 +127,8 @@ def evaluated(evaluate: Evaluate, vectors: Floats, goals: int) -> Evaluated:
     return result
 
 
-def advanced(state: State, newcomers: Evaluated, random: Generator) -> State:
-    """The state after newcomers have competed with the population and the record of the generation is written."""
+def advanced(state: State, newcomers: Evaluated, random: Generator, generations: int = 1) -> State:
+    """The state after newcomers have competed with the population and the record of the generations is written."""
     merged = Evaluated(
         np.concatenate((state.population.vectors, newcomers.vectors), axis=1),
         np.concatenate((state.population.losses, newcomers.losses), axis=1),
@@ -142,7 +143,8 @@ def advanced(state: State, newcomers: Evaluated, random: Generator) -> State:
     arrived = merged.take(new.nonzero()[0])
     archive = state.archive.add(Front(arrived.vectors, arrived.losses))
     population, normalisation = _survived(state, merged, rank, random)
-    archive, record = _recorded(state, archive, population, state.evaluations + newcomers.size)
+    generation, evaluations = state.generation + generations, state.evaluations + newcomers.size
+    archive, record = _recorded(state, archive, population, generation, evaluations)
     return replace(
         state,
         population=population,
@@ -171,9 +173,10 @@ def _survived(
     return merged.take(best), known
 
 
-def _recorded(state: State, archive: Archive, population: Evaluated, evaluations: int) -> tuple[Archive, Record]:
+def _recorded(
+    state: State, archive: Archive, population: Evaluated, generation: int, evaluations: int
+) -> tuple[Archive, Record]:
     """The record of the generation that follows the state, and its archive, measured if that is due."""
-    generation = state.generation + 1
     hypervolume = state.records[-1].hypervolume if state.records else 0.0
     last_chance = archive.gathered > 0 and _out_of_patience(state, generation)
     if last_chance or archive.due(state.settings.population):

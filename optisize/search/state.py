@@ -49,7 +49,9 @@ class Settings:
 
     population: designs a generation; generations: how many in all, the first sample counting as one; seed: of all that
     is random; patience: generations without a relative improvement of the hypervolume by more than 1e-4 after which the
-    search stops, 0 = never; de_share: the part of the offspring made by differential-evolution variation, 0 to 1.
+    search stops, 0 = never; de_share: the part of the offspring made by differential-evolution variation, 0 to 1;
+    brood: how many generations' worth of offspring are bred from one population and compete together: evaluating a few
+    large arrays costs less than many small ones, and the fronts are as good.
     """
 
     population: int = 200
@@ -57,9 +59,12 @@ class Settings:
     seed: int = 1
     patience: int = 60
     de_share: float = 0.5
+    brood: int = 1
 
     def __post_init__(self) -> None:
         if self.population < 1 or self.generations < 1 or self.patience < 0 or not 0.0 <= self.de_share <= 1.0:
+            raise ValueError(f"settings out of range: {self}")
+        if self.brood < 1:
             raise ValueError(f"settings out of range: {self}")
 
 

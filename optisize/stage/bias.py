@@ -96,21 +96,21 @@ def operating_point(
     v = np.concatenate([begin[: circuit.wiring.unknowns], driven])
     converged = np.zeros(circuit.designs, dtype=bool)
     active: Indices = np.arange(circuit.designs)
-    part, moving, pinned = circuit, v.copy(), np.zeros(circuit.designs, dtype=int)
-    for left in reversed(range(ITERATIONS)):
-        size = newton_step(part, moving)
-        done = size < settled
-        if done.all() and len(done) == circuit.designs:
-            return OperatingPoint(moving, done)
+    part, moving = circuit, v.copy()
+    over, pinned = np.zeros(circuit.designs, dtype=bool), np.zeros(circuit.designs, dtype=int)
+    for _ in range(ITERATIONS):
+        # Each design is read at its own last step, so that it does not depend on those beside it.
+        fresh = (newton_step(part, moving) < settled) & ~over
+        v[:, active[fresh]] = moving[:, fresh]
+        converged[active[fresh]] = True
         pinned = np.where(_at_bound(part, moving), pinned + 1, 0)
-        over = done | (pinned >= PINNED)
-        if not left or 3 * np.count_nonzero(over) > len(over):
-            v[:, active[done]] = moving[:, done]
-            converged[active[done]] = True
-            active = active[~over]
+        over |= fresh | (pinned >= PINNED)
+        if 3 * np.count_nonzero(over) > len(over):
+            left = np.flatnonzero(~over)
+            active = active[left]
             if not len(active):
                 break
-            part, moving, pinned = part.take(np.flatnonzero(~over)), moving[:, ~over], pinned[~over]
+            part, moving, pinned, over = part.take(left), moving[:, left], pinned[left], over[left]
     return OperatingPoint(v, converged)
 
 
@@ -138,10 +138,11 @@ def regular_solve(circuit: Circuit, matrix: Array, right: Array) -> Array:
     solution = solve(matrix, right, pattern)
     if np.isfinite(solution.sum()):
         return solution
-    leaky = matrix.copy()
-    unknowns = np.arange(len(matrix))
+    bad = np.flatnonzero(~np.isfinite(solution.sum(axis=(0, 1))))
+    leaky, unknowns = matrix[..., bad], np.arange(len(matrix))
     leaky[unknowns, unknowns] += LEAK
-    return solve(leaky, right, pattern)
+    solution[..., bad] = solve(leaky, right[..., bad], pattern)
+    return solution
 
 
 def _at_bound(circuit: Circuit, v: Array) -> NDArray[np.bool_]:

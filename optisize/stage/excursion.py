@@ -64,17 +64,20 @@ def follow(circuit: Circuit, start: Array, rest: Linearised, drive: Array, sign:
     found = np.zeros(circuit.designs, dtype=bool)
     active: NDArray[np.intp] = np.arange(circuit.designs)
     part, pv, pa, ps = circuit, v.copy(), amplitude.copy(), sign
+    over = found.copy()
     for iteration in range(ITERATIONS):
         here = rest if iteration == 0 else _linearised(part, pv, drive)
-        done = _step(part, here, pv, pa, drive, ps)
-        if iteration == ITERATIONS - 1 or 3 * np.count_nonzero(done) > len(done):
-            v[:, active[done]], amplitude[active[done]] = pv[:, done], pa[done]
-            found[active[done]] = True
-            left = np.flatnonzero(~done)
+        # Each design is read at its own last step, so that it does not depend on those beside it.
+        fresh = _step(part, here, pv, pa, drive, ps) & ~over
+        v[:, active[fresh]], amplitude[active[fresh]] = pv[:, fresh], pa[fresh]
+        found[active[fresh]] = True
+        over |= fresh
+        if 3 * np.count_nonzero(over) > len(over):
+            left = np.flatnonzero(~over)
             active = active[left]
             if not len(active):
                 break
-            part, pv, pa, ps = part.take(left), pv[:, left], pa[left], ps[left]
+            part, pv, pa, ps, over = part.take(left), pv[:, left], pa[left], ps[left], over[left]
     return Excursion(v=v, amplitude=amplitude, found=found)
 
 

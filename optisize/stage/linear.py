@@ -151,6 +151,7 @@ def crossing(transfer: Transfer, level: Array, start: Array) -> Array:
     target = np.log(level)
     result = np.full(len(level), np.nan)
     active: NDArray[np.intp] = np.arange(len(level))
+    over = np.zeros(len(level), dtype=bool)
     part, x0 = transfer, np.log(start)
     f0 = part.fall(x0) - target
     x1 = x0 - np.clip(0.5 * f0, -3.0, 3.0)
@@ -161,15 +162,19 @@ def crossing(transfer: Transfer, level: Array, start: Array) -> Array:
         slope = np.where((slope > 0.3) & (slope < 12.0), slope, 2.0)
         step = np.clip(-f1 / slope, -2.0, 2.0)
         x0, f0, x1 = x1, f1, x1 + step
-        done = np.abs(step) < CROSSING_DONE
-        if done.all() or 3 * np.count_nonzero(done) > len(done):
-            result[active[done]] = np.exp(x1[done])
-            left = np.flatnonzero(~done)
+        # Each design is read at its own last step, so that it does not depend on those beside it.
+        fresh = (np.abs(step) < CROSSING_DONE) & ~over
+        result[active[fresh]] = np.exp(x1[fresh])
+        over |= fresh
+        if 3 * np.count_nonzero(over) > len(over):
+            left = np.flatnonzero(~over)
             active = active[left]
             if not len(active):
                 return result
-            part, x0, x1, f0 = part.take(left), x0[left], x1[left], f0[left]
-    result[active] = _searched_crossing(part, target[active], np.log(start[active]))
+            part, x0, x1, f0, over = part.take(left), x0[left], x1[left], f0[left], over[left]
+    left = np.flatnonzero(~over)
+    active = active[left]
+    result[active] = _searched_crossing(part.take(left), target[active], np.log(start[active]))
     return result
 
 
