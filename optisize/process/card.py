@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
 from functools import cached_property
 from importlib import resources
@@ -161,10 +162,10 @@ def locate_process(name: str, beside: Path | None = None) -> Path:
     if name in built_in_names():
         return Path(str(resources.files("optisize.process").joinpath("data", f"{name}.toml")))
     for candidate in ([beside / name] if beside is not None else []) + [Path(name)]:
-        if candidate.is_file():
+        if os.path.isfile(candidate):
             return candidate
     raise InputError(
-        f'process "{name}" is neither built in nor a file; built in are {listing(built_in_names())}'
+        f"process {shorten(name)} is neither built in nor a file; built in are {listing(built_in_names())}"
         f"{nearest(name, built_in_names())}"
     )
 

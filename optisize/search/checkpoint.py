@@ -45,6 +45,7 @@ def to_arrays(state: State) -> Arrays:
         "pending.vectors": np.concatenate([part.vectors for part in waiting], axis=1),
         "pending.losses": np.concatenate([part.losses for part in waiting], axis=1),
         "pending.sizes": np.array([part.size for part in archive.pending], dtype=np.int64),
+        "shares": np.array(state.shares),
         "mark": np.array(astuple(state.mark)),
         "records": np.array([astuple(record) for record in state.records], dtype=float),
     }
@@ -69,6 +70,7 @@ def from_arrays(arrays: Mapping[str, NDArray[Any]]) -> State:
         population=Evaluated(*(arrays[f"population.{name}"] for name in ("vectors", "losses", "violation"))),
         archive=_archive(arrays),
         random=json.loads(str(arrays["random"])),
+        shares=tuple(arrays["shares"].tolist()),
         mark=Mark(hypervolume, violation, int(generation)),
         normalisation=known,
         records=tuple(_record(row) for row in arrays["records"]),

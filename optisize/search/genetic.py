@@ -14,11 +14,10 @@ from dataclasses import replace
 import numpy as np
 from numpy.random import PCG64, Generator
 
-from optisize.search import ranking
+from optisize.search import ranking, variation
 from optisize.search.archive import Archive, Front
 from optisize.search.arrays import Floats, Indices
 from optisize.search.state import Evaluate, Evaluated, Mark, Normalisation, Record, Settings, State, Stopped
-from optisize.search.variation import offspring
 
 IMPROVEMENT = 1e-4  # the least relative progress that keeps a search from being called stalled
 NICHING_GOALS = 4  # from here on survival by niches
@@ -80,14 +79,10 @@ def step(state: State, evaluate: Evaluate) -> State:
     random = Generator(PCG64(0))
     random.bit_generator.state = state.random
     brood = max(min(settings.brood, settings.generations - state.generation), 1)
-    vectors = offspring(
-        np.clip(state.population.vectors, 0.0, 1.0),
-        settings.population * brood,
-        de_share=settings.de_share,
-        fresh=state.repeats,
-        random=random,
-    )
-    return advanced(state, evaluated(evaluate, vectors, state.ideal.size), random, brood)
+    counts = variation.split(settings.population * brood, state.shares)
+    parents = np.clip(state.population.vectors, 0.0, 1.0)
+    vectors = variation.offspring(parents, state.population.losses, counts, fresh=state.repeats, random=random)
+    return advanced(state, evaluated(evaluate, vectors, state.ideal.size), random, brood, counts)
 
 
 def run(state: State, evaluate: Evaluate, *, on_generation: Callable[[State], None] | None = None) -> State:
@@ -127,8 +122,13 @@ def evaluated(evaluate: Evaluate, vectors: Floats, goals: int) -> Evaluated:
     return result
 
 
-def advanced(state: State, newcomers: Evaluated, random: Generator, generations: int = 1) -> State:
-    """The state after newcomers have competed with the population and the record of the generations is written."""
+def advanced(
+    state: State, newcomers: Evaluated, random: Generator, generations: int = 1, counts: tuple[int, ...] = ()
+) -> State:
+    """The state after newcomers have competed with the population and the record of the generations is written.
+
+    counts: how many of the newcomers each kind of variation made, in order.
+    """
     merged = Evaluated(
         np.concatenate((state.population.vectors, newcomers.vectors), axis=1),
         np.concatenate((state.population.losses, newcomers.losses), axis=1),
@@ -142,7 +142,8 @@ def advanced(state: State, newcomers: Evaluated, random: Generator, generations:
     new = (once >= state.population.size) & (rank == 0) & (merged.violation <= 0.0)
     arrived = merged.take(new.nonzero()[0])
     archive = state.archive.add(Front(arrived.vectors, arrived.losses))
-    population, normalisation = _survived(state, merged, rank, random)
+    best, normalisation = _survived(state, merged, rank, random)
+    population = merged.take(best)
     generation, evaluations = state.generation + generations, state.evaluations + newcomers.size
     archive, record = _recorded(state, archive, population, generation, evaluations)
     return replace(
@@ -153,6 +154,7 @@ def advanced(state: State, newcomers: Evaluated, random: Generator, generations:
         generation=record.generation,
         evaluations=record.evaluations,
         repeats=repeats,
+        shares=variation.rewarded(state.shares, counts, once[best] - state.population.size),
         mark=_marked(state.mark, record),
         normalisation=normalisation,
         records=(*state.records, record),
@@ -161,16 +163,16 @@ def advanced(state: State, newcomers: Evaluated, random: Generator, generations:
 
 def _survived(
     state: State, merged: Evaluated, rank: Indices, random: Generator
-) -> tuple[Evaluated, Normalisation | None]:
-    """The best of the merged designs as the next population, best first; what NSGA-III then knows of the losses."""
+) -> tuple[Indices, Normalisation | None]:
+    """Positions of the next population among the merged designs, best first; what NSGA-III knows of the losses."""
     count = state.settings.population
     if merged.losses.shape[0] < NICHING_GOALS:
-        return merged.take(ranking.survivors(merged.losses, rank, count)), None
+        return ranking.survivors(merged.losses, rank, count), None
     from optisize.search import niching
 
     scaled = (merged.losses - state.ideal[:, None]) / (state.reference - state.ideal)[:, None]
     best, known = niching.survivors(scaled, merged.violation <= 0.0, rank, count, state.normalisation, random)
-    return merged.take(best), known
+    return best, known
 
 
 def _recorded(

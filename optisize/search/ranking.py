@@ -113,6 +113,10 @@ def survivors(losses: Floats, rank: Indices, count: int) -> Indices:
     """
     best = (rank == 0).nonzero()[0]
     order: Indices = best[np.argsort(-contributions(losses[:, best]), kind="stable")]
+    while order.size > count:
+        # Of a cluster each design contributes little, but one of it has to stay: not all that is too many goes at once.
+        order = order[: max(count, order.size - max(count // 4, (order.size - count) // 2))]
+        order = order[np.argsort(-contributions(losses[:, order]), kind="stable")]
     if best.size >= count:
         return order[:count]
     rest = (rank > 0).nonzero()[0]

@@ -15,6 +15,8 @@ import numpy as np
 from optisize.search.archive import Archive, Front
 from optisize.search.arrays import Floats, Indices
 
+SHARES = (0.4, 0.3, 0.3)  # at the start: crossover and mutation, differences of all, differences of neighbours
+
 Stopped: TypeAlias = Literal["", "budget", "stalled", "interrupted"]
 
 
@@ -49,22 +51,18 @@ class Settings:
 
     population: designs a generation; generations: how many in all, the first sample counting as one; seed: of all that
     is random; patience: generations without a relative improvement of the hypervolume by more than 1e-4 after which the
-    search stops, 0 = never; de_share: the part of the offspring made by differential-evolution variation, 0 to 1;
-    brood: how many generations' worth of offspring are bred from one population and compete together: evaluating a few
-    large arrays costs less than many small ones, and the fronts are as good.
+    search stops, 0 = never; brood: how many generations' worth of offspring are bred from one population and compete
+    together: evaluating a few large arrays costs less than many small ones.
     """
 
     population: int = 200
     generations: int = 200
     seed: int = 1
     patience: int = 60
-    de_share: float = 0.5
     brood: int = 1
 
     def __post_init__(self) -> None:
-        if self.population < 1 or self.generations < 1 or self.patience < 0 or not 0.0 <= self.de_share <= 1.0:
-            raise ValueError(f"settings out of range: {self}")
-        if self.brood < 1:
+        if self.population < 1 or self.generations < 1 or self.patience < 0 or self.brood < 1:
             raise ValueError(f"settings out of range: {self}")
 
 
@@ -110,7 +108,8 @@ class State:
 
     reference and ideal (M,): the box in which the hypervolume is measured, as the share of it that is dominated;
     population: best first; random: the state of the generator; repeats: designs of the last generation that were known
-    already; stopped: why the search is not going on ("" while it is).
+    already; shares: of the offspring that each kind of variation makes; stopped: why the search is not going on (""
+    while it is).
     """
 
     settings: Settings
@@ -122,6 +121,7 @@ class State:
     generation: int = 0
     evaluations: int = 0
     repeats: int = 0
+    shares: tuple[float, ...] = SHARES
     mark: Mark = Mark()
     normalisation: Normalisation | None = None
     records: tuple[Record, ...] = ()

@@ -21,18 +21,52 @@ MUTATION_ETA = 20.0  # each coordinate with probability 1 / D
 DE_CROSSOVER = (0.9, 0.2)
 LEAST_FACTOR, MOST_FACTOR = 0.05, 0.9
 PULLED_SHARE = 0.5
+LEAST_SHARE = 0.2
+LEARNING = 0.2
+NEIGHBOURS = 12
+ANYONE_SHARE = 0.1
+FOLLOWED_FACTOR = (0.4, 0.9)
 
 
-def offspring(parents: Floats, count: int, *, de_share: float, fresh: int, random: Generator) -> Floats:
-    """New vectors (D, count) from parents (D, N) in [0, 1], which are ordered best first.
+def split(count: int, shares: tuple[float, ...]) -> tuple[int, ...]:
+    """How many of `count` offspring each kind of variation makes: its share, rounded, the last one what is left."""
+    whole = [int(share * count) for share in shares[:-1]]
+    return (*whole, count - sum(whole))
 
-    A share of them by differential evolution, the others by crossover and mutation. `fresh` of them get one coordinate
-    drawn anew: as many as the last generation repeated known designs, so that a space of a few coarse steps, in which
-    small moves snap back to where they began, is still left for another part of it.
+
+def rewarded(shares: tuple[float, ...], counts: tuple[int, ...], survived: Indices) -> tuple[float, ...]:
+    """The shares of the kinds of variation, moved towards those whose offspring survive.
+
+    counts: how many offspring each kind made; survived: positions of the survivors among the offspring, in the order
+    of the kinds (negative for survivors that were there before). No share falls below a fifth, so that none is lost
+    for the time when it is needed. Adaptive choice of operators is common practice, no source.
     """
-    by_difference = round(de_share * count)
-    bred = mutated(crossed(parents, count - by_difference, random), random)
-    return redrawn(np.concatenate((bred, differed(parents, by_difference, random)), axis=1), fresh, random)
+    made = np.array(counts, dtype=float)
+    if not made.all():
+        return shares
+    kinds = np.searchsorted(np.cumsum(made), survived[survived >= 0], side="right")
+    rate = np.bincount(kinds, minlength=made.size)[: made.size] / made
+    if rate.sum() <= 0.0:
+        return shares
+    moved = (1.0 - LEARNING) * np.array(shares) + LEARNING * rate / rate.sum()
+    kept = np.maximum(moved, LEAST_SHARE)
+    return tuple((kept / kept.sum()).tolist())
+
+
+def offspring(parents: Floats, losses: Floats, counts: tuple[int, ...], *, fresh: int, random: Generator) -> Floats:
+    """New vectors (D, sum of counts) from parents (D, N) in [0, 1] with losses (M, N), which are ordered best first.
+
+    The first by crossover and mutation, the second by differential evolution among all, the third among neighbours on
+    the front. `fresh` of them get one coordinate drawn anew: as many as the last generation repeated known designs, so
+    that a space of a few coarse steps, in which small moves snap back to where they began, is still left for another
+    part of it.
+    """
+    parts = (
+        mutated(crossed(parents, counts[0], random), random),
+        differed(parents, counts[1], random),
+        followed(parents, losses, counts[2], random),
+    )
+    return redrawn(np.concatenate(parts, axis=1), fresh, random)
 
 
 def tournament(size: int, shape: tuple[int, ...], random: Generator) -> Indices:
@@ -85,6 +119,38 @@ def differed(parents: Floats, count: int, random: Generator) -> Floats:
     move += pull * (parents.take(towards, axis=1) - base)
     child: Floats = np.clip(base + changed * move, 0.0, 1.0)
     return child
+
+
+def followed(parents: Floats, losses: Floats, count: int, random: Generator) -> Floats:
+    """Children (D, count) of tournament winners, by adding a part of the difference of two of their neighbours.
+
+    Neighbours are the nearest parents in the losses: their differences lie along the front, so that the children of a
+    population that has reached it are on it or beyond, where differences between its far ends leave it. Mating among
+    neighbours follows Li, Zhang, Multiobjective optimization problems with complicated Pareto sets, MOEA/D and NSGA-II,
+    IEEE Transactions on Evolutionary Computation 13, 2009; as there, some mate with anyone.
+    """
+    size = parents.shape[1]
+    if count == 0 or size < 3:
+        return differed(parents, count, random)
+    base = tournament(size, (count,), random)
+    near = neighbours(losses, min(NEIGHBOURS, size - 1))[base]
+    mates = np.take_along_axis(near, random.integers(0, near.shape[1], (count, 2)), axis=1).T
+    mates = np.where(random.random((2, count)) < ANYONE_SHARE, random.integers(0, size, (2, count)), mates)
+    low, high = FOLLOWED_FACTOR
+    factor = low * (high / low) ** random.random(count)
+    move = factor * (parents.take(mates[0], axis=1) - parents.take(mates[1], axis=1))
+    child: Floats = np.clip(parents.take(base, axis=1) + move, 0.0, 1.0)
+    return child
+
+
+def neighbours(losses: Floats, count: int) -> Indices:
+    """The designs themselves and their nearest others in the losses (M, N), each goal scaled to its spread; (N, K)."""
+    from scipy.spatial import cKDTree
+
+    spread = np.maximum(np.ptp(losses, axis=1, keepdims=True), 1e-12)
+    rows = np.ascontiguousarray((losses / spread).T)
+    found: Indices = cKDTree(rows).query(rows, k=count + 1)[1]
+    return found
 
 
 def mutated(vectors: Floats, random: Generator) -> Floats:

@@ -16,7 +16,7 @@ ITERATIONS = 40
 BEYOND = 0.5  # V; how far beyond the rails a node may be sought
 PINNED = 5  # steps against that bound after which a design is given up: it has no operating point inside
 STEP_LIMIT = 0.25  # V; a step of any node beyond it shortens the whole step
-SETTLED = 3e-7  # V; the step after which the next one would be some pV (convergence is quadratic)
+SETTLED = 3e-8  # V; the step after which the next one would be at rounding (convergence is quadratic)
 LEAK = 1e-15  # S; keeps the matrix regular where every device at a node is off; not in the residual
 
 

@@ -105,7 +105,8 @@ def _step(
         step, change = (np.where(damping > 0.0, x * damping, 0.0) for x in (step, change))
     v += change
     amplitude += step
-    return moved < SETTLED
+    # What the residual asks for and what the drive moves may cancel each other: both have to be small.
+    return np.maximum(moved, np.abs(toward[:unknowns, 0]).max(axis=0)) < SETTLED
 
 
 def _margins(circuit: Circuit, here: Linearised, toward: Array) -> tuple[Array, Array, Array]:

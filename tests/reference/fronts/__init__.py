@@ -3,8 +3,8 @@
     python -m tests.reference.fronts
 
 remakes them: for each problem the union of the archives of ten runs (seeds 101 to 110) of ten times the default budget,
-without stopping early. What is stored is the box between the best and the worst loss of that union (one hundredth
-wider on the far side), and the hypervolume of the union in it, with the hashes of the problem and process files.
+without stopping early. What is stored is the box between the best and the worst loss of that union (a tenth wider on
+the far side: the reference point at 1.1 of the range that is customary for DTLZ2, CHECKS row 19), and the hypervolume of the union in it, with the hashes of the problem and process files.
 """
 
 from __future__ import annotations

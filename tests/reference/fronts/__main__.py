@@ -32,7 +32,7 @@ def main() -> None:
         rows = np.ascontiguousarray(np.concatenate(archives, axis=1).T)
         union = rows[moocore.is_nondominated(rows)].T
         best, worst = union.min(axis=1), union.max(axis=1)
-        worst = worst + 0.01 * (worst - best)
+        worst = worst + 0.1 * (worst - best)
         front = Front(np.empty((1, union.shape[1])), union)
         data = {
             "problem": name,

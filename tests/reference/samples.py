@@ -1,0 +1,96 @@
+"""Random sizings of every kind of stage, for the checks against a circuit simulator."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from optisize.process.card import Process, load_process
+from optisize.stage.analysis import Analysis
+from optisize.stage.circuit import Conditions, size_circuit
+from optisize.stage.topology import Topology, build
+
+DRAWS = {True: 2000, False: 12_000}  # sizings that are drawn in search of saturated ones, and of others
+
+
+@dataclass(frozen=True)
+class Kind:
+    """A kind of stage by the words of the problem file."""
+
+    input: str
+    load: str
+    tail: str
+    output: str = "single-ended"
+    bulk: str = "rail"
+
+    @property
+    def topology(self) -> Topology:
+        """The stage itself."""
+        return build(self.input, self.load, self.tail, self.output, self.bulk)
+
+    def __str__(self) -> str:
+        return "-".join((self.input, self.load, self.tail, self.output, self.bulk))
+
+
+EVERY_KIND = [
+    Kind(input, load, tail, output)
+    for input in ("nmos", "pmos")
+    for load, output in (("resistor", "single-ended"), ("resistor", "differential"), ("mirror", "single-ended"))
+    for tail in ("ideal", "single")
+]
+SOURCE_TIED = [
+    Kind("nmos", "resistor", "single", "differential", "source"),
+    Kind("pmos", "mirror", "single", bulk="source"),
+]
+
+# Widths and lengths in units of the shortest channel; currents [A]; voltage over a load resistor over the supply.
+WIDTHS, LENGTHS, CURRENTS, DROPS = (4.0, 600.0), (1.0, 20.0), (5e-7, 2e-4), (0.04, 0.9)
+
+
+def conditions(kind: Kind, process: Process) -> Conditions:
+    """Return conditions with the common mode on the side of the supply where the kind has its room."""
+    low, high = (0.5, 0.62) if kind.input == "nmos" else (0.38, 0.5)
+    supply = process.nominal.supply
+    return Conditions(supply=supply, common_mode=(low * supply, high * supply), load_capacitance=5e-13)
+
+
+def draw(kind: Kind, process: Process, count: int, seed: int) -> dict[str, np.ndarray]:
+    """Return random sizes, logarithmic over wide ranges."""
+    rng = np.random.default_rng(seed)
+
+    def between(low: float, high: float) -> np.ndarray:
+        return low * (high / low) ** rng.random(count)
+
+    unit = process.grid.minimum_length
+    sizes: dict[str, np.ndarray] = {}
+    for size in kind.topology.sizes:
+        if size.kind == "width":
+            sizes[size.name] = unit * between(*WIDTHS)
+        elif size.kind == "length":
+            sizes[size.name] = unit * between(*LENGTHS)
+        elif size.kind == "current":
+            sizes[size.name] = between(*CURRENTS)
+        elif size.kind == "count":
+            sizes[size.name] = rng.integers(1, 9, count).astype(float)
+    tail = sizes["tail.current"] if "tail.current" in sizes else sizes["tail.units"] * sizes["bias.current"]
+    if "load.resistance" in kind.topology.size_names:
+        sizes["load.resistance"] = between(*DROPS) * process.nominal.supply / (0.5 * tail)
+    return sizes
+
+
+def sized(kind: Kind, process_name: str, count: int, *, saturated: bool = True, seed: int = 1) -> Analysis:
+    """Return `count` random sizings that have an operating point, all saturated or all with a transistor in triode.
+
+    A sizing within 5 mV of the border between both is left out: there the first derivatives of the square law jump.
+    """
+    process = load_process(process_name)
+    where = conditions(kind, process)
+    sizes = draw(kind, process, DRAWS[saturated], seed)
+    a = Analysis(size_circuit(kind.topology, process, where, sizes))
+    room = a.room_at_rest
+    conducting = a.drain.id.min(axis=0) > 1e-8
+    good = a.converged & conducting & (room > 5e-3 if saturated else room < -5e-3)
+    picked = np.flatnonzero(good)[:count]
+    assert len(picked) == count, f"only {len(picked)} of {DRAWS[saturated]} sizings of {kind} can be used"
+    return Analysis(size_circuit(kind.topology, process, where, {name: v[picked] for name, v in sizes.items()}))
