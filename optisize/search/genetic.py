@@ -154,11 +154,19 @@ def advanced(
         generation=record.generation,
         evaluations=record.evaluations,
         repeats=repeats,
-        shares=variation.rewarded(state.shares, counts, once[best] - state.population.size),
+        shares=variation.rewarded(state.shares, counts, _improving(state, merged, once, best)),
         mark=_marked(state.mark, record),
         normalisation=normalisation,
         records=(*state.records, record),
     )
+
+
+def _improving(state: State, merged: Evaluated, once: Indices, best: Indices) -> Indices:
+    """Positions, among the newcomers, of the survivors that dominate a design of the population before them."""
+    position = once[best] - state.population.size
+    new = merged.take(best[position >= 0])
+    better = ranking.dominates(new.losses, new.violation, state.population.losses, state.population.violation)
+    return position[position >= 0][better.any(axis=1)]
 
 
 def _survived(

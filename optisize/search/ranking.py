@@ -13,7 +13,7 @@ import moocore
 import numpy as np
 from numpy.typing import NDArray
 
-from optisize.search.arrays import Floats, Indices
+from optisize.search.arrays import Floats, Indices, Mask
 
 _MEASURED_FROM = 1.2  # where hypervolume contributions are measured from, in ranges of the front
 
@@ -102,6 +102,16 @@ def _added(rows: Floats) -> Floats:
     return added
 
 
+def dominates(losses: Floats, violation: Floats, others: Floats, others_violation: Floats) -> Mask:
+    """Which designs, losses (M, N), dominate which others, (M, K), with constraint domination; (N, K)."""
+    ahead = (losses[:, :, None] <= others[:, None, :]).all(axis=0) & (losses[:, :, None] < others[:, None, :]).any(
+        axis=0
+    )
+    own, theirs = violation[:, None], others_violation[None, :]
+    both = np.maximum(own, theirs) <= 0.0
+    return np.where(both, ahead, own < theirs)
+
+
 def survivors(losses: Floats, rank: Indices, count: int) -> Indices:
     """Positions of the best `count` designs, best first: whole fronts, and the best of the front that does not fit.
 
@@ -115,7 +125,7 @@ def survivors(losses: Floats, rank: Indices, count: int) -> Indices:
     order: Indices = best[np.argsort(-contributions(losses[:, best]), kind="stable")]
     while order.size > count:
         # Of a cluster each design contributes little, but one of it has to stay: not all that is too many goes at once.
-        order = order[: max(count, order.size - max(count // 4, (order.size - count) // 2))]
+        order = order[: max(count, order.size - max(count // 4, (order.size - count) // 2, 1))]
         order = order[np.argsort(-contributions(losses[:, order]), kind="stable")]
     if best.size >= count:
         return order[:count]

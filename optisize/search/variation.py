@@ -21,8 +21,10 @@ MUTATION_ETA = 20.0  # each coordinate with probability 1 / D
 DE_CROSSOVER = (0.9, 0.2)
 LEAST_FACTOR, MOST_FACTOR = 0.05, 0.9
 PULLED_SHARE = 0.5
-LEAST_SHARE = 0.2
+SETTLED_SHARES = (0.1, 0.05, 0.85)  # once little improves: crossover and mutation, differences of all, of neighbours
+LEAST_SHARE = 0.05
 LEARNING = 0.2
+TELLING = 100  # offspring that improve the population, from which on their kinds alone decide
 NEIGHBOURS = 12
 ANYONE_SHARE = 0.1
 FOLLOWED_FACTOR = (0.4, 0.9)
@@ -34,23 +36,27 @@ def split(count: int, shares: tuple[float, ...]) -> tuple[int, ...]:
     return (*whole, count - sum(whole))
 
 
-def rewarded(shares: tuple[float, ...], counts: tuple[int, ...], survived: Indices) -> tuple[float, ...]:
-    """The shares of the kinds of variation, moved towards those whose offspring survive.
+def rewarded(shares: tuple[float, ...], counts: tuple[int, ...], improving: Indices) -> tuple[float, ...]:
+    """The shares of the kinds of variation, moved towards those whose offspring improve the population.
 
-    counts: how many offspring each kind made; survived: positions of the survivors among the offspring, in the order
-    of the kinds (negative for survivors that were there before). No share falls below a fifth, so that none is lost
-    for the time when it is needed. Adaptive choice of operators is common practice, no source.
+    Where few improve it the front is reached, and following it finds most of what is left; but no share falls below a
+    twentieth, so that none is lost for the time when it is needed. Adaptive choice of operators is common practice, no
+    source.
+
+    counts: how many offspring each kind made; improving: positions, among the offspring in the order of the kinds, of
+    those that dominate a design of the population before them.
     """
     made = np.array(counts, dtype=float)
     if not made.all():
         return shares
-    kinds = np.searchsorted(np.cumsum(made), survived[survived >= 0], side="right")
+    kinds = np.searchsorted(np.cumsum(made), improving, side="right")
     rate = np.bincount(kinds, minlength=made.size)[: made.size] / made
-    if rate.sum() <= 0.0:
-        return shares
-    moved = (1.0 - LEARNING) * np.array(shares) + LEARNING * rate / rate.sum()
-    kept = np.maximum(moved, LEAST_SHARE)
-    return tuple((kept / kept.sum()).tolist())
+    known = min(1.0, improving.size / TELLING)
+    wanted = (1.0 - known) * np.array(SETTLED_SHARES)
+    if improving.size:
+        wanted = wanted + known * rate / rate.sum()
+    moved = np.maximum((1.0 - LEARNING) * np.array(shares) + LEARNING * wanted, LEAST_SHARE)
+    return tuple((moved / moved.sum()).tolist())
 
 
 def offspring(parents: Floats, losses: Floats, counts: tuple[int, ...], *, fresh: int, random: Generator) -> Floats:

@@ -99,10 +99,10 @@ def test_an_interruption_keeps_the_last_whole_generation(when):
     ("dimensions", "levels", "goals", "population"),
     [(1, 2, 2, 200), (1, 5, 1, 50), (2, 3, 3, 20), (1, 3, 2, 1), (3, 2, 4, 10), (30, 2, 1, 20), (2, 4, 5, 12)],
 )
-@pytest.mark.parametrize("de_share", [0.0, 0.5, 1.0])
-def test_spaces_of_few_designs_are_searched_to_the_end(dimensions, levels, goals, population, de_share):
+@pytest.mark.parametrize("brood", [1, 3])
+def test_spaces_of_few_designs_are_searched_to_the_end(dimensions, levels, goals, population, brood):
     evaluate = coarse(levels, goals)
-    settings = {"population": population, "de_share": de_share, "generations": 200}
+    settings = {"population": population, "brood": brood, "generations": 200}
     state = run(begin(evaluate, dimensions, goals, reference=dimensions + 1.0, **settings), evaluate)
     assert state.stopped == "stalled"
     assert state.generation > 60
@@ -215,7 +215,7 @@ def test_senseless_starts_are_refused():
         begin(bnh, 2, 2, reference=0.0)
     with pytest.raises(ValueError, match="reference and ideal"):
         start(bnh, dimensions=2, goals=2, settings=Settings(), reference=np.ones(3), ideal=np.zeros(3))
-    for wrong in ({"population": 0}, {"generations": 0}, {"de_share": 1.5}, {"patience": -1}):
+    for wrong in ({"population": 0}, {"generations": 0}, {"brood": 0}, {"patience": -1}):
         with pytest.raises(ValueError, match="out of range"):
             Settings(**wrong)
 

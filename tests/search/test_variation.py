@@ -3,7 +3,21 @@
 import numpy as np
 import pytest
 
-from optisize.search.variation import SBX_ETA, crossed, differed, mutated, offspring, redrawn, tournament
+from optisize.search.variation import (
+    LEAST_SHARE,
+    SBX_ETA,
+    SETTLED_SHARES,
+    crossed,
+    differed,
+    followed,
+    mutated,
+    neighbours,
+    offspring,
+    redrawn,
+    rewarded,
+    split,
+    tournament,
+)
 
 
 @pytest.fixture
@@ -11,14 +25,48 @@ def random():
     return np.random.Generator(np.random.PCG64(7))
 
 
-@pytest.mark.parametrize("de_share", [0.0, 0.5, 1.0])
+@pytest.mark.parametrize("shares", [(1.0, 0.0, 0.0), (0.0, 1.0, 0.0), (0.0, 0.0, 1.0), (0.4, 0.3, 0.3)])
 @pytest.mark.parametrize(("dimensions", "size", "count"), [(7, 200, 200), (1, 1, 5), (3, 2, 1), (30, 50, 33)])
-def test_offspring_have_the_shape_asked_for_and_stay_in_the_unit_cube(random, de_share, dimensions, size, count):
-    parents = random.random((dimensions, size)).round(1)
-    parents.flags.writeable = False
-    children = offspring(parents, count, de_share=de_share, fresh=2, random=random)
+def test_offspring_have_the_shape_asked_for_and_stay_in_the_unit_cube(random, shares, dimensions, size, count):
+    parents, losses = random.random((dimensions, size)).round(1), random.random((3, size))
+    parents.flags.writeable = losses.flags.writeable = False
+    counts = split(count, shares)
+    assert sum(counts) == count
+    children = offspring(parents, losses, counts, fresh=2, random=random)
     assert children.shape == (dimensions, count)
     assert ((children >= 0.0) & (children <= 1.0)).all()
+
+
+def test_neighbours_are_the_nearest_in_the_scaled_losses(random):
+    losses = random.random((3, 60)) * np.array([[1.0], [1e6], [1e-6]])
+    scaled = losses / np.ptp(losses, axis=1, keepdims=True)
+    distance = np.linalg.norm(scaled[:, :, None] - scaled[:, None, :], axis=0)
+    np.testing.assert_array_equal(np.sort(neighbours(losses, 5)), np.sort(np.argsort(distance, axis=1)[:, :6]))
+
+
+def test_children_of_neighbours_stay_near_the_front(random):
+    """On a quarter circle, differences of neighbours keep children near it, differences of anyone do not."""
+    angle = np.sort(random.random(200)) * np.pi / 2
+    parents = 0.5 + 0.4 * np.array([np.cos(angle), np.sin(angle)])
+    off = [np.abs(np.hypot(*(v(4000) - 0.5)) - 0.4) for v in (
+        lambda n: followed(parents, parents, n, random),
+        lambda n: differed(parents, n, random),
+    )]  # fmt: skip
+    assert np.median(off[0]) < 0.2 * np.median(off[1])
+
+
+def test_shares_move_towards_the_variation_whose_offspring_improve_the_population():
+    shares, counts = (0.4, 0.3, 0.3), (400, 300, 300)
+    moved = rewarded(shares, counts, np.arange(400, 600))
+    assert moved[1] > shares[1]
+    assert sum(moved) == pytest.approx(1.0)
+    for _ in range(100):
+        moved = rewarded(moved, counts, np.arange(400, 600))
+    assert min(moved) >= 0.9 * LEAST_SHARE, "none is lost"
+    for _ in range(100):
+        moved = rewarded(moved, counts, np.arange(0))
+    np.testing.assert_allclose(moved, SETTLED_SHARES, atol=0.01, err_msg="nothing improves: the front is followed")
+    assert rewarded(shares, (), np.arange(2)) == shares, "the first sample was made by none of them"
 
 
 def test_tournaments_prefer_the_better_design_as_two_draws_do(random):
