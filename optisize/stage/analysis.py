@@ -12,10 +12,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array, Capacitances, Drain, Saturation
-from optisize.stage.bias import OperatingPoint, operating_point
-from optisize.stage.circuit import Circuit, Equations, Terminals
+from optisize.stage.bias import OperatingPoint, operating_point, settle
+from optisize.stage.circuit import Circuit
 from optisize.stage.excursion import Linearised, follow
 from optisize.stage.linear import Transfer, crossing, solve
+from optisize.stage.network import Equations, Network, Terminals
+from optisize.stage.wiring import Moving, moving
 
 RANGE_SETTLED = 2e-3  # V; leaves less than 0.1 mV at the ends of the range, where only the headroom is read
 UNLIMITED = 1e-11  # a common-mode gain below this part of the terms it is summed from is rounding, hence zero
@@ -37,25 +39,10 @@ class Analysis:
         return operating_point(self.circuit, self.circuit.driven(middle, middle))
 
     @cached_property
-    def range_points(self) -> OperatingPoint:
-        """The operating points at both ends of the common-mode range, (A, 2N): the low ends first."""
-        low, high = self.circuit.conditions.common_mode
-        if low == high:
-            return self.point
-        n, unknowns = self.circuit.designs, self.wiring.unknowns
-        twice, common = self.range_circuit, np.repeat([low, high], n)
-        start = np.concatenate([self.point.v, self.point.v], axis=1)
-        start[:unknowns] += np.concatenate([self.responses[:, 1]] * 2, axis=1) * (
-            common - self.circuit.conditions.middle
-        )
-        start = np.minimum(np.maximum(start, 0.0), self.circuit.conditions.supply)
-        return operating_point(twice, twice.driven(common, common), start, settled=RANGE_SETTLED)
-
-    @cached_property
-    def range_circuit(self) -> Circuit:
-        """The designs as often as `range_points` has ends."""
-        low, high = self.circuit.conditions.common_mode
-        return self.circuit if low == high else self.circuit.repeated(2)
+    def moving(self) -> tuple[Moving, Network]:
+        """The part of the stages that the inputs can move; the rest stays as it is at the operating point."""
+        part = moving(self.topology)
+        return part, self.circuit.network.part(part)
 
     def take(self, columns: NDArray[np.intp]) -> Analysis:
         """Return the analysis of some of the designs, with their operating points."""
@@ -71,7 +58,7 @@ class Analysis:
     @cached_property
     def terminals(self) -> Terminals:
         """The voltages at the terminals."""
-        return self.circuit.terminals(self.point.v)
+        return self.circuit.network.terminals(self.point.v)
 
     @cached_property
     def _solved(self) -> tuple[Drain, Saturation]:
@@ -96,7 +83,7 @@ class Analysis:
     @cached_property
     def equations(self) -> Equations:
         """The linearised equations with both drives."""
-        return self.circuit.equations(self.terminals, self.drain, self.drives)
+        return self.circuit.network.equations(self.terminals, self.drain, self.drives)
 
     @property
     def matrix(self) -> Array:
@@ -213,47 +200,73 @@ class Analysis:
     def room(self) -> Array:
         """Smallest vds - vdsat of the transistors that have to be saturated, worst over the range [V], (N,).
 
-        Not a number where an end of the range has no operating point.
+        The ends of the common-mode range are the worst. Not a number where one has no operating point.
         """
-        if self.range_points is self.point:
+        low, high = self.circuit.conditions.common_mode
+        if low == high:
             return self.room_at_rest
-        terminals = self.range_circuit.terminals(self.range_points.v)
-        room = _room(self.range_circuit, terminals, self.range_circuit.law.saturation(*terminals.of_law))
-        room = np.where(self.range_points.converged, room, np.nan)
-        return room.reshape(2, self.circuit.designs).min(axis=0)
+        part, network = self.moving
+        every = np.arange(self.circuit.designs)
+        twice, common = network.take(np.concatenate([every, every])), np.repeat([low, high], len(every))
+        start = np.concatenate([self.point.v, self.point.v], axis=1)
+        change = np.concatenate([self.responses[:, 1], self.responses[:, 1]], axis=1)
+        start[: self.wiring.unknowns] += change * (common - self.circuit.conditions.middle)
+        start = np.minimum(np.maximum(start, 0.0), self.circuit.conditions.supply)[part.nodes]
+        for node in ("in+", "in-"):
+            start[part.wiring.index[node]] = common
+        ends = settle(twice, start, RANGE_SETTLED)
+        terminals = twice.terminals(ends.v)
+        room = _room(twice, terminals, twice.law.saturation(*terminals.of_law))
+        room = np.where(ends.converged, room, np.nan).reshape(2, -1)
+        return np.minimum(np.minimum(room[0], room[1]), self.room_at_rest)
 
     @cached_property
     def room_at_rest(self) -> Array:
         """Smallest vds - vdsat in the middle of the common-mode range [V], (N,)."""
-        return _room(self.circuit, self.terminals, self.saturation)
+        return _room(self.circuit.network, self.terminals, self.saturation)
 
     def _at_rest(self, columns: NDArray[np.intp]) -> Linearised:
-        """Return the linearised stage of some designs with the differential drive."""
-
-        def chosen(record: Any) -> Any:
-            return type(record)(*(x[:, columns] for x in record))
-
+        """Return the linearised moving part of some designs with the differential drive."""
+        part, _ = self.moving
+        rows, solved = part.transistors, part.nodes[: part.wiring.unknowns]
+        pick = np.ix_(rows, columns)
+        gate, drain_voltage, source = (x[pick] for x in self.terminals.of_law)
+        terminals = Terminals(gate, drain_voltage, source, self.terminals.resistors[:, columns])
+        drain, saturation = Drain(*(x[pick] for x in self.drain)), Saturation(*(x[pick] for x in self.saturation))
         residual, matrix, pulls = self.equations
-        equations = Equations(residual[:, columns], matrix[..., columns], pulls[:, :1, columns])
-        return Linearised(chosen(self.terminals), chosen(self.drain), chosen(self.saturation), equations)
+        equations = Equations(
+            residual[np.ix_(solved, columns)],
+            matrix[np.ix_(solved, solved, columns)],
+            pulls[solved, :1][..., columns],
+        )
+        return Linearised(terminals, drain, saturation, equations)
 
     @cached_property
     def output_excursions(self) -> tuple[Array, Array]:
         """How far the output can go down and up from its rest [V], each (N,).
 
-        Zero where a transistor is out of saturation at rest; not a number where the end was not found.
+        Zero where a transistor is out of saturation at rest; not a number where the end was not found. Where both
+        sides of the stage are alike, what one side does under one drive the other does under the opposite one.
         """
-        moved = np.zeros((2, self.circuit.designs))
+        reach = np.zeros((2, self.circuit.designs))
         columns = np.flatnonzero(self.room_at_rest > 0.0)
-        if len(columns):
-            both = np.concatenate([columns, columns])
-            start = self.point.v[:, both]
-            sign = np.repeat([-1.0, 1.0], len(columns))
-            end = follow(self.circuit.take(both), start, self._at_rest(both), self.drives[:, 0], sign)
-            reach = np.abs(self.wiring.output(end.v) - self.wiring.output(start))
-            moved[:, columns] = np.where(end.found, reach, np.nan).reshape(2, -1)
-        return moved[0], moved[1]
+        if not len(columns):
+            return reach[0], reach[1]
+        part, network = self.moving
+        alike = self.topology.symmetric
+        chosen = columns if alike else np.concatenate([columns, columns])
+        sign = np.ones(len(columns)) if alike else np.repeat([-1.0, 1.0], len(columns))
+        start = self.point.v[np.ix_(part.nodes, chosen)]
+        end = follow(network.take(chosen), start, self._at_rest(chosen), self.drives[part.nodes, 0], sign)
+        moved = np.where(end.found, end.v - start, np.nan)
+        up = np.abs(part.wiring.output(moved))
+        if alike:
+            reach[0, columns], reach[1, columns] = np.abs(part.wiring.output(moved, mirrored=True)), up
+        else:
+            reach[:, columns] = up.reshape(2, -1)
+        return reach[0], reach[1]
 
 
-def _room(circuit: Circuit, terminals: Terminals, saturation: Saturation) -> Array:
-    return (terminals.vds - saturation.vdsat)[circuit.wiring.saturating].min(axis=0)
+def _room(network: Network, terminals: Terminals, saturation: Saturation) -> Array:
+    rows = network.wiring.saturating
+    return (terminals.vds.take(rows, axis=0) - saturation.vdsat.take(rows, axis=0)).min(axis=0)

@@ -8,9 +8,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array
-from optisize.stage.circuit import Circuit, Indices
+from optisize.stage.circuit import Circuit
 from optisize.stage.linear import solve
+from optisize.stage.network import Network
 from optisize.stage.topology import DRIVEN, INPUTS
+from optisize.stage.wiring import Indices
 
 ITERATIONS = 40
 BEYOND = 0.5  # V; how far beyond the rails a node may be sought
@@ -76,65 +78,75 @@ def first_guess(circuit: Circuit, driven: Array) -> Array:
     return np.concatenate([np.clip(unknown, 0.02 * supply, 0.98 * supply), driven])
 
 
-@np.errstate(all="ignore")
-def operating_point(
-    circuit: Circuit, driven: Array, start: Array | None = None, settled: float = SETTLED
-) -> OperatingPoint:
-    """Solve the operating point of every design.
+def operating_point(circuit: Circuit, driven: Array) -> OperatingPoint:
+    """Solve the operating point of every design from the topology's own first guess.
 
     Args:
         circuit: N sized designs.
         driven: voltages of the driven nodes, (4, N).
-        start: node voltages (A, N) to start from; the topology's own guess where None.
+
+    Returns:
+        Node voltages, always finite, and a flag for each design. A design that has not converged keeps its guess.
+    """
+    return settle(circuit.network, first_guess(circuit, driven))
+
+
+@np.errstate(all="ignore")
+def settle(network: Network, start: Array, settled: float = SETTLED) -> OperatingPoint:
+    """Solve the unknown node voltages of every design.
+
+    Args:
+        network: N designs.
+        start: node voltages (A, N) to start from, with those of the driven nodes.
         settled: the step [V] after which a design is done; convergence is quadratic, so what is left is about its
             square over 50 mV.
 
     Returns:
-        Node voltages, always finite, and a flag for each design. A design that has not converged keeps its start.
+        As `operating_point`.
     """
-    begin = first_guess(circuit, driven) if start is None else start
-    v = np.concatenate([begin[: circuit.wiring.unknowns], driven])
-    converged = np.zeros(circuit.designs, dtype=bool)
-    active: Indices = np.arange(circuit.designs)
-    part, moving = circuit, v.copy()
-    over, pinned = np.zeros(circuit.designs, dtype=bool), np.zeros(circuit.designs, dtype=int)
+    v = start.copy()
+    converged = np.zeros(network.designs, dtype=bool)
+    active: Indices = np.arange(network.designs)
+    part, moving = network, v.copy()
+    over, pinned = np.zeros(network.designs, dtype=bool), np.zeros(network.designs, dtype=int)
     for _ in range(ITERATIONS):
         # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = (newton_step(part, moving) < settled) & ~over
-        v[:, active[fresh]] = moving[:, fresh]
-        converged[active[fresh]] = True
+        fresh = np.flatnonzero((newton_step(part, moving) < settled) & ~over)
+        done = active[fresh]
+        v[:, done] = moving.take(fresh, axis=1)
+        converged[done] = True
         pinned = np.where(_at_bound(part, moving), pinned + 1, 0)
-        over |= fresh | (pinned >= PINNED)
+        over |= pinned >= PINNED
+        over[fresh] = True
         if 3 * np.count_nonzero(over) > len(over):
             left = np.flatnonzero(~over)
             active = active[left]
             if not len(active):
                 break
-            part, moving, pinned, over = part.take(left), moving[:, left], pinned[left], over[left]
+            part, moving, pinned, over = part.take(left), moving.take(left, axis=1), pinned[left], over[left]
     return OperatingPoint(v, converged)
 
 
-def newton_step(circuit: Circuit, v: Array) -> Array:
+def newton_step(network: Network, v: Array) -> Array:
     """Move the unknown node voltages `v` in place by one damped step; return the size of the full step, (N,) [V]."""
-    unknowns = circuit.wiring.unknowns
-    terminals = circuit.terminals(v)
-    equations = circuit.equations(terminals, circuit.law.drain(*terminals.of_law))
-    step = regular_solve(circuit, equations.matrix, -equations.residual[:, None])[:, 0]
+    terminals = network.terminals(v)
+    equations = network.equations(terminals, network.law.drain(*terminals.of_law))
+    step = regular_solve(network, equations.matrix, -equations.residual[:, None])[:, 0]
     size = np.abs(step).max(axis=0)
     if not size.max() < STEP_LIMIT:
         step = np.where(np.isfinite(step), step, 0.0)
         size = np.where(np.isfinite(size), size, np.inf)
         step = step * (STEP_LIMIT / np.maximum(size, STEP_LIMIT))
-    nodes = v[:unknowns]
+    nodes = v[: network.wiring.unknowns]
     nodes += step
     np.maximum(nodes, -BEYOND, out=nodes)
-    np.minimum(nodes, circuit.conditions.supply + BEYOND, out=nodes)
+    np.minimum(nodes, network.supply + BEYOND, out=nodes)
     return size
 
 
-def regular_solve(circuit: Circuit, matrix: Array, right: Array) -> Array:
+def regular_solve(network: Network, matrix: Array, right: Array) -> Array:
     """Solve the nodal equations; where every device at a node is off, a leak to ground keeps them regular."""
-    pattern = circuit.wiring.conductance_pattern
+    pattern = network.wiring.conductance_pattern
     solution = solve(matrix, right, pattern)
     if np.isfinite(solution.sum()):
         return solution
@@ -145,7 +157,7 @@ def regular_solve(circuit: Circuit, matrix: Array, right: Array) -> Array:
     return solution
 
 
-def _at_bound(circuit: Circuit, v: Array) -> NDArray[np.bool_]:
+def _at_bound(network: Network, v: Array) -> NDArray[np.bool_]:
     """Tell which designs have a node at the bound of the search, (N,)."""
-    nodes = v[: circuit.wiring.unknowns]
-    return (nodes.min(axis=0) <= -BEYOND) | (nodes.max(axis=0) >= circuit.conditions.supply + BEYOND)
+    nodes = v[: network.wiring.unknowns]
+    return (nodes.min(axis=0) <= -BEYOND) | (nodes.max(axis=0) >= network.supply + BEYOND)

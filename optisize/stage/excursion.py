@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from optisize.process.law import Array, Drain, Saturation
 from optisize.stage.bias import regular_solve
-from optisize.stage.circuit import Circuit, Equations, Terminals
+from optisize.stage.network import Equations, Network, Terminals
 
 STEERED = 0.01  # the part of the pair's current below which an input transistor counts as off
 ITERATIONS = 25
@@ -47,56 +47,56 @@ class Linearised(NamedTuple):
 
 
 @np.errstate(all="ignore")
-def follow(circuit: Circuit, start: Array, rest: Linearised, drive: Array, sign: Array) -> Excursion:
+def follow(network: Network, start: Array, rest: Linearised, drive: Array, sign: Array) -> Excursion:
     """Raise a drive from the operating point until the first margin vanishes.
 
     Margins are vds - vdsat of every transistor that has to be saturated, and the current of each input transistor
     above 1 % of the pair's: beyond it the pair is steered and the output no longer moves.
 
     Args:
-        circuit: N designs.
+        network: N designs.
         start: node voltages at the operating point, (A, N).
         rest: the stage there, which saves the first step its linearisation.
         drive: pattern over all nodes, (A,), zero on the unknown ones.
         sign: direction of the drive for each design, (N,).
     """
-    v, amplitude = start.copy(), np.zeros(circuit.designs)
-    found = np.zeros(circuit.designs, dtype=bool)
-    active: NDArray[np.intp] = np.arange(circuit.designs)
-    part, pv, pa, ps = circuit, v.copy(), amplitude.copy(), sign
+    v, amplitude = start.copy(), np.zeros(network.designs)
+    found = np.zeros(network.designs, dtype=bool)
+    active: NDArray[np.intp] = np.arange(network.designs)
+    part, pv, pa, ps = network, v.copy(), amplitude.copy(), sign
     over = found.copy()
     for iteration in range(ITERATIONS):
         here = rest if iteration == 0 else _linearised(part, pv, drive)
         # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = _step(part, here, pv, pa, drive, ps) & ~over
-        v[:, active[fresh]], amplitude[active[fresh]] = pv[:, fresh], pa[fresh]
-        found[active[fresh]] = True
-        over |= fresh
+        fresh = np.flatnonzero(_step(part, here, pv, pa, drive, ps) & ~over)
+        done = active[fresh]
+        v[:, done], amplitude[done] = pv.take(fresh, axis=1), pa[fresh]
+        found[done] = over[fresh] = True
         if 3 * np.count_nonzero(over) > len(over):
             left = np.flatnonzero(~over)
             active = active[left]
             if not len(active):
                 break
-            part, pv, pa, ps, over = part.take(left), pv[:, left], pa[left], ps[left], over[left]
+            part, pv, pa, ps, over = part.take(left), pv.take(left, axis=1), pa[left], ps[left], over[left]
     return Excursion(v=v, amplitude=amplitude, found=found)
 
 
-def _linearised(circuit: Circuit, v: Array, drive: Array) -> Linearised:
-    terminals = circuit.terminals(v)
-    drain, saturation = circuit.law.drain_and_saturation(*terminals.of_law)
-    return Linearised(terminals, drain, saturation, circuit.equations(terminals, drain, drive[:, None]))
+def _linearised(network: Network, v: Array, drive: Array) -> Linearised:
+    terminals = network.terminals(v)
+    drain, saturation = network.law.drain_and_saturation(*terminals.of_law)
+    return Linearised(terminals, drain, saturation, network.equations(terminals, drain, drive[:, None]))
 
 
 def _step(
-    circuit: Circuit, here: Linearised, v: Array, amplitude: Array, drive: Array, sign: Array
+    network: Network, here: Linearised, v: Array, amplitude: Array, drive: Array, sign: Array
 ) -> NDArray[np.bool_]:
     """Move node voltages and amplitude in place by one damped step; return which designs have settled, (N,)."""
-    unknowns = circuit.wiring.unknowns
+    unknowns = network.wiring.unknowns
     right = np.concatenate([here.equations.residual[:, None], here.equations.pulls * sign], axis=1)
     toward = np.zeros((v.shape[0], 2, v.shape[1]))
-    toward[:unknowns] = regular_solve(circuit, here.equations.matrix, -right)
+    toward[:unknowns] = regular_solve(network, here.equations.matrix, -right)
     toward[unknowns:, 1] = drive[unknowns:, None] * sign
-    margin, settle, rise = _margins(circuit, here, toward)
+    margin, settle, rise = _margins(network, here, toward)
     step = np.maximum(_amplitude_step(margin + settle, rise), -amplitude)
     change = toward[:, 0] + step * toward[:, 1]
     moved = np.abs(change[:unknowns]).max(axis=0)
@@ -109,11 +109,11 @@ def _step(
     return np.maximum(moved, np.abs(toward[:unknowns, 0]).max(axis=0)) < SETTLED
 
 
-def _margins(circuit: Circuit, here: Linearised, toward: Array) -> tuple[Array, Array, Array]:
+def _margins(network: Network, here: Linearised, toward: Array) -> tuple[Array, Array, Array]:
     """Return the margins (K, N), how they settle with the residual, and how they rise with the amplitude."""
     terminals, drain, saturation, _ = here
-    rows, pair = circuit.wiring.saturating, circuit.wiring.pair
-    change = circuit.terminals(toward)
+    rows, pair = network.wiring.saturating, network.wiring.pair
+    change = network.terminals(toward)
     room = (terminals.vds - saturation.vdsat)[rows]
     by_gate, by_source = saturation.by_gate[:, None], saturation.by_source[:, None]
     room_change = (change.vds - by_gate * change.gate - by_source * change.source)[rows]

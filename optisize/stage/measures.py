@@ -115,7 +115,7 @@ def cmrr(a: Analysis) -> Array:
 @_measure("A", "min")
 def supply_current(a: Analysis) -> Array:
     """All current from the supply, with the bias branch."""
-    currents = a.circuit.branch_currents(a.terminals, a.drain)
+    currents = a.circuit.network.branch_currents(a.terminals, a.drain)
     return a.wiring.current_stamp[a.wiring.index["supply"]] @ currents
 
 

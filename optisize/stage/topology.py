@@ -141,10 +141,12 @@ class LoadKind(Piece):
     Attributes:
         outputs: the outputs that it can have.
         steered: the part of the tail current that full steering leaves to charge the output.
+        symmetric: whether both sides of a matched stage are alike, so that one tells what the other does.
     """
 
     outputs: tuple[str, ...] = ("single-ended",)
     steered: float = 0.5
+    symmetric: bool = False
     refusal: str = ""
 
 
@@ -160,6 +162,7 @@ LOADS: dict[str, LoadKind] = {
             (node, lambda s: s.away("load_rail", s.size("load.resistance") * _half(s))) for node in ("left", "right")
         ),
         outputs=("single-ended", "differential"),
+        symmetric=True,
     ),
     "mirror": LoadKind(
         summary="a current mirror that turns the pair's difference into one output",
@@ -231,6 +234,7 @@ class Topology:
         output: nodes of the output with their signs.
         guesses: first guess of each unknown node.
         steered: the part of the tail current that full steering leaves to charge the output.
+        symmetric: whether both sides are alike.
     """
 
     input: str
@@ -247,6 +251,7 @@ class Topology:
     guesses: tuple[tuple[str, Guess], ...]
     tail_current: Guess
     steered: float
+    symmetric: bool
     rails: tuple[tuple[str, str], ...]
 
     @property
@@ -318,5 +323,6 @@ def build(input: str, load: str, tail: str, output: str = "single-ended", bulk: 
         guesses=guesses,
         tail_current=tail_kind.current,
         steered=load_kind.steered,
+        symmetric=load_kind.symmetric,
         rails=tuple(rails.items()),
     )

@@ -106,7 +106,7 @@ def test_output_swing(kind: Kind, ngspice: str, tmp_path: Path) -> None:
     The sweep begins at rest and goes beyond full steering, which a square-law pair reaches at sqrt(2) overdrives.
     """
     a = sized(kind, "handbook", SIZINGS)
-    twice = Analysis(a.circuit.repeated(2))
+    twice = Analysis(a.circuit.take(np.tile(np.arange(a.circuit.designs), 2)))
     sign = np.repeat([-1.0, 1.0], SIZINGS)
     amplitude = 1.6 * twice.saturation.vdsat[twice.wiring.pair[0]] + 0.1
     sources = differential_sweep(a.circuit.conditions.middle, sign * amplitude)

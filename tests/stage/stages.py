@@ -84,6 +84,6 @@ def driven_point(circuit: Circuit, positive: Array, negative: Array) -> Operatin
 
 def pair_currents(circuit: Circuit, point: OperatingPoint) -> Array:
     """Return the currents of the two input transistors, positive for either channel, (2, N)."""
-    terminals = circuit.terminals(point.v)
+    terminals = circuit.network.terminals(point.v)
     pair = circuit.wiring.pair
     return circuit.law.drain(terminals.gate, terminals.drain, terminals.source).id[pair]

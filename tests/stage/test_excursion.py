@@ -22,12 +22,12 @@ SIZES = {"width": (5e-6, 2e-4), "length": (2e-7, 4e-6), "resistance": (3e3, 6e4)
 
 def swept(a: Analysis, sign: float, furthest: float) -> Array:
     """Return how far the output goes until the first margin vanishes, (N,), with a drive that grows exponentially."""
-    n, circuit = a.circuit.designs, a.circuit.repeated(POINTS)
+    n, circuit = a.circuit.designs, a.circuit.take(np.tile(np.arange(a.circuit.designs), POINTS))
     drive = furthest * (RATIO ** np.linspace(0.0, 1.0, POINTS) - 1.0) / (RATIO - 1.0)
     half = 0.5 * sign * np.repeat(drive, n)
     base = np.full(n * POINTS, a.circuit.conditions.middle)
     point = driven_point(circuit, base + half, base - half)
-    terminals = circuit.terminals(point.v)
+    terminals = circuit.network.terminals(point.v)
     at = (terminals.gate, terminals.drain, terminals.source)
     room = (terminals.drain - terminals.source - circuit.law.saturation(*at).vdsat)[a.wiring.saturating]
     current = circuit.law.drain(*at).id[a.wiring.pair]

@@ -8,7 +8,7 @@ import pytest
 from optisize.process.card import load_process, thermal_voltage
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
-from optisize.stage.bias import operating_point
+from optisize.stage.bias import settle
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
 from optisize.stage.topology import build
@@ -91,7 +91,7 @@ def test_ideal_tail_steers_exactly(process: str, input: str, load: str) -> None:
     currents = pair_currents(circuit, point)
     steered = np.abs(currents[0] - currents[1]) > 0.98 * sizes["tail.current"]
     assert steered[point.converged].mean() > 0.2
-    terminals = circuit.terminals(point.v)
+    terminals = circuit.network.terminals(point.v)
     vdsat = circuit.law.saturation(terminals.gate, terminals.drain, terminals.source).vdsat
     conducting = currents > 1e-3 * sizes["tail.current"]
     checked = point.converged & (np.where(conducting, vdsat[circuit.wiring.pair], 1.0).min(axis=0) > 0.02)
@@ -212,7 +212,7 @@ def test_inputs_are_left_alone(kind: tuple[str, ...]) -> None:
         measure.function(a)
     driven = a.circuit.driven(np.full(3, common), np.full(3, common))
     driven.setflags(write=False)
-    again = operating_point(a.circuit, driven, a.point.v)
+    again = settle(a.circuit.network, np.concatenate([a.point.v[: a.wiring.unknowns], driven]))
     np.testing.assert_allclose(again.v[: a.wiring.unknowns], a.point.v[: a.wiring.unknowns], atol=0.1)
 
 
