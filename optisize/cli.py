@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
+import contextlib
 import functools
 import json
+import os
+import signal
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Annotated, Any, TypeVar
 
 import typer
 
 import optisize
-from optisize.errors import InputError, OptisizeError, nearest
+from optisize.errors import InputError, NothingFeasible, OptisizeError, nearest, one_line
 
 Command = TypeVar("Command", bound=Callable[..., Any])
 
@@ -50,12 +53,20 @@ def guarded(command: Command) -> Command:
         except OptisizeError as error:
             if _debug:
                 raise
-            typer.echo(f"optisize: {error}", err=True)
+            text = str(error) if isinstance(error, NothingFeasible) else one_line(str(error))
+            typer.echo(f"optisize: {text}", err=True)
             raise typer.Exit(error.exit_code) from None
+        except OSError as error:
+            if _debug:
+                raise
+            text = one_line(f"{error.filename or 'output'}: {error.strerror or error}")
+            typer.echo(f"optisize: {text}", err=True)
+            raise typer.Exit(1) from None
         except Exception as error:
             if _debug:
                 raise
-            typer.echo(f"optisize: internal error: {type(error).__name__}: {error} (--debug shows where)", err=True)
+            text = one_line(f"{type(error).__name__}: {error}", 300)
+            typer.echo(f"optisize: internal error: {text} (optisize --debug … shows where)", err=True)
             raise typer.Exit(1) from None
 
     return run  # type: ignore[return-value]
@@ -113,9 +124,10 @@ def search(
     chosen = {"seed": seed, "population": population, "generations": generations}
     settings = explore.settings_of(loaded, **{k: v for k, v in chosen.items() if v is not None})
     seeds = load_sizing(start_from, loaded) if start_from else None
-    with _progress(settings.generations, quiet) as watch:
-        run = explore.search(loaded, threads=threads, seeds=seeds, watch=watch, settings=settings)
-    _finish(run, target, figures, as_json)
+    with _on_ctrl_c(_stop_once):
+        with _progress(settings.generations, quiet) as watch:
+            run = explore.search(loaded, threads=threads, seeds=seeds, watch=watch, settings=settings)
+        _finish(run, target, figures, as_json)
 
 
 @app.command(epilog="Example: optisize resume results/thermopile-preamplifier --generations 400")
@@ -131,14 +143,15 @@ def resume(
 ) -> None:
     """Go on with an interrupted search, bit for bit; a finished one goes on from its front."""
     from optisize.front import explore
-    from optisize.front.run import check_free, load_run
+    from optisize.front.run import check_free, check_writable, load_run
 
     loaded = load_run(run)
-    if to is not None:
-        check_free(to)
-    with _progress(generations or loaded.info["generations"], quiet) as watch:
-        again = explore.resume(loaded, generations=generations, threads=threads, watch=watch)
-    _finish(again, to or run, figures, as_json, replace=to is None)
+    check_writable(run) if to is None else check_free(to)
+    settings = loaded.problem.settings if loaded.state is None else loaded.state.settings
+    with _on_ctrl_c(_stop_once):
+        with _progress(generations or settings.generations, quiet) as watch:
+            again = explore.resume(loaded, generations=generations, threads=threads, watch=watch)
+        _finish(again, to or run, figures, as_json, replace=to is None)
 
 
 class _progress:
@@ -156,15 +169,42 @@ class _progress:
         self._progress.close()
 
 
+@contextlib.contextmanager
+def _on_ctrl_c(handler: Any) -> Iterator[None]:
+    """Let Ctrl-C do something else for a while, unless it is ignored anyway."""
+    before = signal.getsignal(signal.SIGINT)
+    if before is not signal.SIG_IGN:
+        signal.signal(signal.SIGINT, handler)
+    try:
+        yield
+    finally:
+        if signal.getsignal(signal.SIGINT) is handler:
+            signal.signal(signal.SIGINT, before)
+
+
+def _stop_once(*_: object) -> None:
+    """Stop the search; from here to the end, an impatient second Ctrl-C must not lose what the first has stopped."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    raise KeyboardInterrupt
+
+
 def _finish(run: Any, target: Path, figures: bool, as_json: bool, replace: bool = False) -> None:
     """Write a run, draw it, print it, and say so if it was interrupted."""
     from optisize.front.summary import binding_limits, extremes
 
-    run.save(target, replace=replace)
-    if figures and len(run.front):
+    failure: list[OptisizeError] = []
+
+    def draw(directory: Path) -> None:
+        """Draw the figures; a run without them is better than none."""
         from optisize.show.plots import write_figures
 
-        write_figures(run, target)
+        try:
+            write_figures(run, directory)
+        except OptisizeError as error:
+            failure.append(error)
+
+    with _on_ctrl_c(signal.SIG_IGN):
+        run.save(target, replace=replace, draw=draw if figures else None)
     if as_json:
         keys = ("designs", "evaluations", "hypervolume", "seconds", "generations", "seed", "stopped", "archive")
         _print_json({"run": str(target), **{key: run.info[key] for key in keys}})
@@ -172,6 +212,8 @@ def _finish(run: Any, target: Path, figures: bool, as_json: bool, replace: bool 
         from optisize.show.terminal import print_search
 
         print_search(run, extremes(run), binding_limits(run))
+    if failure:
+        raise OptisizeError(f"{target}: is written, but not all of its figures: {failure[0]}")
     if run.info["stopped"] == "interrupted":
         typer.echo(f"optisize: interrupted; `optisize resume {target}` goes on", err=True)
         raise typer.Exit(INTERRUPTED)
@@ -192,6 +234,8 @@ def front(
     from optisize.front.table import to_csv
     from optisize.show.terminal import json_number, print_front
 
+    if as_csv and as_json:
+        raise InputError("--csv and --json: found both; one of them is allowed")
     loaded = load_run(run)
     table = choose.where(loaded.front, where or [])
     if sort is not None:
@@ -293,7 +337,9 @@ def new(name: Annotated[str, typer.Argument(metavar="NAME", help="The file becom
     from optisize.problem.template import new_problem
 
     path = Path(name if name.endswith(".toml") else f"{name}.toml")
-    if path.exists():
+    if path.name == ".toml":
+        raise InputError(f'NAME: found "{name}"; the name of a file is needed, such as my-stage')
+    if os.path.lexists(path):
         raise InputError(f"{path}: already exists")
     if not path.parent.is_dir():
         raise InputError(f"{path.parent}: there is no such directory")

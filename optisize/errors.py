@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import json
 from collections.abc import Iterable
 
 
@@ -36,7 +37,18 @@ def listing(names: Iterable[str]) -> str:
 
 
 def shorten(value: object, limit: int = 60) -> str:
-    """Return a printable, single-line, bounded rendering of a value that was found in a file."""
-    text = repr(value) if not isinstance(value, str) else f'"{value}"'
-    text = "".join(c if c.isprintable() else "?" for c in text)
+    """Return a printable, single-line, bounded rendering of a value that was found in a file, as files write it."""
+    text = f'"{value}"' if isinstance(value, str) else json.dumps(value, ensure_ascii=False, default=str)
+    text = printable(text)
     return text if len(text) <= limit else text[: limit - 1] + "…"
+
+
+def one_line(text: str, limit: int = 2000) -> str:
+    """Return a message on one line, bounded."""
+    text = printable(" ".join(text.split()))
+    return text if len(text) <= limit else text[: limit - 1] + "…"
+
+
+def printable(text: str) -> str:
+    """Return a text on one line, with a question mark for each character that a terminal would act upon."""
+    return "".join(c if c.isprintable() else "?" for c in text)

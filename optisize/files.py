@@ -8,13 +8,16 @@ import tempfile
 import tomllib
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, TypeVar, get_args
 
 from pydantic import BaseModel, ValidationError
 
-from optisize.errors import InputError, OptisizeError, listing, shorten
+from optisize.errors import InputError, OptisizeError, listing, nearest, shorten
+from optisize.quantities import In, write
 
 SIZE_LIMIT = 1_000_000  # bytes; a problem or process file is some kilobytes
+KEY_LIMIT = 100  # characters of one key
+DEPTH_LIMIT = 10  # tables and lists inside each other
 
 Model = TypeVar("Model", bound=BaseModel)
 
@@ -22,11 +25,11 @@ Model = TypeVar("Model", bound=BaseModel)
 def read_toml(path: Path) -> dict[str, Any]:
     """Return the tables of a TOML file.
 
-    Raises InputError when the file is missing, unreadable, too large, not text, empty, or not TOML.
+    Raises InputError when the file is missing, unreadable, too large, not text, empty, not TOML, or nested without end.
     """
     data = read_bytes(path)
     try:
-        text = data.decode("utf-8")
+        text = data.decode("utf-8-sig")
     except UnicodeDecodeError:
         raise InputError(f"{path}: not a text file in UTF-8") from None
     if "\0" in text:
@@ -34,11 +37,27 @@ def read_toml(path: Path) -> dict[str, Any]:
     if not text.strip():
         raise InputError(f"{path}: the file is empty")
     try:
-        return tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+        tables = tomllib.loads(text)
+    except ValueError as error:
         raise InputError(f"{path}: not valid TOML: {error}") from None
     except RecursionError:
         raise InputError(f"{path}: not valid TOML: nested too deeply") from None
+    _check_shape(tables, path)
+    return tables
+
+
+def _check_shape(tables: dict[str, Any], path: Path) -> None:
+    """Raise InputError for keys that no message could show, and for tables or lists that are nested too deeply."""
+    waiting: list[tuple[Any, int]] = [(tables, 0)]
+    while waiting:
+        value, depth = waiting.pop()
+        if depth > DEPTH_LIMIT:
+            raise InputError(f"{path}: tables or lists are nested more than {DEPTH_LIMIT} deep")
+        for key in value if isinstance(value, dict) else ():
+            if not key.isprintable() or len(key) > KEY_LIMIT:
+                raise InputError(f"{path}: the key {shorten(key)} is too long or has characters that cannot be printed")
+        parts = value.values() if isinstance(value, dict) else value
+        waiting.extend((part, depth + 1) for part in parts if isinstance(part, dict | list))
 
 
 def read_bytes(path: Path) -> bytes:
@@ -47,21 +66,21 @@ def read_bytes(path: Path) -> bytes:
         if path.is_dir():
             raise InputError(f"{path}: is a directory, but a file is needed")
         if not path.exists():
-            raise InputError(f"{path}: there is no such file{_near_file(path)}")
+            raise InputError(f"{path}: there is no such file{near_file(path)}")
         with path.open("rb") as file:
             data = file.read(SIZE_LIMIT + 1)
-    except OSError as error:
-        raise InputError(f"{path}: cannot be read: {error.strerror or error}") from None
+    except (OSError, ValueError) as error:
+        raise InputError(f"{path}: cannot be read: {getattr(error, 'strerror', None) or error}") from None
     if len(data) > SIZE_LIMIT:
         raise InputError(f"{path}: larger than {SIZE_LIMIT // 1000} kB, which no problem or process file is")
     return data
 
 
-def _near_file(path: Path) -> str:
-    """Name the file beside the wanted one whose name is nearest."""
+def near_file(path: Path) -> str:
+    """Name the file beside the wanted one whose name is nearest, as a hint."""
     try:
         names = [p.name for p in path.parent.iterdir()]
-    except OSError:
+    except (OSError, ValueError):
         return ""
     close = difflib.get_close_matches(path.name, names, n=1, cutoff=0.6)
     return f'; did you mean "{path.parent / close[0]}"?' if close else ""
@@ -80,23 +99,56 @@ def _first_problem(error: ValidationError, model: type[BaseModel], prefix: Seque
     problems = error.errors(include_url=False, include_context=True)
     # An unknown key is the likeliest cause of a missing one, so it is named first.
     first = next((p for p in problems if p["type"] == "extra_forbidden"), problems[0])
-    location = [str(part) for part in first["loc"] if not _is_noise(part)]
+    whole = first["type"] in ("extra_forbidden", "missing")
+    location = [str(part) for part in first["loc"][:-1] if not _is_noise(part)]
+    location += [str(part) for part in first["loc"][-1:] if whole or not _is_noise(part)]
     key = ".".join([*prefix, *location]) or "the file"
     found = shorten(first["input"])
     if first["type"] == "extra_forbidden":
         allowed = _allowed_keys(model, location[:-1])
-        close = difflib.get_close_matches(location[-1], allowed, n=1, cutoff=0.5)
-        hint = f'; did you mean "{close[0]}"?' if close else ""
-        return f"{key}: unknown key; allowed are {listing(allowed)}{hint}"
+        return f"{key}: unknown key; allowed are {listing(allowed)}{nearest(location[-1], allowed)}"
     if first["type"] == "missing":
         return f"{key}: is missing"
-    if first["type"] == "literal_error":
-        allowed = [part.strip(" '") for part in str(first["ctx"]["expected"]).replace(" or ", ",").split(",")]
-        close = difflib.get_close_matches(str(first["input"]), allowed, n=1, cutoff=0.5)
-        hint = f'; did you mean "{close[0]}"?' if close else ""
-        return f"{key}: found {found}; allowed are {listing(allowed)}{hint}"
-    message = str(first["msg"]).removeprefix("Value error, ")
-    return f"{key}: found {found}; {message[:1].lower()}{message[1:]}"
+    return f"{key}: found {found}; {_need(first, _unit(model, location))}"
+
+
+_NEEDS = {
+    "model_type": "a table is needed",
+    "model_attributes_type": "a table is needed",
+    "dict_type": "a table is needed",
+    "string_type": "a text is needed",
+    "int_type": "a whole number is needed",
+    "int_from_float": "a whole number is needed",
+}
+_BOUNDS = {
+    "greater_than": ("gt", "above"),
+    "greater_than_equal": ("ge", "at least"),
+    "less_than": ("lt", "below"),
+    "less_than_equal": ("le", "at most"),
+}
+
+
+def _need(problem: Any, unit: str) -> str:
+    """Say what a value has to be, in a designer's words."""
+    kind = problem["type"]
+    if kind in _NEEDS:
+        return _NEEDS[kind]
+    if kind in _BOUNDS:
+        name, relation = _BOUNDS[kind]
+        bound = write(problem["ctx"][name], unit, 6) if unit else str(problem["ctx"][name])
+        bare = f" (a bare number is in {unit})" if unit and not isinstance(problem["input"], str) else ""
+        return f"it must be {relation} {bound}{bare}"
+    if kind == "string_too_long":
+        return f"at most {problem['ctx']['max_length']} characters are allowed"
+    message = str(problem["msg"]).removeprefix("Value error, ")
+    return f"{message[:1].lower()}{message[1:]}"
+
+
+def _unit(model: type[BaseModel], location: Sequence[str]) -> str:
+    """Return the unit of the field at a location, or an empty text."""
+    table = _table(model, location[:-1])
+    field = table.model_fields.get(location[-1]) if location else None
+    return next((mark.unit for mark in field.metadata if isinstance(mark, In)), "") if field else ""
 
 
 def _is_noise(part: Any) -> bool:
@@ -107,12 +159,17 @@ def _is_noise(part: Any) -> bool:
 
 def _allowed_keys(model: type[BaseModel], location: Sequence[str]) -> list[str]:
     """Return the keys that the table at a location may have."""
+    return list(_table(model, location).model_fields)
+
+
+def _table(model: type[BaseModel], location: Sequence[str]) -> type[BaseModel]:
+    """Return the model of the table at a location; tables of free names are passed through by their last argument."""
     current: Any = model
     for part in location:
-        fields = getattr(current, "model_fields", {})
-        annotation = fields[part].annotation if part in fields else None
-        current = annotation if isinstance(annotation, type) and issubclass(annotation, BaseModel) else current
-    return list(current.model_fields)
+        fields = getattr(current, "model_fields", None)
+        inner = fields[part].annotation if fields and part in fields else get_args(current)[-1:]
+        current = inner[0] if isinstance(inner, tuple) and inner else inner
+    return current if isinstance(current, type) and issubclass(current, BaseModel) else model
 
 
 def write_text(path: Path, text: str) -> None:

@@ -12,14 +12,17 @@ import re
 from collections import Counter
 from collections.abc import Callable
 from dataclasses import dataclass
-from decimal import Decimal
+from decimal import Decimal, InvalidOperation
 from functools import lru_cache
 from typing import Any
+
+from optisize.errors import shorten
 
 ZERO_CELSIUS = 273.15
 
 _NUMBER = re.compile(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(.*?)\s*", re.DOTALL)
-_FACTOR = re.compile(r"([^\W\d_]+|%|1)(?:\^(-?\d+(?:\.\d+)?))?")
+_DECIMAL_COMMA = re.compile(r",\d")
+_FACTOR = re.compile(r"([^\W\d_]+|%|1)(?:\^(-?\d(?:\.\d+)?))?")
 _BASES = ("ohm", "degC", "dB", "Hz", "V", "A", "m", "F", "s", "K", "W", "S")
 _ALIASES = str.maketrans({"µ": "u", "μ": "u", "\u03a9": "ohm", "\u2126": "ohm", "²": "^2", "·": "*"})
 _NO_PREFIX = ("dB", "degC", "%", "1")
@@ -43,12 +46,14 @@ def _parse_unit(expression: str) -> tuple[float, tuple[tuple[str, float], ...]]:
     for sign, factor in _factors(text):
         match = _FACTOR.fullmatch(factor.strip())
         if match is None:
-            raise QuantityError(f'"{expression}" is not a unit')
+            raise QuantityError(f"{shorten(expression)} is not a unit")
         power = sign * float(match.group(2) or 1.0)
         factor_scale, base = _parse_factor(match.group(1), expression)
         scale *= factor_scale**power
         if base:
             powers[base] += power  # type: ignore[assignment]
+    if not 0.0 < scale < math.inf:
+        raise QuantityError(f"{shorten(expression)} is not a unit")
     return scale, tuple(sorted((base, float(p)) for base, p in powers.items() if p))
 
 
@@ -70,7 +75,7 @@ def _parse_factor(name: str, expression: str) -> tuple[float, str]:
             scale = _prefix_scale(name.removesuffix(base))
             if scale is not None:
                 return scale, base
-    raise QuantityError(f'"{expression}" is not a unit')
+    raise QuantityError(f"{shorten(expression)} is not a unit")
 
 
 def _prefix_scale(prefix: str) -> float | None:
@@ -93,28 +98,33 @@ def read(value: object, unit: str) -> float:
     """
     if isinstance(value, bool) or not isinstance(value, int | float | str):
         raise QuantityError(f"a quantity{_example(unit)} is needed")
-    number, dimensions = _read_any(value, unit)
+    try:
+        number = _read_text(value, unit) if isinstance(value, str) else float(value)
+    except (OverflowError, InvalidOperation):
+        number = math.inf
     if not math.isfinite(number):
         raise QuantityError("a finite number is needed")
-    wanted = _parse_unit(unit)[1]
-    if dimensions != wanted:
-        named = f'is in "{value.split()[-1]}"' if isinstance(value, str) and dimensions else "has no unit"
-        raise QuantityError(f"{named}, but {_unit_phrase(unit)} is needed{_example(unit)}")
     return number
 
 
-def _read_any(value: int | float | str, unit: str) -> tuple[float, tuple[tuple[str, float], ...]]:
-    """Return the number and the dimensions of a text; a bare number is in the unit that is wanted."""
-    if not isinstance(value, str):
-        return float(value), _parse_unit(unit)[1]
-    match = _NUMBER.fullmatch(value)
+def _read_text(text: str, unit: str) -> float:
+    """Return the number of a text in the SI unit that is wanted."""
+    match = _NUMBER.fullmatch(text)
     if match is None:
-        raise QuantityError(f"is not a number with a unit{_example(unit)}")
-    expression = match.group(2)
+        raise QuantityError(f"is not a number{' with a unit' if unit else ''}{_example(unit)}")
+    figure, expression = match.groups()
+    if _DECIMAL_COMMA.match(expression):
+        raise QuantityError("a decimal point is needed in place of the comma")
     if expression.translate(_ALIASES).replace("°C", "degC") == "degC" and unit == "K":
-        return float(match.group(1)) + ZERO_CELSIUS, (("K", 1.0),)
-    scale, dimensions = _parse_unit(expression)
-    return _scaled(match.group(1), scale), dimensions
+        return float(figure) + ZERO_CELSIUS
+    try:
+        scale, dimensions = _parse_unit(expression)
+    except QuantityError as error:
+        raise QuantityError(f"{error}; {_unit_phrase(unit)} is needed{_example(unit)}") from None
+    if dimensions != _parse_unit(unit)[1]:
+        named = f"is in {shorten(expression)}" if expression else "has no unit"
+        raise QuantityError(f"{named}, but {_unit_phrase(unit)} is needed{_example(unit)}")
+    return _scaled(figure, scale)
 
 
 def _scaled(figure: str, scale: float) -> float:

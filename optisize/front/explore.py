@@ -99,7 +99,8 @@ def resume(run: Run, *, generations: int | None = None, threads: int | None = No
         return search(run.problem, threads=threads, watch=watch, state=state, settings=state.settings)
     if not len(run.front):
         raise InputError(f"{run.path}: has no design to go on from")
-    settings = settings_of(run.problem, seed=int(run.info["seed"]) + 1, generations=wanted)
+    population, seed = run.info["population"], run.info["seed"] + 1
+    settings = settings_of(run.problem, population=population, seed=seed, generations=wanted)
     return search(run.problem, threads=threads, watch=watch, seeds=sizes_of(run.problem, run.front), settings=settings)
 
 
@@ -209,9 +210,9 @@ def explain_infeasible(problem: Problem, state: State) -> str:
         note = "; every other limit can be met without it" if alone.any() else ""
         lines.append(f"  {m.name}: {bounds} wanted, nearest design has {_reached(values[m.name][best], m.unit)}{note}")
     shown = "\n".join(lines)
-    conflict = "these limits conflict" if len(lines) > 1 else "this limit stands in the way"
+    blame = "these limits stand in the way" if len(lines) > 1 else "this limit stands in the way"
     return (
-        f"nothing feasible after {state.evaluations} evaluations: {conflict}; "
+        f"nothing feasible after {state.evaluations} evaluations: {blame}; "
         f"the nearest design would need each relaxed to its own figure:\n{shown}"
     )
 

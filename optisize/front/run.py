@@ -6,6 +6,8 @@ import json
 import os
 import shutil
 import tempfile
+import zipfile
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -14,8 +16,8 @@ import numpy as np
 import pandas as pd
 
 from optisize.errors import InputError, OptisizeError
-from optisize.files import read_bytes
-from optisize.front.table import UNLIMITED, column, to_csv
+from optisize.files import near_file, read_bytes
+from optisize.front.table import UNLIMITED, column, to_csv, units
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_problem
 from optisize.search import checkpoint
@@ -23,6 +25,9 @@ from optisize.search.state import State
 
 PROBLEM, PROCESS, FRONT, HISTORY, INFO = "problem.toml", "process.toml", "front.csv", "history.csv", "run.json"
 CHECKPOINT = "checkpoint.npz"
+FIGURES = ("trade-offs", "history")  # without their formats
+COUNTS = ("seed", "population", "generations")  # what run.json has to say to go on
+RECORDS = ("evaluations", "hypervolume", "feasible_share")  # what history.csv has to hold
 
 
 @dataclass
@@ -45,12 +50,16 @@ class Run:
     state: State | None = None
     path: Path | None = field(default=None)
 
-    def save(self, directory: str | Path, *, replace: bool = False) -> Path:
+    def save(
+        self, directory: str | Path, *, replace: bool = False, draw: Callable[[Path], object] | None = None
+    ) -> Path:
         """Write the run as a directory, whole or not at all; return its path.
 
         Args:
             directory: where to.
-            replace: whether a run that is there gives way to this one.
+            replace: whether a run that is there gives way to this one, which then takes over the files that others
+                have put there.
+            draw: called with the directory, before it gets its name, to put the figures there.
 
         Raises:
             InputError: it exists.
@@ -64,13 +73,16 @@ class Run:
             beside = Path(tempfile.mkdtemp(prefix=f".{target.name}.", dir=target.parent))
             try:
                 self._write(beside)
+                if draw is not None:
+                    draw(beside)
                 beside.chmod(0o755)
                 if replace and target.exists():
-                    os.rename(target, beside.with_name(f"{beside.name}.old"))
-                os.rename(beside, target)
+                    _take_over(target, beside)
+                    _exchange(target, beside)
+                else:
+                    os.rename(beside, target)
             finally:
-                for leftover in (beside, beside.with_name(f"{beside.name}.old")):
-                    shutil.rmtree(leftover, ignore_errors=True)
+                shutil.rmtree(beside, ignore_errors=True)
         except OSError as error:
             raise OptisizeError(f"{target}: cannot be written: {error.strerror or error}") from None
         self.path = target
@@ -86,10 +98,42 @@ class Run:
             checkpoint.save(directory / CHECKPOINT, self.state)
 
 
+def _take_over(target: Path, beside: Path) -> None:
+    """Copy what others have put into a run directory, but no older part of the run itself."""
+    for found in target.iterdir():
+        own = found.name in (PROBLEM, PROCESS, FRONT, HISTORY, INFO, CHECKPOINT) or found.stem in FIGURES
+        if not own and found.is_dir():
+            shutil.copytree(found, beside / found.name, symlinks=True)
+        elif not own:
+            shutil.copy2(found, beside / found.name, follow_symlinks=False)
+
+
+def _exchange(target: Path, beside: Path) -> None:
+    """Put the new directory into the place of the old one; the old one stays if that fails."""
+    old = beside.with_name(f"{beside.name}.old")
+    os.rename(target, old)
+    try:
+        os.rename(beside, target)
+    except BaseException:
+        os.rename(old, target)
+        raise
+    shutil.rmtree(old, ignore_errors=True)
+
+
 def check_free(target: Path) -> None:
-    """Raise InputError when a run directory is already there."""
-    if target.exists():
+    """Raise InputError when a run directory is already there, OptisizeError when there could be none."""
+    if os.path.lexists(target):
         raise InputError(f"{target}: already exists; give another directory with --to, or remove it")
+    check_writable(target)
+
+
+def check_writable(target: Path) -> None:
+    """Raise OptisizeError when a directory could not be written, as far as can be told without writing."""
+    above = next((p for p in target.absolute().parents if os.path.lexists(p)), Path("/"))
+    if not above.is_dir():
+        raise OptisizeError(f"{target}: cannot be written: {above} is not a directory")
+    if not os.access(above, os.W_OK | os.X_OK):
+        raise OptisizeError(f"{target}: cannot be written: no permission to write into {above}")
 
 
 def load_run(directory: str | Path) -> Run:
@@ -98,26 +142,60 @@ def load_run(directory: str | Path) -> Run:
     Raises InputError when the directory is no run, or was damaged.
     """
     path = Path(directory)
-    if not path.is_dir():
-        raise InputError(f"{path}: there is no such run directory")
-    missing = [name for name in (PROBLEM, FRONT, HISTORY, INFO) if not (path / name).is_file()]
+    if not os.path.isdir(path):
+        wrong = "is not a directory" if os.path.lexists(path) else f"there is no such run{near_file(path)}"
+        raise InputError(f"{path}: {wrong}")
+    missing = [name for name in (PROBLEM, PROCESS, FRONT, HISTORY, INFO) if not (path / name).is_file()]
     if missing:
         raise InputError(f"{path}: is no run directory (it has no {missing[0]})")
     problem = load_problem(path / PROBLEM, process_file=path / PROCESS)
+    named = units(problem)
+    sizes = [size.name for size in problem.topology.sizes]
+    columns = [column(name, named[name]) for name in (*sizes, *problem.needed)]
+    return Run(
+        problem=problem,
+        front=_read_table(path / FRONT, ["design", *columns]),
+        history=_read_table(path / HISTORY, RECORDS),
+        info=_read_info(path / INFO),
+        state=_read_state(path / CHECKPOINT, problem) if (path / CHECKPOINT).is_file() else None,
+        path=path,
+    )
+
+
+def _read_table(path: Path, wanted: Sequence[str]) -> pd.DataFrame:
+    """Read a table whose wanted columns hold a number in every row."""
     try:
-        info = json.loads(read_bytes(path / INFO))
-        front = _read_table(path / FRONT)
-        history = pd.read_csv(path / HISTORY)
-    except (ValueError, pd.errors.ParserError) as error:
+        table = pd.read_csv(path, dtype=object)  # numbers are read below, to the last digit
+        lacking = [name for name in wanted if name not in table.columns]
+        if lacking:
+            raise InputError(f"{path}: the run is damaged: the column {lacking[0]} is missing")
+        whole = {c: int if c == "design" else float for c in table.columns}
+        table = table.replace(UNLIMITED, np.inf).astype(whole)
+    except (ValueError, OSError) as error:
         raise InputError(f"{path}: the run is damaged: {error}") from None
-    wanted = [column(size.name, size.unit) for size in problem.topology.sizes]
-    lacking = [name for name in wanted if name not in front.columns]
-    if lacking:
-        raise InputError(f"{path / FRONT}: the column {lacking[0]} is missing")
-    state = checkpoint.load(path / CHECKPOINT) if (path / CHECKPOINT).is_file() else None
-    return Run(problem=problem, front=front, history=history, info=info, state=state, path=path)
+    empty = [name for name in wanted if table[name].isna().any()]
+    if empty:
+        raise InputError(f"{path}: the run is damaged: the column {empty[0]} has a row without a number")
+    return table
 
 
-def _read_table(path: Path) -> pd.DataFrame:
-    table = pd.read_csv(path, float_precision="round_trip")
-    return table.replace(UNLIMITED, np.inf).astype({c: float for c in table.columns if c != "design"})
+def _read_info(path: Path) -> dict[str, Any]:
+    try:
+        info = json.loads(read_bytes(path))
+    except ValueError as error:
+        raise InputError(f"{path}: the run is damaged: {error}") from None
+    for key in COUNTS:
+        if not isinstance(info, dict) or not isinstance(info.get(key), int):
+            raise InputError(f"{path}: the run is damaged: {key} is missing or no whole number")
+    return dict(info)
+
+
+def _read_state(path: Path, problem: Problem) -> State:
+    try:
+        state = checkpoint.load(path)
+    except (ValueError, KeyError, TypeError, OSError, EOFError, zipfile.BadZipFile):
+        state = None
+    shape = (problem.space.dimensions, len(problem.goals))
+    if state is None or (len(state.population.vectors), len(state.ideal)) != shape:
+        raise InputError(f"{path}: the checkpoint is damaged; without this file, the run goes on from its front")
+    return state

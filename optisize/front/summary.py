@@ -33,9 +33,9 @@ class Binding:
 
 
 def extremes(run: Run) -> list[Extreme]:
-    """Return the best design of each goal."""
-    result = []
-    goals = run.problem.goals
+    """Return the best design of each goal; none where there is no design."""
+    result: list[Extreme] = []
+    goals = run.problem.goals if len(run.front) else ()
     columns = {g.measure.name: column(g.measure.name, g.measure.unit) for g in goals}
     for goal in goals:
         losses = goal.loss(run.front[columns[goal.measure.name]].to_numpy(dtype=float))

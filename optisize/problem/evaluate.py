@@ -23,6 +23,7 @@ from optisize.stage.topology import Topology
 CHUNK = 1000  # designs solved together: their arrays stay in the cache
 WORST = 20.0  # the violation of a limit is counted no further than this
 UNSOLVED = 100.0  # the violation of a design without an operating point
+CONSTANT = 1e-6  # in the units of a loss; a goal that varies by less over the space is no goal
 TOLERANCE = 1e-9  # relative; a limit is met when it is missed by no more than rounding
 
 
@@ -134,6 +135,7 @@ class Problem:
     text: str
     process_text: str
     hashes: Mapping[str, str]
+    source: str = ""
 
     @property
     def needed(self) -> tuple[str, ...]:
@@ -158,6 +160,8 @@ class Problem:
         wanted = [find(name, self.topology) for name in (self.needed if names is None else names)]
         count = len(next(iter(sizes.values())))
         starts = range(0, count, CHUNK)
+        if not count:
+            return {m.name: np.empty(0) for m in wanted}
 
         def part(start: int) -> list[Array]:
             chosen = {name: np.asarray(v, dtype=float)[start : start + CHUNK] for name, v in sizes.items()}
@@ -186,11 +190,12 @@ class Problem:
         """Raise InputError when a goal is the same for all of the designs sampled from the space, (M, N)."""
         for goal, row in zip(self.goals, losses, strict=True):
             known = row[~np.isnan(row)]
-            if len(known) and (np.isinf(known).all() or np.ptp(known[np.isfinite(known)]) < 1e-12):
+            if len(known) and (np.isinf(known).all() or np.ptp(known[np.isfinite(known)]) < CONSTANT):
                 shown = "unlimited" if np.isinf(known).any() else f"{goal.value(known[:1])[0]:.4g} {goal.measure.unit}"
+                file = f"{self.source}: " if self.source else ""
                 raise InputError(
-                    f"goals.{goal.measure.name}: is the same for every design of the space ({shown.strip()}), "
-                    "so it cannot be traded; remove the goal, or free a size that moves it"
+                    f"{file}goals.{goal.measure.name}: is the same for every design of the space ({shown.strip()}), "
+                    "so it cannot be traded; remove the goal, or change the stage or its free sizes so that it varies"
                 )
 
 

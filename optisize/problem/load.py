@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -10,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from optisize.errors import InputError, listing, nearest, shorten
-from optisize.files import read_bytes, read_toml, validated
+from optisize.files import near_file, read_bytes, read_toml, validated
 from optisize.problem.evaluate import Goal, Limit, Problem
 from optisize.problem.schema import ProblemFile, SizingFile, flatten, read_size
 from optisize.problem.space import SizeRange, SizingSpace
@@ -18,7 +19,7 @@ from optisize.process.card import Process, load_process, locate_process
 from optisize.process.law import Array
 from optisize.quantities import QuantityError, read, write
 from optisize.stage.circuit import Conditions
-from optisize.stage.measures import find
+from optisize.stage.measures import CATALOGUE, FIGURES, Measure, find
 from optisize.stage.topology import Size, Topology, build
 
 
@@ -35,10 +36,10 @@ def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
     data = read_toml(path)
     file = validated(ProblemFile, data, str(path))
     try:
-        source = process_file or locate_process(file.process, path.parent)
+        source = process_file or _process_source(file.process, path.parent)
         process = load_process(source)
         topology = build(**file.stage.model_dump())
-        process.corner(file.conditions.corner)
+        _check_corner(file.conditions.corner, process)
         conditions = Conditions(**file.conditions.model_dump())
         _check_conditions(conditions)
         space = SizingSpace(topology, process, _ranges(file.sizes, topology, process))
@@ -61,6 +62,7 @@ def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
         settings=file.search,
         text=read_bytes(path).decode("utf-8"),
         process_text=read_bytes(source).decode("utf-8"),
+        source=str(path),
         hashes={
             "problem": hashlib.sha256(read_bytes(path)).hexdigest(),
             "process": hashlib.sha256(read_bytes(source)).hexdigest(),
@@ -85,25 +87,41 @@ def load_sizing(path: str | Path, problem: Problem) -> dict[str, Array]:
     return problem.space.snapped({r.size.name: np.array([r.low]) for r in ranges})
 
 
+def _process_source(name: str, beside: Path) -> Path:
+    try:
+        return locate_process(name, beside)
+    except InputError as error:
+        hint = "" if "did you mean" in str(error) or os.path.exists(beside / name) else near_file(beside / name)
+        raise InputError(f"process: {str(error).removeprefix('process ')}{hint}") from None
+
+
+def _check_corner(name: str, process: Process) -> None:
+    try:
+        process.corner(name)
+    except InputError as error:
+        raise InputError(f"conditions.corner: {str(error).removeprefix('corner ')}") from None
+
+
 def _check_conditions(conditions: Conditions) -> None:
     low, high = conditions.common_mode
     if low < 0.0 or high > conditions.supply:
+        found = write(low, "V") if low == high else f"{write(low, 'V')} to {write(high, 'V')}"
         raise InputError(
-            f"conditions.common_mode: found {write(low, 'V')} to {write(high, 'V')}; it must lie between the rails, "
+            f"conditions.common_mode: found {found}; it must lie between the rails, "
             f"0 V and {write(conditions.supply, 'V')}"
         )
 
 
 def _ranges(table: Mapping[str, Any], topology: Topology, process: Process) -> tuple[SizeRange, ...]:
     """Return the range of every size of the stage, in the stage's order."""
-    given = flatten(table, lambda value: False)
     known = {size.name: size for size in topology.sizes}
+    given = flatten(table, lambda name, _: name in known, "sizes")
     for name in given:
         if name not in known:
             kind = f"input {topology.input}, load {topology.load}, tail {topology.tail}"
-            raise InputError(
-                f"sizes.{name}: no size of this stage ({kind}); its sizes are {listing(known)}{nearest(name, known)}"
-            )
+            kin = [other for other in known if other.split(".")[0] == name.split(".")[0]]
+            hint = nearest(name, kin) or nearest(name, known)
+            raise InputError(f"sizes.{name}: no size of this stage ({kind}); its sizes are {listing(known)}{hint}")
     missing = [name for name in known if name not in given]
     if missing:
         raise InputError(f"sizes.{missing[0]}: is missing; every size of the stage needs a value or a range")
@@ -117,9 +135,13 @@ def _range(size: Size, value: object, topology: Topology, process: Process) -> S
         raise InputError(f"sizes.{size.name}: {error}") from None
     smallest, largest = _drawable(size, topology, process)
     if low < smallest * (1 - 1e-9) or high > largest * (1 + 1e-9):
+        parts = value if isinstance(value, list) else [value]
+        bare = size.unit and any(not isinstance(part, str) for part in parts)
         raise InputError(
-            f"sizes.{size.name}: found {shorten(value)}; the process can draw "
+            f"sizes.{size.name}: found {shorten(value)}; "
+            f"{'allowed are' if size.kind in ('current', 'count') else 'the process can draw'} "
             f"{write(smallest, size.unit)} to {write(largest, size.unit)}"
+            f"{f' (a bare number is in {size.unit})' if bare else ''}"
         )
     if size.kind == "count" and (low != round(low) or high != round(high)):
         raise InputError(f"sizes.{size.name}: found {shorten(value)}; whole numbers are needed")
@@ -142,30 +164,55 @@ def _drawable(size: Size, topology: Topology, process: Process) -> tuple[float, 
 
 def _goals(table: Mapping[str, Any], topology: Topology) -> tuple[Goal, ...]:
     goals = []
-    for name, value in flatten(table, lambda v: False).items():
-        try:
-            measure = find(name, topology)
-        except InputError as error:
-            raise InputError(f"goals.{name}: {error}") from None
+    for name, value in flatten(table, lambda name, _: _is_measure(name, topology), "goals").items():
+        measure = _find(name, topology, "goals")
         if value not in ("max", "min"):
-            raise InputError(f'goals.{name}: found {shorten(value)}; allowed are "max" and "min"')
+            raise InputError(
+                f'goals.{name}: found {shorten(value)}; allowed are "max" and "min"'
+                f"{nearest(str(value).lower()[:3], ('max', 'min'))}"
+            )
         goals.append(Goal(measure, value))
     if not goals:
         raise InputError("goals: there is none; name at least one measure to trade")
     return tuple(goals)
 
 
+def _is_measure(name: str, topology: Topology) -> bool:
+    try:
+        find(name, topology)
+    except InputError:
+        return False
+    return True
+
+
+def _find(name: str, topology: Topology, table: str) -> Measure:
+    """Return the measure that a key of a table names."""
+    if not _is_measure(name, topology):
+        known = [*CATALOGUE, *(f"{t.name}.{figure}" for t in topology.transistors for figure in FIGURES)]
+        kind = "a size, not a measure" if name in topology.size_names else "no measure"
+        raise InputError(f'{table}.{name}: {kind}; "optisize measures" lists them{nearest(name, known)}')
+    return find(name, topology)
+
+
 def _limits(table: Mapping[str, Any], topology: Topology) -> tuple[Limit, ...]:
+    def is_leaf(name: str, value: Any) -> bool:
+        return _is_measure(name, topology) or not any(isinstance(part, dict) for part in value.values())
+
     limits = []
-    for name, bounds in flatten(table, lambda v: set(v) <= {"min", "max"} and bool(v)).items():
-        try:
-            measure = find(name, topology)
-        except InputError as error:
-            raise InputError(f"limits.{name}: {error}") from None
-        if not isinstance(bounds, dict):
-            raise InputError(f'limits.{name}: found {shorten(bounds)}; a bound such as {{ min = "…" }} is needed')
+    for name, bounds in flatten(table, is_leaf, "limits").items():
+        measure = _find(name, topology, "limits")
+        if not isinstance(bounds, dict) or not bounds:
+            example = shorten(bounds) if isinstance(bounds, str) else f'"… {measure.unit}"'
+            raise InputError(
+                f"limits.{name}: found {shorten(bounds)}; a table with min, max or both is needed, "
+                f"such as {{ {'min' if measure.better == 'max' else 'max'} = {example} }}"
+            )
         values = {}
         for key, value in bounds.items():
+            if key not in ("min", "max"):
+                raise InputError(
+                    f"limits.{name}.{key}: unknown key; allowed are min, max{nearest(key, ('min', 'max'))}"
+                )
             try:
                 values[key] = read(value, measure.unit)
             except QuantityError as error:
@@ -173,7 +220,7 @@ def _limits(table: Mapping[str, Any], topology: Topology) -> tuple[Limit, ...]:
             if measure.scale == "log" and values[key] <= 0.0:
                 raise InputError(f"limits.{name}.{key}: found {shorten(value)}; a value above zero is needed")
         if values.get("min", -np.inf) > values.get("max", np.inf):
-            raise InputError(f"limits.{name}: the bounds are inverted: min is above max")
+            raise InputError(f"limits.{name}: found {shorten(bounds)}; the bounds are inverted: min is above max")
         limits.append(Limit(measure, values.get("min"), values.get("max")))
     if not any(limit.measure.name == "headroom" for limit in limits):
         limits.append(Limit(find("headroom", topology), 0.0, None, implied=True))

@@ -6,9 +6,9 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Annotated, Any, Literal
 
-from pydantic import BeforeValidator, ConfigDict, Field, JsonValue, WithJsonSchema
+from pydantic import BeforeValidator, ConfigDict, Field, WithJsonSchema
 
-from optisize.errors import listing, nearest, shorten
+from optisize.errors import InputError, listing, nearest, shorten
 from optisize.process.parameters import Parameters
 from optisize.quantities import In, QuantityError, read
 from optisize.stage.topology import BULKS, INPUTS, LOADS, OUTPUTS, TAILS, Piece
@@ -49,6 +49,18 @@ def _read_range(value: object) -> tuple[float, float]:
 
 _QUANTITY = {"anyOf": [{"type": "number"}, {"type": "string"}]}
 _RANGE = {"anyOf": [*_QUANTITY["anyOf"], {"type": "array", "items": _QUANTITY, "minItems": 2, "maxItems": 2}]}
+_BOUNDS = {
+    "type": "object",
+    "properties": {"min": _QUANTITY, "max": _QUANTITY},
+    "additionalProperties": False,
+    "minProperties": 1,
+}
+
+
+def _named(leaf: dict[str, Any], depth: int = 3) -> dict[str, Any]:
+    """Return the JSON Schema of a table whose dotted keys, up to `depth` parts, lead to leaves."""
+    inner = leaf if depth == 1 else {"anyOf": [leaf, {**_named(leaf, depth - 1), "minProperties": 1}]}
+    return {"type": "object", "additionalProperties": inner}
 
 
 def _summaries(kinds: Mapping[str, Piece]) -> str:
@@ -97,12 +109,16 @@ class ConditionsTable(Parameters):
 class SearchTable(Parameters):
     """How long and from where to search."""
 
-    population: Annotated[int, Field(ge=8, le=20_000, description="designs of a generation")] = 200
-    generations: Annotated[int, Field(ge=1, le=1_000_000, description="generations at the most")] = 200
-    seed: Annotated[int, Field(ge=0, le=2**63 - 1, description="the same seed gives the same front")] = 1
+    population: Annotated[int, Field(strict=True, ge=8, le=20_000, description="designs of a generation")] = 200
+    generations: Annotated[int, Field(strict=True, ge=1, le=1_000_000, description="generations at the most")] = 200
+    seed: Annotated[int, Field(strict=True, ge=0, le=2**63 - 1, description="the same seed gives the same front")] = 1
     patience: Annotated[
         int,
-        Field(ge=0, description="generations without gain of hypervolume after which the search stops; 0: never"),
+        Field(
+            strict=True,
+            ge=0,
+            description="generations without gain of hypervolume after which the search stops; 0: never",
+        ),
     ] = 60
 
 
@@ -116,15 +132,18 @@ class ProblemFile(Parameters):
     stage: StageTable
     conditions: ConditionsTable
     sizes: Annotated[
-        dict[str, JsonValue],
+        dict[str, Any],
+        WithJsonSchema(_named(_RANGE, 2)),
         Field(description="every size of the stage: one value fixes it, two values free it between them"),
     ]
     goals: Annotated[
-        dict[str, JsonValue],
+        dict[str, Any],
+        WithJsonSchema(_named({"enum": ["max", "min"]})),
         Field(description='measures to trade on the front, each "max" or "min"'),
     ]
     limits: Annotated[
-        dict[str, JsonValue],
+        dict[str, Any],
+        WithJsonSchema(_named(_BOUNDS)),
         Field(description='bounds on measures: { min = "…" }, { max = "…" } or both', default_factory=dict),
     ]
     search: SearchTable = SearchTable()
@@ -136,19 +155,32 @@ class SizingFile(Parameters):
     model_config = ConfigDict(extra="forbid", frozen=True, title="optisize sizing file")
 
     title: Annotated[str, Field(max_length=200, description="what the sizing is")] = ""
-    sizes: Annotated[dict[str, JsonValue], Field(description="one value for every size")]
+    sizes: Annotated[
+        dict[str, Any], WithJsonSchema(_named(_QUANTITY, 2)), Field(description="one value for every size")
+    ]
 
 
 Bound = Literal["min", "max"]
 
 
-def flatten(table: Mapping[str, Any], is_leaf: Callable[[Any], bool], prefix: str = "") -> dict[str, Any]:
-    """Return a nested table with dotted keys: ``{"input": {"width": 1}}`` becomes ``{"input.width": 1}``."""
+def flatten(table: Mapping[str, Any], is_leaf: Callable[[str, Any], bool], path: str) -> dict[str, Any]:
+    """Return a nested table with dotted keys: ``{"input": {"width": 1}}`` becomes ``{"input.width": 1}``.
+
+    Args:
+        table: as it was read.
+        is_leaf: tells of a dotted key and its table whether the table is a value.
+        path: the key of the table itself.
+
+    Raises InputError for a key that is there twice, once dotted and once in quotes.
+    """
     flat: dict[str, Any] = {}
-    for key, value in table.items():
-        name = f"{prefix}{key}"
-        if isinstance(value, dict) and not is_leaf(value):
-            flat.update(flatten(value, is_leaf, f"{name}."))
+    waiting = list(reversed([*table.items()]))
+    while waiting:
+        name, value = waiting.pop()
+        if isinstance(value, dict) and value and not is_leaf(name, value):
+            waiting.extend((f"{name}.{key}", value[key]) for key in reversed([*value]))
+        elif name in flat:
+            raise InputError(f"{path}.{name}: is there twice")
         else:
             flat[name] = value
     return flat
@@ -159,8 +191,8 @@ def read_size(value: object, unit: str) -> tuple[float, float]:
 
     Raises QuantityError.
     """
-    parts = value if isinstance(value, list) else [value, value]
-    if len(parts) != 2:
+    parts = value if isinstance(value, list | dict) else [value, value]
+    if len(parts) != 2 or isinstance(parts, dict):
         raise QuantityError(f"found {shorten(value)}; one value or a range of two is needed")
     low, high = (_positive(part, unit) for part in parts)
     if low > high:

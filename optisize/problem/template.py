@@ -51,4 +51,4 @@ patience    = 60                   # generations without gain after which the se
 def new_problem(title: str) -> str:
     """Return the text of a new problem file with a title."""
     safe = "".join(c for c in title if c.isprintable()).replace("\\", " ").replace('"', "'")
-    return TEMPLATE.format(title=safe)
+    return TEMPLATE.format(title=safe[:200])

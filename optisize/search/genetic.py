@@ -69,6 +69,7 @@ def start(
         population=nobody,
         archive=Archive.empty(dimensions, goals),
         random=dict(random.bit_generator.state),
+        shares=variation.SHARES,
     )
     return advanced(before, evaluated(evaluate, vectors, goals), random)
 
@@ -154,7 +155,7 @@ def advanced(
         generation=record.generation,
         evaluations=record.evaluations,
         repeats=repeats,
-        shares=variation.rewarded(state.shares, counts, _improving(state, merged, once, best)),
+        shares=variation.rewarded(state.shares, counts, _improving(state, merged, once, best), state.ideal.size),
         mark=_marked(state.mark, record),
         normalisation=normalisation,
         records=(*state.records, record),

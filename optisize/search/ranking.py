@@ -107,9 +107,8 @@ def dominates(losses: Floats, violation: Floats, others: Floats, others_violatio
     ahead = (losses[:, :, None] <= others[:, None, :]).all(axis=0) & (losses[:, :, None] < others[:, None, :]).any(
         axis=0
     )
-    own, theirs = violation[:, None], others_violation[None, :]
-    both = np.maximum(own, theirs) <= 0.0
-    return np.where(both, ahead, own < theirs)
+    missed, missed_there = violation[:, None], others_violation[None, :]
+    return np.where(np.maximum(missed, missed_there) <= 0.0, ahead, missed < missed_there)
 
 
 def survivors(losses: Floats, rank: Indices, count: int) -> Indices:

@@ -15,8 +15,6 @@ import numpy as np
 from optisize.search.archive import Archive, Front
 from optisize.search.arrays import Floats, Indices
 
-SHARES = (0.4, 0.3, 0.3)  # at the start: crossover and mutation, differences of all, differences of neighbours
-
 Stopped: TypeAlias = Literal["", "budget", "stalled", "interrupted"]
 
 
@@ -121,7 +119,7 @@ class State:
     generation: int = 0
     evaluations: int = 0
     repeats: int = 0
-    shares: tuple[float, ...] = SHARES
+    shares: tuple[float, ...] = ()
     mark: Mark = Mark()
     normalisation: Normalisation | None = None
     records: tuple[Record, ...] = ()

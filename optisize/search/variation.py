@@ -21,10 +21,11 @@ MUTATION_ETA = 20.0  # each coordinate with probability 1 / D
 DE_CROSSOVER = (0.9, 0.2)
 LEAST_FACTOR, MOST_FACTOR = 0.05, 0.9
 PULLED_SHARE = 0.5
-SETTLED_SHARES = (0.1, 0.05, 0.85)  # once little improves: crossover and mutation, differences of all, of neighbours
+SHARES = (0.4, 0.3, 0.3)  # at the start: crossover and mutation, differences of all, differences of neighbours
+SETTLED_SHARES = (0.1, 0.05, 0.85)  # once little improves
 LEAST_SHARE = 0.05
 LEARNING = 0.2
-TELLING = 100  # offspring that improve the population, from which on their kinds alone decide
+TELLING = 0.125  # the part of the offspring that improves the population from which on their kinds alone decide
 NEIGHBOURS = 12
 ANYONE_SHARE = 0.1
 FOLLOWED_FACTOR = (0.4, 0.9)
@@ -36,7 +37,7 @@ def split(count: int, shares: tuple[float, ...]) -> tuple[int, ...]:
     return (*whole, count - sum(whole))
 
 
-def rewarded(shares: tuple[float, ...], counts: tuple[int, ...], improving: Indices) -> tuple[float, ...]:
+def rewarded(shares: tuple[float, ...], counts: tuple[int, ...], improving: Indices, goals: int) -> tuple[float, ...]:
     """The shares of the kinds of variation, moved towards those whose offspring improve the population.
 
     Where few improve it the front is reached, and following it finds most of what is left; but no share falls below a
@@ -44,15 +45,16 @@ def rewarded(shares: tuple[float, ...], counts: tuple[int, ...], improving: Indi
     source.
 
     counts: how many offspring each kind made; improving: positions, among the offspring in the order of the kinds, of
-    those that dominate a design of the population before them.
+    those that dominate a design of the population before them; goals: with one there is no front to follow, with more
+    than three a population is too few to have near neighbours on it.
     """
     made = np.array(counts, dtype=float)
-    if not made.all():
+    if not made.size or not made.all():
         return shares
     kinds = np.searchsorted(np.cumsum(made), improving, side="right")
     rate = np.bincount(kinds, minlength=made.size)[: made.size] / made
-    known = min(1.0, improving.size / TELLING)
-    wanted = (1.0 - known) * np.array(SETTLED_SHARES)
+    known = min(1.0, improving.size / (TELLING * made.sum()))
+    wanted = (1.0 - known) * np.array(SETTLED_SHARES if 1 < goals < 4 else SHARES)
     if improving.size:
         wanted = wanted + known * rate / rate.sum()
     moved = np.maximum((1.0 - LEARNING) * np.array(shares) + LEARNING * wanted, LEAST_SHARE)

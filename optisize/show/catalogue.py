@@ -84,7 +84,7 @@ def process_record(process: Process) -> dict[str, Any]:
 def print_process(name: str, process: Process) -> None:
     """Print every parameter of a process, and what its transistors can do."""
     rows = [[f"{p.table}.{p.name}", p.value, p.meaning] for p in parameters(process)]
-    print_table(f"{name}: {process.title}\n{process.note}", ["parameter", "value", "meaning"], rows, left=3)
+    print_table(f"{name}: {process.title}; {process.note}", ["parameter", "value", "meaning"], rows, left=3)
     shown = []
     for c in _characteristics(process):
         for k, level in enumerate(c.inversion):

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import combinations
@@ -252,22 +254,32 @@ def write_figures(run: Run, directory: Path, formats: Sequence[str] = ("png",), 
     """
     plt = _pyplot()
     drawings = {"history": draw_history}
-    if len(run.problem.goals) > 1:
+    if len(run.problem.goals) > 1 and len(run.front):
         drawings = {"trade-offs": draw_trade_offs, **drawings}
     written = []
     for name, draw in drawings.items():
         figure = draw(run)
-        for kind in formats:
-            path = directory / f"{name}.{kind}"
-            beside = directory / f".{name}.{kind}"
-            try:
-                figure.savefig(beside, dpi=dpi, format=kind)
-                beside.replace(path)
-            except OSError as error:
-                raise OptisizeError(f"{path}: cannot be written: {error.strerror or error}") from None
-            written.append(path)
-        plt.close(figure)
+        try:
+            written += [_write(figure, directory / f"{name}.{kind}", kind, dpi) for kind in formats]
+        finally:
+            plt.close(figure)
     return written
+
+
+def _write(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
+    """Write one figure beside its place, then put it there; a letter that the font lacks is drawn as a box."""
+    beside = path.with_name(f".{path.name}")
+    try:
+        with warnings.catch_warnings():
+            warnings.filterwarnings("ignore", "Glyph .* missing from font")
+            figure.savefig(beside, dpi=dpi, format=kind)
+        beside.replace(path)
+    except OSError as error:
+        raise OptisizeError(f"{path.name}: cannot be written: {error.strerror or error}") from None
+    finally:
+        with contextlib.suppress(OSError):
+            beside.unlink()
+    return path
 
 
 def describe(run: Run) -> str:

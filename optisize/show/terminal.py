@@ -13,6 +13,7 @@ from rich.console import Console
 from rich.markup import escape
 from rich.table import Table
 
+from optisize.errors import printable
 from optisize.front.assess import Assessment
 from optisize.front.run import Run
 from optisize.front.summary import Binding, Extreme
@@ -25,30 +26,50 @@ from optisize.stage.measures import find
 CAUTION = "A starting point for your simulator, not a sign-off: layout, reliability and ESD need the foundry's models."
 
 
-def console(stderr: bool = False) -> Console:
-    """Return a console that keeps its lines whole when it is no terminal."""
-    out = Console(stderr=stderr, highlight=False)
-    if not out.is_terminal:
-        out = Console(stderr=stderr, highlight=False, width=200, no_color=True)
-    return out
+GAP = 2  # blanks between the columns of a table
 
 
-def _table(title: str, headings: Iterable[str], left: int = 1) -> Table:
+def console(width: int = 0) -> Console:
+    """Return a console that, when it is no terminal, has room for lines of 200 characters, or of more if asked."""
+    out = Console(highlight=False)
+    return out if out.is_terminal else Console(highlight=False, width=max(width, 200), no_color=True)
+
+
+def _table(headings: Iterable[str], left: int = 1) -> Table:
     """Return an empty table whose first `left` columns hold words and the rest numbers."""
-    table = Table(
-        title=escape(title) if title else None, title_justify="left", title_style="bold", box=None, pad_edge=False
-    )
+    table = Table(box=None, pad_edge=False)
     for i, heading in enumerate(headings):
         table.add_column(heading, justify="left" if i < left else "right", no_wrap=i >= left or i == 0, overflow="fold")
     return table
 
 
 def print_table(title: str, headings: Sequence[str], rows: Iterable[Sequence[str]], left: int = 1) -> None:
-    """Print rows of text as a table on stdout."""
-    table = _table(title, headings, left)
-    for row in rows:
-        table.add_row(*(escape(cell) for cell in row))
-    console().print(table)
+    """Print rows of text as a table on stdout, below a title that may begin with an empty line.
+
+    Columns of numbers are never cut: those that do not fit into the terminal follow in further tables, each with the
+    first column again.
+    """
+    cells = [[printable(cell) for cell in row] for row in rows]
+    widths = [max(len(line[i]) for line in (headings, *cells)) for i in range(len(headings))]
+    out = console(sum(widths) + GAP * len(widths) if left <= 1 else 0)
+    text = title.lstrip("\n")
+    out.print("\n" * (len(title) - len(text)) + f"[bold]{escape(printable(text))}[/bold]", soft_wrap=True)
+    for chosen in [range(len(widths))] if left > 1 else _blocks(widths, out.width):
+        table = _table([headings[i] for i in chosen], left)
+        for row in cells:
+            table.add_row(*(escape(row[i]) for i in chosen))
+        out.print(table)
+
+
+def _blocks(widths: Sequence[int], room: int) -> list[list[int]]:
+    """Return which columns go into which table, the first column into each."""
+    blocks = [[0]]
+    for i, width in enumerate(widths[1:], start=1):
+        used = sum(widths[k] + GAP for k in blocks[-1])
+        if used + width > room and len(blocks[-1]) > 1:
+            blocks.append([0])
+        blocks[-1].append(i)
+    return blocks
 
 
 class Progress:
@@ -94,7 +115,9 @@ def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Bindin
         f"{info['designs']} designs on the front, thinned from {info['archive']}; "
         f"hypervolume {info['hypervolume']:.4f} of the box in run.json"
     )
-    if binding:
+    if not info["designs"]:
+        out.print("no design meets every limit yet")
+    elif binding:
         parts = [f"{b.name} ({b.bound_name} {write(b.bound, b.unit)}: {100 * b.share:.0f} %)" for b in binding]
         out.print("limits that bind, with the share of designs at each: " + escape(", ".join(parts)))
     else:

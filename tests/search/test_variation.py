@@ -7,6 +7,7 @@ from optisize.search.variation import (
     LEAST_SHARE,
     SBX_ETA,
     SETTLED_SHARES,
+    SHARES,
     crossed,
     differed,
     followed,
@@ -57,16 +58,17 @@ def test_children_of_neighbours_stay_near_the_front(random):
 
 def test_shares_move_towards_the_variation_whose_offspring_improve_the_population():
     shares, counts = (0.4, 0.3, 0.3), (400, 300, 300)
-    moved = rewarded(shares, counts, np.arange(400, 600))
+    moved = rewarded(shares, counts, np.arange(400, 600), 3)
     assert moved[1] > shares[1]
     assert sum(moved) == pytest.approx(1.0)
     for _ in range(100):
-        moved = rewarded(moved, counts, np.arange(400, 600))
+        moved = rewarded(moved, counts, np.arange(400, 600), 3)
     assert min(moved) >= 0.9 * LEAST_SHARE, "none is lost"
     for _ in range(100):
-        moved = rewarded(moved, counts, np.arange(0))
+        moved = rewarded(moved, counts, np.arange(0), 3)
     np.testing.assert_allclose(moved, SETTLED_SHARES, atol=0.01, err_msg="nothing improves: the front is followed")
-    assert rewarded(shares, (), np.arange(2)) == shares, "the first sample was made by none of them"
+    np.testing.assert_allclose(rewarded(SHARES, counts, np.arange(0), 1), SHARES, err_msg="one goal has no front")
+    assert rewarded(shares, (), np.arange(2), 3) == shares, "the first sample was made by none of them"
 
 
 def test_tournaments_prefer_the_better_design_as_two_draws_do(random):

@@ -1,0 +1,104 @@
+"""Vectors and sizings: on the grid, within reach of the ranges, and the same there and back."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+
+from optisize.problem.evaluate import Problem
+from optisize.problem.load import load_sizing
+from optisize.problem.space import SizingSpace, round_significant
+from tests.problem.texts import MIRROR, RESISTOR, SIZING, changed, loaded
+
+QUICK = settings(max_examples=60, derandomize=True, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+PROCESSES = ("generic-180", "generic-65", "handbook")
+
+
+@pytest.fixture(scope="module", params=PROCESSES)
+def space(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> SizingSpace:
+    text = changed(MIRROR, ("process", f'process = "{request.param}"'))
+    for group in ("input", "load", "tail"):
+        text = changed(text, (f"{group}.length", f'{group}.length = ["0.5 um", "4 um"]'))
+    text = changed(text, ("input.width", 'input.width = ["4 um", "900 um"]'), ("load.width", 'load.width = "4 um"'))
+    return loaded(tmp_path_factory.mktemp("space"), text).space
+
+
+@given(logs=st.lists(st.floats(-7.0, -2.0), min_size=1, max_size=20))
+@QUICK
+def test_snapping_twice_changes_nothing(space: SizingSpace, logs: list[float]) -> None:
+    values = 10.0 ** np.array(logs)
+    for size in space.topology.sizes:
+        scaled = values * {"resistance": 1e9, "count": 1e4}.get(size.kind, 1.0)
+        once = space.snap(size, scaled)
+        np.testing.assert_array_equal(space.snap(size, once), once, err_msg=size.name)
+
+
+@given(logs=st.lists(st.floats(-6.3, -3.0), min_size=1, max_size=20))
+@QUICK
+def test_a_snapped_size_is_the_nearest_that_can_be_drawn(space: SizingSpace, logs: list[float]) -> None:
+    grid, values = space.process.grid, 10.0 ** np.array(logs)
+    for size in space.topology.sizes:
+        if size.kind == "length":
+            wanted = np.maximum(values, grid.minimum_length)
+            snapped = space.snap(size, wanted)
+            assert (np.abs(snapped - wanted) <= 0.5001 * grid.step).all()
+            steps = snapped / grid.step
+        elif size.kind == "width":
+            wanted = np.maximum(values, 2 * grid.minimum_width)
+            snapped = space.snap(size, wanted)
+            fingers = 2 * np.ceil(wanted / grid.maximum_finger) + 2  # no more than these
+            assert (np.abs(snapped - wanted) <= 0.5001 * grid.step * fingers).all()
+            steps = snapped / grid.step
+        else:
+            continue
+        np.testing.assert_allclose(steps, np.rint(steps), rtol=0, atol=1e-6)
+
+
+@given(seed=st.integers(0, 2**32 - 1))
+@QUICK
+def test_a_sizing_survives_the_way_to_a_vector_and_back(space: SizingSpace, seed: int) -> None:
+    sizes = space.decode(np.random.default_rng(seed).random((space.dimensions, 8)))
+    again = space.decode(space.encode(sizes))
+    for name in sizes:
+        np.testing.assert_array_equal(again[name], sizes[name], err_msg=name)
+
+
+def test_the_ends_of_a_vector_are_the_ends_of_the_ranges(space: SizingSpace) -> None:
+    for end in (0.0, 1.0):
+        sizes = space.decode(np.full((space.dimensions, 1), end))
+        for r in space.ranges:
+            edge = r.high if end and r.free else r.low
+            np.testing.assert_array_equal(sizes[r.size.name], space.snap(r.size, np.array([edge])), err_msg=r.size.name)
+
+
+def test_vectors_beyond_their_ends_stay_at_them(space: SizingSpace) -> None:
+    ends = space.decode(np.array([[0.0, 1.0]] * space.dimensions))
+    beyond = space.decode(np.array([[-3.0, 7.0]] * space.dimensions))
+    for name in ends:
+        np.testing.assert_array_equal(beyond[name], ends[name])
+
+
+def test_the_scale_is_logarithmic(space: SizingSpace) -> None:
+    middle = space.decode(np.full((space.dimensions, 1), 0.5))["bias.current"]
+    assert middle[0] == pytest.approx(np.sqrt(100e-9 * 20e-6), rel=1e-2)
+
+
+@given(value=st.floats(1e-12, 1e12), digits=st.integers(1, 6))
+def test_rounding_keeps_as_many_digits_as_asked(value: float, digits: int) -> None:
+    rounded = round_significant(np.array([value]), digits)[0]
+    assert rounded == pytest.approx(float(f"{value:.{digits}g}"), rel=10.0**-digits)
+    assert abs(rounded - value) <= 0.51 * 10.0 ** (np.floor(np.log10(value)) + 1 - digits)
+
+
+def test_a_manual_sizing_is_put_on_the_grid(tmp_path: Path) -> None:
+    problem: Problem = loaded(tmp_path, RESISTOR)
+    text = changed(SIZING, ("input.length", 'input.length = "0.5012 um"'), ("bias.current", "bias.current = 2.0004e-6"))
+    (tmp_path / "hand.toml").write_text(text, encoding="utf-8")
+    sizes = load_sizing(tmp_path / "hand.toml", problem)
+    assert sizes["input.length"] == pytest.approx([0.5e-6], rel=1e-12)
+    assert sizes["bias.current"] == [2e-6]
+    assert list(sizes) == list(problem.topology.size_names)
