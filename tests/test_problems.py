@@ -38,7 +38,9 @@ def test_no_design_violates_a_limit_when_its_row_is_evaluated_again(run: Run) ->
 
 def test_no_design_dominates_another(run: Run) -> None:
     losses = run.problem.judge(values_of(run.problem, run.front)).losses
-    ahead = (losses[:, :, None] <= losses[:, None, :]).all(axis=0) & (losses[:, :, None] < losses[:, None, :]).any(axis=0)
+    ahead = (losses[:, :, None] <= losses[:, None, :]).all(axis=0) & (losses[:, :, None] < losses[:, None, :]).any(
+        axis=0
+    )
     assert not ahead.any()
 
 

@@ -47,6 +47,19 @@ def test_every_command_works(place: Path, monkeypatch: pytest.MonkeyPatch) -> No
         result = CliRunner().invoke(app, arguments)
         assert result.exit_code == 0, (line, result.output)
         assert result.stdout.strip(), line
+        if line.startswith(("optisize front", "optisize assess")):
+            assert tidy(result.stdout) == tidy(shown_output(line)), line
+
+
+def shown_output(command: str) -> str:
+    """Return what the README shows below a command."""
+    block = next(b for b in blocks("console") if f"$ {command}\n" in b)
+    return block.split(f"$ {command}\n", 1)[1]
+
+
+def tidy(text: str) -> list[str]:
+    """Return the lines of an output without trailing blanks."""
+    return [line.rstrip() for line in text.strip("\n").splitlines()]
 
 
 def test_the_python_lines_work(place: Path) -> None:

@@ -13,13 +13,13 @@ import pandas as pd
 
 import optisize
 from optisize.errors import InputError, NothingFeasible
+from optisize.evolution import genetic
+from optisize.evolution.state import Evaluated, Settings, State
 from optisize.front.run import Run
 from optisize.front.table import design_table, sizes_of
 from optisize.problem.evaluate import Problem
 from optisize.process.law import Array
 from optisize.quantities import write
-from optisize.search import genetic
-from optisize.search.state import Evaluated, Settings, State
 
 BATCH = 800  # designs that are evaluated at once where the population is smaller
 SURVEY = 512  # designs of the fixed sample that sets the box in which the hypervolume is measured

@@ -16,12 +16,12 @@ import numpy as np
 import pandas as pd
 
 from optisize.errors import InputError, OptisizeError
+from optisize.evolution import checkpoint
+from optisize.evolution.state import State
 from optisize.files import near_file, read_bytes
 from optisize.front.table import UNLIMITED, column, to_csv, units
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_problem
-from optisize.search import checkpoint
-from optisize.search.state import State
 
 PROBLEM, PROCESS, FRONT, HISTORY, INFO = "problem.toml", "process.toml", "front.csv", "history.csv", "run.json"
 CHECKPOINT = "checkpoint.npz"

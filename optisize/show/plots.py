@@ -188,17 +188,11 @@ def _label_bound(spot: Axes, vertical: bool, bound: float, text: str) -> None:
 
 
 def _mark_better(spot: Axes, shown: TradeOff) -> None:
-    """Draw an arrow into the corner where both goals are at their best."""
+    """Point above the picture to the corner where both goals are at their best; inside it would hide designs."""
     right, up = shown.x.better == "max", shown.y.better == "max"
-    tip = (0.97 if right else 0.03, 0.97 if up else 0.03)
-    tail = (0.87 if right else 0.13, 0.87 if up else 0.13)
-    spot.annotate(
-        "", xy=tip, xytext=tail, xycoords="axes fraction", arrowprops={"arrowstyle": "-|>", "color": "0.2", "lw": 1.4}
-    )
-    spot.text(
-        tail[0], tail[1], "better", transform=spot.transAxes, fontsize=8, color="0.2",
-        ha="right" if right else "left", va="top" if up else "bottom",
-    )  # fmt: skip
+    arrow = {(True, True): "\u2197", (True, False): "\u2198", (False, True): "\u2196", (False, False): "\u2199"}
+    text = f"better {arrow[right, up]}" if right else f"{arrow[right, up]} better"
+    spot.set_title(text, fontsize=10, color="0.2", loc="right" if right else "left")
 
 
 def _plain_ticks(spot: Axes, shown: TradeOff) -> None:

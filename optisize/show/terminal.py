@@ -14,13 +14,13 @@ from rich.markup import escape
 from rich.table import Table
 
 from optisize.errors import printable
+from optisize.evolution.state import State
 from optisize.front.assess import Assessment
 from optisize.front.run import Run
 from optisize.front.summary import Binding, Extreme
 from optisize.front.table import column, unit_of
 from optisize.problem.evaluate import Problem
 from optisize.quantities import write
-from optisize.search.state import State
 from optisize.stage.measures import find
 
 CAUTION = "A starting point for your simulator, not a sign-off: layout, reliability and ESD need the foundry's models."

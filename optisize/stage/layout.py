@@ -62,7 +62,7 @@ def snap_length(length: Array, grid: Grid) -> Array:
 def snap_resistance(resistance: Array, resistor: ResistorParameters, grid: Grid) -> Array:
     """Return the nearest resistance whose length is on the grid, at the matched width."""
     per_step = resistor.sheet_resistance * grid.step / resistor.width
-    return np.maximum(np.rint(resistance / per_step), 1.0) * per_step
+    return np.round(np.maximum(np.rint(resistance / per_step), 1.0) * per_step, 6)
 
 
 @dataclass(frozen=True)

@@ -36,14 +36,14 @@ from typing import Any
 import numpy as np
 
 from optisize.errors import NothingFeasible
+from optisize.evolution.archive import Archive, Front
+from optisize.evolution.state import Settings
 from optisize.front import explore
 from optisize.front.run import Run
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_problem
 from optisize.process.card import load_process
 from optisize.process.law import Array
-from optisize.search.archive import Archive, Front
-from optisize.search.state import Settings
 from optisize.stage.analysis import Analysis
 from optisize.stage.circuit import size_circuit
 from optisize.stage.measures import CATALOGUE, FIGURES

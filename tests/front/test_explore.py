@@ -9,13 +9,13 @@ import numpy as np
 import pytest
 
 from optisize.errors import InputError, NothingFeasible
+from optisize.evolution.state import State
 from optisize.front import explore
 from optisize.front.run import CHECKPOINT, Run, load_run
 from optisize.front.summary import binding_limits, extremes
 from optisize.front.table import to_csv
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_sizing
-from optisize.search.state import State
 from tests.problem.texts import MIRROR, RESISTOR, SIZING, changed, loaded
 
 BROAD = (("population", "population = 200"), ("generations", "generations = 21"))  # 4 generations of 800 at once

@@ -17,9 +17,9 @@ import pandas as pd
 import pytest
 
 from optisize.errors import InputError, OptisizeError
+from optisize.evolution import checkpoint
 from optisize.front.run import load_run
 from optisize.front.table import design_table, sizes_of, to_csv, units
-from optisize.search import checkpoint
 from tests.conftest import Cli
 from tests.problem.test_bad_input import refused
 from tests.problem.texts import IDEAL, RESISTOR, changed, loaded

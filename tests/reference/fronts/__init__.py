@@ -4,7 +4,8 @@
 
 remakes them: for each problem the union of the archives of ten runs (seeds 101 to 110) of ten times the default budget,
 without stopping early. What is stored is the box between the best and the worst loss of that union (a tenth wider on
-the far side: the reference point at 1.1 of the range that is customary for DTLZ2, CHECKS row 19), and the hypervolume of the union in it, with the hashes of the problem and process files.
+the far side: the reference point at 1.1 of the range that is customary for DTLZ2), and the hypervolume of the union in
+it, with the hashes of the problem and process files.
 """
 
 from __future__ import annotations
@@ -14,9 +15,9 @@ from pathlib import Path
 
 import numpy as np
 
+from optisize.evolution.archive import Front
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_problem
-from optisize.search.archive import Front
 
 ROOT = Path(__file__).parents[3]
 HERE = Path(__file__).parent

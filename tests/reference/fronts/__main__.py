@@ -9,8 +9,8 @@ from concurrent.futures import ProcessPoolExecutor
 import moocore
 import numpy as np
 
+from optisize.evolution.archive import Front
 from optisize.front.explore import search, settings_of
-from optisize.search.archive import Front
 from tests.reference.fronts import HERE, PROBLEMS, SEEDS, TIMES, problem
 
 

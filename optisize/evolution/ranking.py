@@ -13,7 +13,7 @@ import moocore
 import numpy as np
 from numpy.typing import NDArray
 
-from optisize.search.arrays import Floats, Indices, Mask
+from optisize.evolution.arrays import Floats, Indices, Mask
 
 _MEASURED_FROM = 1.2  # where hypervolume contributions are measured from, in ranges of the front
 

@@ -12,8 +12,8 @@ from dataclasses import dataclass, replace
 import moocore
 import numpy as np
 
-from optisize.search.arrays import Floats, Indices
-from optisize.search.ranking import distinct
+from optisize.evolution.arrays import Floats, Indices
+from optisize.evolution.ranking import distinct
 
 _EXACT_GOALS = 4  # exact hypervolume up to here: above, its cost grows as size ** (goals - 2)
 _DIRECTIONS = 4096  # of the approximation above; within about 1 % for five to ten goals

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from optisize.search.variation import (
+from optisize.evolution.variation import (
     LEAST_SHARE,
     SBX_ETA,
     SETTLED_SHARES,

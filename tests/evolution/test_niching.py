@@ -8,8 +8,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from pymoo.algorithms.moo.nsga3 import niching
 
-from optisize.search.niching import directions, filled, survivors
-from optisize.search.ranking import ranks
+from optisize.evolution.niching import directions, filled, survivors
+from optisize.evolution.ranking import ranks
 
 
 @pytest.mark.parametrize("goals", [4, 5, 8, 10, 15])

@@ -12,7 +12,7 @@ from numpy.random import Generator
 from pymoo.operators.crossover.sbx import cross_sbx
 from pymoo.operators.mutation.pm import mut_pm
 
-from optisize.search.arrays import Floats, Indices
+from optisize.evolution.arrays import Floats, Indices
 
 SBX_ETA = 15.0
 SBX_PROBABILITY = 0.9

@@ -6,8 +6,8 @@ import math
 
 import numpy as np
 
-from optisize.search.archive import Front
-from optisize.search.state import Evaluate, Evaluated, Settings, State
+from optisize.evolution.archive import Front
+from optisize.evolution.state import Evaluate, Evaluated, Settings, State
 
 
 def unconstrained(losses_of) -> Evaluate:
@@ -108,7 +108,7 @@ def volume(front: Front, reference: float) -> float:
 
 def begin(evaluate: Evaluate, dimensions: int, goals: int, *, reference: float = 11.0, seeds=None, **settings) -> State:
     """The start of a search in the box from zero to a reference with equal coordinates."""
-    from optisize.search.genetic import start
+    from optisize.evolution.genetic import start
 
     return start(
         evaluate,
@@ -123,7 +123,7 @@ def begin(evaluate: Evaluate, dimensions: int, goals: int, *, reference: float =
 
 def same(first: State, second: State) -> bool:
     """Whether two searches are equal bit for bit, in all that a checkpoint keeps."""
-    from optisize.search.checkpoint import to_arrays
+    from optisize.evolution.checkpoint import to_arrays
 
     one, two = to_arrays(first), to_arrays(second)
     return one.keys() == two.keys() and all(np.array_equal(one[name], two[name]) for name in one)

@@ -14,10 +14,10 @@ from dataclasses import replace
 import numpy as np
 from numpy.random import PCG64, Generator
 
-from optisize.search import ranking, variation
-from optisize.search.archive import Archive, Front
-from optisize.search.arrays import Floats, Indices
-from optisize.search.state import Evaluate, Evaluated, Mark, Normalisation, Record, Settings, State, Stopped
+from optisize.evolution import ranking, variation
+from optisize.evolution.archive import Archive, Front
+from optisize.evolution.arrays import Floats, Indices
+from optisize.evolution.state import Evaluate, Evaluated, Mark, Normalisation, Record, Settings, State, Stopped
 
 IMPROVEMENT = 1e-4  # the least relative progress that keeps a search from being called stalled
 NICHING_GOALS = 4  # from here on survival by niches
@@ -177,7 +177,7 @@ def _survived(
     count = state.settings.population
     if merged.losses.shape[0] < NICHING_GOALS:
         return ranking.survivors(merged.losses, rank, count), None
-    from optisize.search import niching
+    from optisize.evolution import niching
 
     scaled = (merged.losses - state.ideal[:, None]) / (state.reference - state.ideal)[:, None]
     best, known = niching.survivors(scaled, merged.violation <= 0.0, rank, count, state.normalisation, random)

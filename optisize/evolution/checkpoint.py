@@ -16,9 +16,9 @@ from typing import Any, TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
-from optisize.search.archive import Archive, Front
-from optisize.search.arrays import Floats
-from optisize.search.state import Evaluated, Mark, Normalisation, Record, Settings, State
+from optisize.evolution.archive import Archive, Front
+from optisize.evolution.arrays import Floats
+from optisize.evolution.state import Evaluated, Mark, Normalisation, Record, Settings, State
 
 Arrays: TypeAlias = dict[str, NDArray[Any]]
 

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from optisize.search.genetic import run
+from optisize.evolution.genetic import run
 
 from .problems import begin, bnh, dtlz1, dtlz2, simplex_volume, sphere_volume, volume, zdt, zdt_front
 

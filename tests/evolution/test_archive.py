@@ -8,8 +8,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from optisize.search.archive import Archive, Front, spread
-from optisize.search.genetic import run
+from optisize.evolution.archive import Archive, Front, spread
+from optisize.evolution.genetic import run
 
 from .problems import begin, bnh, coarse, dtlz2, sphere_volume
 

@@ -8,7 +8,7 @@ from hypothesis import strategies as st
 from pymoo.operators.survival.rank_and_crowding.metrics import calc_crowding_distance
 from pymoo.util.nds.non_dominated_sorting import NonDominatedSorting
 
-from optisize.search.ranking import contributions, crowding, distinct, ranks, survivors
+from optisize.evolution.ranking import contributions, crowding, distinct, ranks, survivors
 
 
 def test_constraint_domination_has_three_cases():

@@ -12,8 +12,8 @@ from typing import Any, Literal, TypeAlias
 
 import numpy as np
 
-from optisize.search.archive import Archive, Front
-from optisize.search.arrays import Floats, Indices
+from optisize.evolution.archive import Archive, Front
+from optisize.evolution.arrays import Floats, Indices
 
 Stopped: TypeAlias = Literal["", "budget", "stalled", "interrupted"]
 

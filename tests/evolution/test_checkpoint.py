@@ -3,8 +3,8 @@
 import numpy as np
 import pytest
 
-from optisize.search.checkpoint import from_arrays, load, save, to_arrays
-from optisize.search.genetic import run, step
+from optisize.evolution.checkpoint import from_arrays, load, save, to_arrays
+from optisize.evolution.genetic import run, step
 
 from .problems import begin, bnh, coarse, dtlz2, hopeless, same
 

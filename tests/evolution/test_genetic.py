@@ -7,8 +7,8 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from optisize.search.genetic import extended, run, sample, start, step
-from optisize.search.state import Evaluated, Settings
+from optisize.evolution.genetic import extended, run, sample, start, step
+from optisize.evolution.state import Evaluated, Settings
 
 from .problems import begin, bnh, coarse, dtlz2, hopeless, same, zdt
 
@@ -228,4 +228,4 @@ def loaded(module, libraries):
 
 def test_imports_are_light():
     assert not loaded("optisize", ["pymoo", "moocore", "scipy", "matplotlib"])
-    assert not loaded("optisize.search.genetic", ["scipy", "matplotlib", "pandas"])
+    assert not loaded("optisize.evolution.genetic", ["scipy", "matplotlib", "pandas"])

@@ -15,8 +15,8 @@ from numpy.random import Generator
 from pymoo.algorithms.moo.nsga3 import associate_to_niches, get_extreme_points_c, get_nadir_point
 from pymoo.util.reference_direction import UniformReferenceDirectionFactory, get_partition_closest_to_points
 
-from optisize.search.arrays import Floats, Indices, Mask
-from optisize.search.state import Normalisation
+from optisize.evolution.arrays import Floats, Indices, Mask
+from optisize.evolution.state import Normalisation
 
 
 @lru_cache(maxsize=8)
