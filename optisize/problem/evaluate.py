@@ -20,7 +20,7 @@ from optisize.stage.circuit import Circuit, Conditions, size_circuit
 from optisize.stage.measures import Measure, Sense, find
 from optisize.stage.topology import Topology
 
-CHUNK = 1000  # designs solved together: their arrays stay in the cache
+CHUNK = 2000  # designs solved together: their arrays stay in the cache
 WORST = 20.0  # the violation of a limit is counted no further than this
 UNSOLVED = 100.0  # the violation of a design without an operating point
 CONSTANT = 1e-6  # in the units of a loss; a goal that varies by less over the space is no goal

@@ -35,6 +35,7 @@ class SquareLaw:
     threshold: Array
     body_effect: Array
     surface_potential: Array
+    root: Array
     modulation: Array
     oxide: Array
     overlap: Array
@@ -48,6 +49,7 @@ class SquareLaw:
             threshold=parameters["threshold"],
             body_effect=parameters["body_effect"],
             surface_potential=parameters["surface_potential"],
+            root=np.sqrt(parameters["surface_potential"]),
             modulation=parameters["channel_modulation"] / length,
             oxide=parameters["oxide_capacitance"] * width * length,
             overlap=parameters["overlap_capacitance"] * width,
@@ -63,42 +65,49 @@ class SquareLaw:
 
         Below zero bias the square root goes on as its tangent, as in SPICE.
         """
-        root0 = np.sqrt(self.surface_potential)
         inside = np.sqrt(self.surface_potential + np.maximum(vs, 0.0))
-        tangent = np.maximum(root0 + vs / (2.0 * root0), 0.0)
-        root = np.where(vs > 0.0, inside, tangent)
-        slope = np.where(vs > 0.0, 0.5 / inside, np.where(tangent > 0.0, 0.5 / root0, 0.0))
-        return self.threshold + self.body_effect * (root - root0), self.body_effect * slope
+        root, slope = inside, 0.5 / inside
+        if not vs.min() >= 0.0:
+            tangent = np.maximum(self.root + vs / (2.0 * self.root), 0.0)
+            root = np.where(vs > 0.0, inside, tangent)
+            slope = np.where(vs > 0.0, slope, np.where(tangent > 0.0, 0.5 / self.root, 0.0))
+        return self.threshold + self.body_effect * (root - self.root), self.body_effect * slope
 
     def drain(self, vg: Array, vd: Array, vs: Array) -> Drain:
         """Return current and derivatives at the terminal voltages [V], all of shape (T, N).
 
         Drain and source change roles where vd < vs, so the law is symmetric.
         """
-        forward = vd >= vs
-        low, vds = np.minimum(vd, vs), np.abs(vd - vs)
-        vth, body = self._threshold(low)
+        low = np.minimum(vd, vs)
+        return self._drain(vg, vd, vs, low, self._threshold(low))
+
+    def _drain(self, vg: Array, vd: Array, vs: Array, low: Array, threshold: tuple[Array, Array]) -> Drain:
+        """Return the drain current with the lower end of the channel at `low` and the threshold there."""
+        vth, body = threshold
+        vds = np.abs(vd - vs)
         vov = np.maximum(vg - low - vth, 0.0)
         vx = np.minimum(vds, vov)  # the channel sees vds in the triode region and vov beyond it
         modulated = 1.0 + self.modulation * vds
-        channel = self.beta * vx * (vov - 0.5 * vx)
+        strength = self.beta * vx
+        channel = strength * (vov - 0.5 * vx)
         current = channel * modulated
-        gm = self.beta * vx * modulated
+        gm = strength * modulated
         gds = self.beta * (vov - vx) * modulated + channel * self.modulation
         gms = gm * (1.0 + body) + gds
+        if (low == vs).all():
+            return Drain(current, gm, gds, gms)
+        forward = vd >= vs
         sign = np.where(forward, 1.0, -1.0)
-        return Drain(
-            id=sign * current,
-            gm=sign * gm,
-            gds=np.where(forward, gds, gms),
-            gms=np.where(forward, gms, gds),
-        )
+        return Drain(sign * current, sign * gm, np.where(forward, gds, gms), np.where(forward, gms, gds))
 
     def saturation(self, vg: Array, vd: Array, vs: Array) -> Saturation:
         """Return vdsat (the overdrive above threshold) and the strong-inversion level (vov / 2 n ut)^2."""
-        vth, body = self._threshold(vs)
+        return self._saturation(vg, vs, self._threshold(vs))
+
+    def _saturation(self, vg: Array, vs: Array, threshold: tuple[Array, Array]) -> Saturation:
+        vth, body = threshold
         vov = np.maximum(vg - vs - vth, 0.0)
-        on = np.where(vov > 0.0, 1.0, 0.0)
+        on = (vov > 0.0).astype(float)
         slope_factor = 1.0 + body
         return Saturation(
             vdsat=vov,
@@ -108,8 +117,11 @@ class SquareLaw:
         )
 
     def drain_and_saturation(self, vg: Array, vd: Array, vs: Array) -> tuple[Drain, Saturation]:
-        """Return both at once."""
-        return self.drain(vg, vd, vs), self.saturation(vg, vd, vs)
+        """Return both at once: where no device is turned round they share the threshold."""
+        low = np.minimum(vd, vs)
+        threshold = self._threshold(low)
+        drain = self._drain(vg, vd, vs, low, threshold)
+        return drain, self._saturation(vg, vs, threshold if (low == vs).all() else self._threshold(vs))
 
     def capacitances(self, vg: Array, vd: Array, vs: Array) -> Capacitances:
         """Return gate capacitances [F] of a conducting device.
@@ -136,8 +148,7 @@ class SquareLaw:
         Solves vs + gamma sqrt(phi + vs) = vg - vt0 - vov + gamma sqrt(phi), a quadratic in sqrt(phi + vs).
         """
         vov = np.sqrt(2.0 * current / self.beta)
-        root0 = np.sqrt(self.surface_potential)
-        right = vg - self.threshold - vov + self.body_effect * root0 + self.surface_potential
+        right = vg - self.threshold - vov + self.body_effect * self.root + self.surface_potential
         half = 0.5 * self.body_effect
         root = np.sqrt(np.maximum(right + half**2, 0.0)) - half
-        return np.where(root > root0, root**2 - self.surface_potential, vg - self.threshold - vov)
+        return np.where(root > self.root, root**2 - self.surface_potential, vg - self.threshold - vov)

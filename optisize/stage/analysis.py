@@ -120,7 +120,7 @@ class Analysis:
     def _rounding_scale(self) -> Array:
         """The size of the terms that cancel in the common-mode gain: gms times the resistance at the output."""
         node = self.wiring.index[self.topology.output[0][0]]
-        row = self.wiring.pair[1]
+        row = self.wiring.rows["input.n"]
         return np.maximum(self.drain.gms[row] / np.maximum(self.matrix[node, node], 1e-30), 1.0)
 
     @cached_property

@@ -114,27 +114,24 @@ def _margins(network: Network, here: Linearised, toward: Array) -> tuple[Array, 
     terminals, drain, saturation, _ = here
     rows, pair = network.wiring.saturating, network.wiring.pair
     change = network.terminals(toward)
-    room = (terminals.vds - saturation.vdsat)[rows]
-    by_gate, by_source = saturation.by_gate[:, None], saturation.by_source[:, None]
-    room_change = (change.vds - by_gate * change.gate - by_source * change.source)[rows]
+    room = (terminals.vds - saturation.vdsat).take(rows, axis=0)
+    moved = change.vds - saturation.by_gate[:, None] * change.gate - saturation.by_source[:, None] * change.source
     current = drain.id[pair]
-    flow = (
-        drain.gm[pair, None] * change.gate[pair]
-        + drain.gds[pair, None] * change.drain[pair]
-        - drain.gms[pair, None] * change.source[pair]
-    )
+    flow = drain.gm[pair, None] * change.gate[pair]
+    flow += drain.gds[pair, None] * change.drain[pair]
+    flow -= drain.gms[pair, None] * change.source[pair]
     total = current[0] + current[1]
     share = np.maximum(current / total, 1e-9)
     root = np.sqrt(share)
-    steering_change = (flow - share[:, None] * (flow[0] + flow[1])) / (2.0 * total * root[:, None])
+    flow -= share[:, None] * (flow[0] + flow[1])
+    flow /= (2.0 * total * root)[:, None]
     margin = np.concatenate([room, root - np.sqrt(STEERED)])
-    both = np.concatenate([room_change, steering_change])
+    both = np.concatenate([moved.take(rows, axis=0), flow])
     return margin, both[:, 0], both[:, 1]
 
 
 def _amplitude_step(margin: Array, rise: Array) -> Array:
     """Return the step (N,) to where the first margin that falls with the drive is predicted to vanish."""
-    falling = rise < 0.0
-    steps = np.where(falling, -margin / np.where(falling, rise, -1.0), np.inf)
+    steps = np.where(rise < 0.0, margin / -rise, np.inf)
     nearest = steps.min(axis=0)
     return np.where(np.isfinite(nearest), nearest, 0.1)

@@ -160,9 +160,9 @@ class Wiring:
         return np.array([i for i, x in enumerate(self.transistors) if x.saturates], dtype=np.intp)
 
     @cached_property
-    def pair(self) -> Indices:
-        """The rows of the two input transistors."""
-        return np.array([self.rows["input.p"], self.rows["input.n"]], dtype=np.intp)
+    def pair(self) -> slice:
+        """The rows of the two input transistors, which stand side by side."""
+        return slice(self.rows["input.p"], self.rows["input.n"] + 1)
 
     def drive(self, **voltages: float) -> Array:
         """Return (A,) with small-signal voltages on driven nodes: ``drive(positive=0.5, negative=-0.5)``."""

@@ -108,7 +108,7 @@ def test_output_swing(kind: Kind, ngspice: str, tmp_path: Path) -> None:
     a = sized(kind, "handbook", SIZINGS)
     twice = Analysis(a.circuit.take(np.tile(np.arange(a.circuit.designs), 2)))
     sign = np.repeat([-1.0, 1.0], SIZINGS)
-    amplitude = 1.6 * twice.saturation.vdsat[twice.wiring.pair[0]] + 0.1
+    amplitude = 1.6 * twice.saturation.vdsat[twice.wiring.rows["input.p"]] + 0.1
     sources = differential_sweep(a.circuit.conditions.middle, sign * amplitude)
     sweep = [f"dc v_sweep 0 1 {1 / POINTS}"]
     bench = simulated(ngspice, tmp_path, twice, spice.level1, sources, {"sweep": sweep}, ("id", "vdsat"))
