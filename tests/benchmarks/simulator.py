@@ -7,7 +7,8 @@ lambda with the length, resistors and what they load, bias) and four analyses ru
 - the frequency response to a differential input, from a frequency that is as good as DC, `PER_DECADE` points a decade:
   gain, bandwidth and unity-gain frequency;
 - one point of the frequency response to a common-mode input: common-mode gain and rejection;
-- a sweep of the differential input through rest, `SWEEP` points on each side: the output swing.
+- a sweep of the differential input, `SWEEP` points on each side of rest, or on one side where both sides of the stage
+  are alike and the other output tells the rest: the output swing.
 
 Everything is to the simulator's advantage. The frequencies span what the batch needs and no more, and the sweep of
 each design ends where its swing does, as known beforehand; the first guess of the nodes suits most of the batch; just
@@ -119,7 +120,7 @@ class Script:
                 "alter @v_d[acmag]=1",
                 "alter @v_cm[acmag]=0",
             ],
-            "swing": [f"dc v_d {-last:.9g} {last:.9g} {step:.9g}"],
+            "swing": [f"dc v_d {0.0 if self.top.symmetric else -last:.9g} {last:.9g} {step:.9g}"],
         }
 
     def commands(self, count: int, keep: bool = False) -> list[str]:
@@ -251,8 +252,9 @@ def _answers(script: Script, folder: Path, k: int) -> dict[str, float]:
     plots = {name: spice.read_raw(folder / f"{name}_{k}.raw") for name in script.analyses(k)}
     top = script.top
 
-    def output(plot: str) -> Array:
-        sides = [sign * plots[plot][f"v({spice.node(node, 0)})"] for node, sign in top.output]
+    def output(plot: str, *, mirrored: bool = False) -> Array:
+        other = {"left": "right", "right": "left"} if mirrored else {}
+        sides = [sign * plots[plot][f"v({spice.node(other.get(node, node), 0)})"] for node, sign in top.output]
         return np.sum(sides, axis=0)
 
     def room(plot: str) -> Array:
@@ -268,6 +270,11 @@ def _answers(script: Script, folder: Path, k: int) -> dict[str, float]:
     pair = [spice.part(t.name, 0) for t in top.transistors if t.group == "input"]
     current = np.abs(np.array([plots["swing"][f"@m_{name}[id]"] for name in pair]))
     margin = np.concatenate([room("swing"), np.sqrt(current / current.sum(axis=0)) - 0.1])
+    if top.symmetric:
+        ends = [_end(margin, output("swing"), 0, 1), _end(margin, output("swing", mirrored=True), 0, 1)]
+    else:
+        rest = output("swing").size // 2
+        ends = [_end(margin, output("swing"), rest, side) for side in (-1, 1)]
     frequency = plots["response"]["frequency"].real
     return {
         "supply_current": float(-plots["range"]["i(v_supply_0)"][1]),
@@ -276,7 +283,7 @@ def _answers(script: Script, folder: Path, k: int) -> dict[str, float]:
         "bandwidth": _crossing(frequency, response, 1.0),
         "unity_gain_frequency": _crossing(frequency, response, response[0] ** 2 - 1.0),
         "headroom": float(room("range")[:, [0, 2]].min()),
-        "output_swing": 2.0 * min(_end(margin, output("swing"), -1), _end(margin, output("swing"), 1)),
+        "output_swing": 2.0 * min(ends),
     }
 
 
@@ -298,10 +305,9 @@ def _crossing(frequency: Array, magnitude: Array, level: float) -> float:
     return float(frequency[i - 1] * (frequency[i] / frequency[i - 1]) ** part)
 
 
-def _end(margins: Sequence[Array] | Array, output: Array, side: int) -> float:
-    """Return how far the output is from rest where the first margin vanishes, walking from the middle to one side."""
-    middle = output.size // 2
-    walk = slice(middle, None) if side > 0 else slice(middle, None, -1)
+def _end(margins: Sequence[Array] | Array, output: Array, rest: int, side: int) -> float:
+    """Return how far the output is from rest where the first margin vanishes, walking from rest to one side."""
+    walk = slice(rest, None) if side > 0 else slice(rest, None, -1)
     smallest, y = np.min(margins, axis=0)[walk], output[walk]
     beyond = np.flatnonzero(smallest < 0.0)
     if not len(beyond) or beyond[0] == 0:
