@@ -225,21 +225,19 @@ class Analysis:
         """Smallest vds - vdsat in the middle of the common-mode range [V], (N,)."""
         return _room(self.circuit.network, self.terminals, self.saturation)
 
-    def _at_rest(self, columns: NDArray[np.intp]) -> Linearised:
-        """Return the linearised moving part of some designs with the differential drive."""
+    @cached_property
+    def _moving_at_rest(self) -> Linearised:
+        """The linearised moving part with the differential drive."""
         part, _ = self.moving
         rows, solved = part.transistors, part.nodes[: part.wiring.unknowns]
-        pick = np.ix_(rows, columns)
-        gate, drain_voltage, source = (x[pick] for x in self.terminals.of_law)
-        terminals = Terminals(gate, drain_voltage, source, self.terminals.resistors[:, columns])
-        drain, saturation = Drain(*(x[pick] for x in self.drain)), Saturation(*(x[pick] for x in self.saturation))
+        gate, drain, source = (x[rows] for x in self.terminals.of_law)
         residual, matrix, pulls = self.equations
-        equations = Equations(
-            residual[np.ix_(solved, columns)],
-            matrix[np.ix_(solved, solved, columns)],
-            pulls[solved, :1][..., columns],
+        return Linearised(
+            Terminals(gate, drain, source, self.terminals.resistors),
+            Drain(*(x[rows] for x in self.drain)),
+            Saturation(*(x[rows] for x in self.saturation)),
+            Equations(residual[solved], matrix[np.ix_(solved, solved)], pulls[solved, :1]),
         )
-        return Linearised(terminals, drain, saturation, equations)
 
     @cached_property
     def output_excursions(self) -> tuple[Array, Array]:
@@ -256,8 +254,8 @@ class Analysis:
         alike = self.topology.symmetric
         chosen = columns if alike else np.concatenate([columns, columns])
         sign = np.ones(len(columns)) if alike else np.repeat([-1.0, 1.0], len(columns))
-        start = self.point.v[np.ix_(part.nodes, chosen)]
-        end = follow(network.take(chosen), start, self._at_rest(chosen), self.drives[part.nodes, 0], sign)
+        start = self.point.v[part.nodes].take(chosen, axis=1)
+        end = follow(network.take(chosen), start, self._moving_at_rest.take(chosen), self.drives[part.nodes, 0], sign)
         moved = np.where(end.found, end.v - start, np.nan)
         up = np.abs(part.wiring.output(moved))
         if alike:

@@ -19,7 +19,7 @@ from optisize.stage.network import Equations, Network, Terminals
 STEERED = 0.01  # the part of the pair's current below which an input transistor counts as off
 ITERATIONS = 25
 STEP_LIMIT = 0.6  # V, of any node in one step
-SETTLED = 2e-3  # V; the step after which the next one would be some 0.1 mV (convergence is quadratic)
+SETTLED = 1e-2  # V; the step after which the next one would be some 0.1 mV (convergence is quadratic)
 
 
 @dataclass(frozen=True)
@@ -44,6 +44,15 @@ class Linearised(NamedTuple):
     drain: Drain
     saturation: Saturation
     equations: Equations
+
+    def take(self, columns: NDArray[np.intp]) -> Linearised:
+        """Return the same for some of the designs."""
+        return Linearised(
+            Terminals(*(x.take(columns, axis=-1) for x in self.terminals)),
+            Drain(*(x.take(columns, axis=-1) for x in self.drain)),
+            Saturation(*(x.take(columns, axis=-1) for x in self.saturation)),
+            Equations(*(x.take(columns, axis=-1) for x in self.equations)),
+        )
 
 
 @np.errstate(all="ignore")

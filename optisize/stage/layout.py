@@ -26,17 +26,17 @@ def on_grid(count: Array, step: float) -> Array:
     return count / whole if abs(per_metre - whole) < 1e-6 * per_metre else count * step
 
 
-def finger_count(width: Array, grid: Grid, even: bool) -> Array:
+def finger_count(width: Array, grid: Grid, even: bool | Array) -> Array:
     """Return how many fingers a width is drawn with: as few as the widest finger allows, even where asked.
 
     Args:
         width: channel width [m], any shape.
         grid: the process grid.
-        even: whether the number has to be even, so that a pair can be drawn cross-coupled.
+        even: whether the number has to be even, so that a pair can be drawn cross-coupled; broadcasts with the width.
     """
     widest = steps(np.array(grid.maximum_finger), grid.step)
     fingers = np.maximum(np.ceil(steps(width, grid.step) / widest), 1.0)
-    return fingers + np.mod(fingers, 2.0) if even else fingers
+    return fingers + even * np.mod(fingers, 2.0)
 
 
 def snap_width(width: Array, grid: Grid, even: bool) -> Array:
@@ -98,7 +98,7 @@ def draw_transistors(width: Array, length: Array, units: Array, even: Array, gri
         even: whether the number of fingers is even, (T, 1) of bool.
         grid: the process grid.
     """
-    fingers = np.where(even, finger_count(width, grid, True), finger_count(width, grid, False))
+    fingers = finger_count(width, grid, even)
     finger = width / fingers
     is_even = np.mod(fingers, 2.0) == 0.0
     drains = np.where(is_even, fingers / 2.0, (fingers + 1.0) / 2.0)
