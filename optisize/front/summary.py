@@ -10,6 +10,7 @@ from optisize.front.run import Run
 from optisize.front.table import column
 
 AT_BOUND = 0.03  # in the units of a limit's violation: 2 % of a logarithmic measure, a little of a linear one
+LEAST_SHARE = 0.01  # of the designs; fewer at a bound are chance
 
 
 @dataclass(frozen=True)
@@ -53,6 +54,6 @@ def binding_limits(run: Run) -> list[Binding]:
         values = run.front[column(m.name, m.unit)].to_numpy(dtype=float)
         for name, bound in limit.bounds:
             share = float(np.mean(limit.distance(values, bound) <= AT_BOUND)) if len(values) else 0.0
-            if share > 0.0:
+            if share >= LEAST_SHARE:
                 found.append(Binding(m.name, m.unit, name, bound, share))
     return sorted(found, key=lambda b: -b.share)
