@@ -114,6 +114,10 @@ class ChargeLaw:
         """Return the same law for some of its transistors and designs."""
         return type(self)(*(taken(getattr(self, f.name), rows, columns) for f in fields(self)))
 
+    def single(self) -> Self:
+        """Return the same law in single precision."""
+        return type(self)(*(getattr(self, f.name).astype(np.float32) for f in fields(self)))
+
     def _channel(self, vg: Array, vd: Array, vs: Array) -> _Channel:
         """Return the inversion of both ends of the channel at bulk-referenced voltages [V]."""
         drive = vg - self.threshold

@@ -68,6 +68,9 @@ class Law(Protocol):
     def take(self, rows: Pick, columns: Pick) -> Self:
         """Return the same law for some of its transistors and designs."""
 
+    def single(self) -> Self:
+        """Return the same law in single precision."""
+
     def drain(self, vg: Array, vd: Array, vs: Array) -> Drain:
         """Return current and derivatives at the terminal voltages [V]."""
 

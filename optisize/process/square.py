@@ -60,6 +60,10 @@ class SquareLaw:
         """Return the same law for some of its transistors and designs."""
         return type(self)(*(taken(getattr(self, f.name), rows, columns) for f in fields(self)))
 
+    def single(self) -> Self:
+        """Return the same law in single precision."""
+        return type(self)(*(getattr(self, f.name).astype(np.float32) for f in fields(self)))
+
     def _threshold(self, vs: Array) -> tuple[Array, Array]:
         """Return threshold [V] and its derivative with respect to the source-bulk voltage `vs`.
 

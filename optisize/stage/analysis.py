@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from optisize.process.card import thermal_voltage
 from optisize.process.law import Array, Capacitances, Drain, Saturation
 from optisize.stage.bias import OperatingPoint, operating_point, settle
 from optisize.stage.circuit import Circuit
@@ -42,7 +43,18 @@ class Analysis:
     def moving(self) -> tuple[Moving, Network]:
         """The part of the stages that the inputs can move; the rest stays as it is at the operating point."""
         part = moving(self.topology)
-        return part, self.circuit.network.part(part)
+        network = self.circuit.network.part(part)
+        return part, (network.single if self._coarse is np.float32 else network)
+
+    @cached_property
+    def _coarse(self) -> Any:
+        """The precision of what is known to a part in ten thousand only: single, unless the supply is high.
+
+        Single precision holds exp(v / 2 ut) up to 88; a node may go half a volt beyond the rails.
+        """
+        conditions = self.circuit.conditions
+        highest = (conditions.supply + 1.0) / (2.0 * float(thermal_voltage(conditions.temperature)))
+        return np.float32 if highest < 85.0 else np.float64
 
     def take(self, columns: NDArray[np.intp]) -> Analysis:
         """Return the analysis of some of the designs, with their operating points."""
@@ -214,7 +226,7 @@ class Analysis:
         start = np.minimum(np.maximum(start, 0.0), self.circuit.conditions.supply)[part.nodes]
         for node in ("in+", "in-"):
             start[part.wiring.index[node]] = common
-        ends = settle(twice, start, RANGE_SETTLED)
+        ends = settle(twice, start.astype(self._coarse), RANGE_SETTLED)
         terminals = twice.terminals(ends.v)
         room = _room(twice, terminals, twice.law.saturation(*terminals.of_law))
         room = np.where(ends.converged, room, np.nan).reshape(2, -1)
@@ -254,8 +266,10 @@ class Analysis:
         alike = self.topology.symmetric
         chosen = columns if alike else np.concatenate([columns, columns])
         sign = np.ones(len(columns)) if alike else np.repeat([-1.0, 1.0], len(columns))
-        start = self.point.v[part.nodes].take(chosen, axis=1)
-        end = follow(network.take(chosen), start, self._moving_at_rest.take(chosen), self.drives[part.nodes, 0], sign)
+        start: Any = self.point.v[part.nodes].take(chosen, axis=1).astype(self._coarse)
+        rest = self._moving_at_rest.take(chosen, self._coarse)
+        drive, sign = self.drives[part.nodes, 0].astype(self._coarse), sign.astype(self._coarse)
+        end = follow(network.take(chosen), start, rest, drive, sign)
         moved = np.where(end.found, end.v - start, np.nan)
         up = np.abs(part.wiring.output(moved))
         if alike:

@@ -7,7 +7,7 @@ hand sides, the residual and the drive, and moves the amplitude to where the nea
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,14 +45,13 @@ class Linearised(NamedTuple):
     saturation: Saturation
     equations: Equations
 
-    def take(self, columns: NDArray[np.intp]) -> Linearised:
-        """Return the same for some of the designs."""
-        return Linearised(
-            Terminals(*(x.take(columns, axis=-1) for x in self.terminals)),
-            Drain(*(x.take(columns, axis=-1) for x in self.drain)),
-            Saturation(*(x.take(columns, axis=-1) for x in self.saturation)),
-            Equations(*(x.take(columns, axis=-1) for x in self.equations)),
-        )
+    def take(self, columns: NDArray[np.intp], dtype: Any) -> Linearised:
+        """Return the same for some of the designs, in a precision."""
+
+        def chosen(record: Any) -> Any:
+            return type(record)(*(x.take(columns, axis=-1).astype(dtype, copy=False) for x in record))
+
+        return Linearised(*(chosen(record) for record in self))
 
 
 @np.errstate(all="ignore")
@@ -69,7 +68,7 @@ def follow(network: Network, start: Array, rest: Linearised, drive: Array, sign:
         drive: pattern over all nodes, (A,), zero on the unknown ones.
         sign: direction of the drive for each design, (N,).
     """
-    v, amplitude = start.copy(), np.zeros(network.designs)
+    v, amplitude = start.copy(), np.zeros(network.designs, dtype=start.dtype)
     found = np.zeros(network.designs, dtype=bool)
     active: NDArray[np.intp] = np.arange(network.designs)
     part, pv, pa, ps = network, v.copy(), amplitude.copy(), sign
@@ -102,7 +101,7 @@ def _step(
     """Move node voltages and amplitude in place by one damped step; return which designs have settled, (N,)."""
     unknowns = network.wiring.unknowns
     right = np.concatenate([here.equations.residual[:, None], here.equations.pulls * sign], axis=1)
-    toward = np.zeros((v.shape[0], 2, v.shape[1]))
+    toward = np.zeros((v.shape[0], 2, v.shape[1]), dtype=v.dtype)
     toward[:unknowns] = regular_solve(network, here.equations.matrix, -right)
     toward[unknowns:, 1] = drive[unknowns:, None] * sign
     margin, settle, rise = _margins(network, here, toward)

@@ -113,8 +113,8 @@ class Transfer:
 
     def at(self, w: Array) -> NDArray[np.complex128]:
         """Return H at angular frequencies [rad/s] of shape (N,)."""
-        matrix = self.conductance + 1j * w * self.capacitance
-        response = solve(matrix, -(self.pull_g + 1j * w * self.pull_c)[:, None], self.pattern)[:, 0]
+        matrix = self.conductance + (1j * w) * self.capacitance
+        response = solve(matrix, -(self.pull_g + (1j * w) * self.pull_c)[:, None], self.pattern)[:, 0]
         return self.output @ response
 
     @cached_property

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -79,6 +79,13 @@ class Network:
             picked(self.currents, columns),
             count,
         )
+
+    @property
+    def single(self) -> Network:
+        """The same in single precision, for what need not be known to more than a part in ten thousand."""
+        conductances: Any = self.conductances.astype(np.float32)
+        currents: Any = self.currents.astype(np.float32)
+        return Network(self.wiring.single, self.supply, self.law.single(), conductances, currents, self.designs)
 
     def part(self, moving: Moving) -> Network:
         """Return the part of the network that the inputs can move."""

@@ -7,6 +7,7 @@ constant incidence array with the branch quantities of all elements.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from copy import copy
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Any
@@ -125,7 +126,7 @@ class Wiring:
         if drives is not None:
             slopes.append(np.einsum("uae,ak->uke", self.conductance_stamp, drives).reshape(u * drives.shape[1], -1))
         rows = np.concatenate(slopes)
-        stamp = np.zeros((u + len(rows), 4 * t + 2 * r + s))
+        stamp = np.zeros((u + len(rows), 4 * t + 2 * r + s), dtype=rows.dtype)
         current = self.current_stamp[:u].copy()
         current[:, :t] *= self.polarity[:, 0]
         stamp[:u, :t] = current[:, :t]
@@ -163,6 +164,17 @@ class Wiring:
     def pair(self) -> slice:
         """The rows of the two input transistors, which stand side by side."""
         return slice(self.rows["input.p"], self.rows["input.n"] + 1)
+
+    @cached_property
+    def single(self) -> Wiring:
+        """The same with arrays of single precision."""
+        other = copy(self)
+        for name, value in vars(self).items():
+            if isinstance(value, np.ndarray) and value.dtype == np.float64:
+                setattr(other, name, value.astype(np.float32))
+        other._equation_stamps = {}
+        other.terminal_stamp = self.terminal_stamp.astype(np.float32)
+        return other
 
     def drive(self, **voltages: float) -> Array:
         """Return (A,) with small-signal voltages on driven nodes: ``drive(positive=0.5, negative=-0.5)``."""
