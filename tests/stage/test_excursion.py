@@ -55,3 +55,33 @@ def test_output_swing(process: str, kind: tuple[str, ...], bulk: str) -> None:
     reached = np.array([swept(a, sign, 1.2 * supply) for sign in (-1.0, 1.0)])
     np.testing.assert_allclose(np.array(a.output_excursions), reached, atol=5e-3)
     np.testing.assert_allclose(CATALOGUE["output_swing"].function(a), 2.0 * reached.min(axis=0), atol=1e-2)
+
+
+def spread_stages(process: str, kind: tuple[str, ...], supply: float) -> Analysis:
+    """Return 400 saturated random stages over a common-mode range of 0.1 V."""
+    p, topology = load_process(process), build(*kind)
+    common = middle(kind[0], supply)
+    conditions = Conditions(supply, (common - 0.05, common + 0.05), 1e-12)
+    every = Analysis(size_circuit(topology, p, conditions, random_sizes(topology, 1500, 7, SIZES)))
+    return Analysis(every.circuit.take(np.flatnonzero(every.converged & (every.room_at_rest > 0.0))[:400]))
+
+
+@pytest.mark.parametrize("process", ["generic-180", "generic-65", "handbook"])
+@pytest.mark.parametrize("kind", KINDS, ids="-".join)
+def test_single_precision_is_enough(process: str, kind: tuple[str, ...]) -> None:
+    """Range ends and excursions in single precision are those of double precision to a small part of a millivolt."""
+    supply = load_process(process).nominal.supply
+    coarse, fine = (spread_stages(process, kind, supply) for _ in range(2))
+    fine.__dict__["_coarse"] = np.float64
+    assert coarse.moving[1].conductances.dtype == np.float32
+    assert fine.moving[1].conductances.dtype == np.float64
+    np.testing.assert_allclose(coarse.room, fine.room, atol=2e-5)
+    np.testing.assert_allclose(np.array(coarse.output_excursions), np.array(fine.output_excursions), atol=1e-4)
+
+
+def test_a_high_supply_is_solved_in_double_precision() -> None:
+    """exp(v / 2 ut) leaves single precision at 4.5 V and room temperature."""
+    a = spread_stages("generic-180", ("nmos", "resistor", "single"), 9.0)
+    assert a.moving[1].conductances.dtype == np.float64
+    assert np.isfinite(a.room).all()
+    assert np.isfinite(np.array(a.output_excursions)).all()
