@@ -135,7 +135,7 @@ def search(
 def resume(
     run: RunPath,
     to: Annotated[Path | None, typer.Option("--to", help="Another run directory; the same one otherwise.")] = None,
-    generations: Annotated[int | None, typer.Option(min=1, help="Generations in all.")] = None,
+    generations: Annotated[int | None, typer.Option(min=1, help="In all; that many more for a finished run.")] = None,
     threads: Annotated[int | None, typer.Option(min=1, help="Threads; the front does not depend on them.")] = None,
     figures: Annotated[bool, typer.Option(help="Draw the figures into the run directory.")] = True,
     quiet: Annotated[bool, typer.Option("--quiet", help="No progress on stderr.")] = False,
@@ -264,7 +264,7 @@ def assess(
     from optisize.show.terminal import json_number, print_assessment
 
     loaded = load_problem(problem)
-    report = assess_sizing(loaded, load_sizing(sizing, loaded), against)
+    report = assess_sizing(loaded, load_sizing(sizing, loaded), against, str(sizing))
     if as_json:
         _print_json(
             {

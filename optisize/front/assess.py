@@ -47,8 +47,12 @@ class Assessment:
         return [{"design": b.design, "better_by": b.gains} for b in self.better]
 
 
-def assess_sizing(problem: Problem, sizes: Mapping[str, Array], against: Path | None = None) -> Assessment:
+def assess_sizing(
+    problem: Problem, sizes: Mapping[str, Array], against: Path | None = None, name: str = "the sizing"
+) -> Assessment:
     """Assess one sizing, each size (1,), beside a run: the one given, or the newest of the same problem.
+
+    A message calls the sizing by its `name`.
 
     Raises InputError when the sizing has no operating point, or the run has other goals or another stage.
     """
@@ -57,7 +61,7 @@ def assess_sizing(problem: Problem, sizes: Mapping[str, Array], against: Path | 
     values = problem.measure(sizes, names)
     assessed = problem.judge(values)
     if not assessed.solved[0]:
-        raise InputError("the sizing has no operating point between the rails under these conditions")
+        raise InputError(f"{name}: has no operating point between the rails under these conditions")
     directory = str(against) if against is not None else latest_run_of(problem)
     run = load_run(directory) if directory is not None else None
     better = None

@@ -34,7 +34,7 @@ class Nominal(Parameters):
     """The conditions at which the parameters were taken."""
 
     supply: Annotated[float, In("V"), Field(gt=0, le=100, description="usual supply voltage")]
-    temperature: Annotated[float, In("K", "K"), Field(gt=0, le=600, description="temperature of the parameters")] = (
+    temperature: Annotated[float, In("K", "K"), Field(gt=150, le=600, description="temperature of the parameters")] = (
         300.15
     )
 
@@ -76,7 +76,7 @@ class Grid(Parameters):
 class ChannelShift(Parameters):
     """How a corner moves one kind of transistor."""
 
-    threshold: Annotated[float, In("V"), Field(description="shift of the threshold magnitude")] = 0.0
+    threshold: Annotated[float, In("V"), Field(ge=-1, le=1, description="shift of the threshold magnitude")] = 0.0
     factor: Annotated[float, In(""), Field(gt=0, le=10, description="ratio of the current factor")] = 1.0
 
 
