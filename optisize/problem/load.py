@@ -145,6 +145,8 @@ def _range(size: Size, value: object, topology: Topology, process: Process) -> S
         )
     if size.kind == "count" and (low != round(low) or high != round(high)):
         raise InputError(f"sizes.{size.name}: found {shorten(value)}; whole numbers are needed")
+    if low < high:
+        low, high = SizingSpace(topology, process, ()).fitted(size, low, high)
     return SizeRange(size, low, high)
 
 

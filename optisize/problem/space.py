@@ -12,8 +12,10 @@ from functools import cached_property
 
 import numpy as np
 
+from optisize.errors import InputError
 from optisize.process.card import Process
 from optisize.process.law import Array
+from optisize.quantities import write
 from optisize.stage.layout import snap_length, snap_resistance, snap_width
 from optisize.stage.topology import Size, Topology
 
@@ -75,6 +77,21 @@ class SizingSpace:
         if size.kind == "count":
             return np.maximum(np.rint(values), 1.0)
         return round_significant(values, CURRENT_DIGITS)
+
+    def fitted(self, size: Size, low: float, high: float) -> tuple[float, float]:
+        """Return the smallest and the largest value between two ends that can be drawn or set.
+
+        Snapping what lies between them leads to nothing beyond the ends.
+
+        Raises InputError when nothing between them can be drawn.
+        """
+        inward = np.linspace(0.0, 0.15, 3001)  # further than any step of a grid, and finer than any
+        found = np.concatenate([self.snap(size, low * (1.0 + inward)), self.snap(size, high * (1.0 - inward))])
+        found = found[(found >= low * (1.0 - 1e-12)) & (found <= high * (1.0 + 1e-12))]
+        if not len(found):
+            ends = f"{write(low, size.unit)} and {write(high, size.unit)}"
+            raise InputError(f"sizes.{size.name}: nothing between {ends} is on the process grid")
+        return float(found.min()), float(found.max())
 
     def snapped(self, sizes: Mapping[str, Array]) -> dict[str, Array]:
         """Return every size of a population snapped to what can be drawn, each (N,)."""

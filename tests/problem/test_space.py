@@ -9,6 +9,7 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from optisize.errors import InputError
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_sizing
 from optisize.problem.space import SizingSpace, round_significant
@@ -102,3 +103,27 @@ def test_a_manual_sizing_is_put_on_the_grid(tmp_path: Path) -> None:
     assert sizes["input.length"] == pytest.approx([0.5e-6], rel=1e-12)
     assert sizes["bias.current"] == [2e-6]
     assert list(sizes) == list(problem.topology.size_names)
+
+
+def test_ends_of_a_range_that_cannot_be_drawn_move_inward(tmp_path: Path) -> None:
+    """Whatever lies between two odd ends snaps to something between them."""
+    text = changed(
+        RESISTOR,
+        ("input.width", 'input.width = ["7.773 um", "133.337 um"]'),
+        ("input.length", 'input.length = ["0.1812 um", "3.9987 um"]'),
+        ("bias.current", 'bias.current = ["123.4 nA", "9.876 uA"]'),
+        ("load.resistance", 'load.resistance = ["5.0012 kohm", "1.999999 Mohm"]'),
+    )
+    problem = loaded(tmp_path, text)
+    ends = {"input.width": (7.773e-6, 133.337e-6), "input.length": (0.1812e-6, 3.9987e-6)}
+    ends |= {"bias.current": (123.4e-9, 9.876e-6), "load.resistance": (5001.2, 1999999.0)}
+    grid = np.linspace(0.0, 1.0, 20_001)
+    sizes = problem.space.decode(np.tile(grid, (problem.space.dimensions, 1)))
+    for name, (low, high) in ends.items():
+        assert low <= sizes[name].min() <= 1.1 * low
+        assert 0.99 * high <= sizes[name].max() <= high
+
+
+def test_a_range_between_two_steps_of_the_grid_is_refused(tmp_path: Path) -> None:
+    with pytest.raises(InputError, match=r"input\.length: nothing between 501 nm and 504 nm is on the process grid"):
+        loaded(tmp_path, changed(RESISTOR, ("input.length", 'input.length = ["0.501 um", "0.504 um"]')))
