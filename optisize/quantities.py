@@ -174,11 +174,6 @@ def write_in(value: float, unit: str, digits: int = 4) -> str:
     return f"{figure:.{digits}g} {unit}".strip()
 
 
-def scale_of(unit: str) -> float:
-    """Return how many SI units one `unit` is: ``scale_of("um^2")`` is 1e-12."""
-    return _parse_unit(unit)[0]
-
-
 @dataclass(frozen=True)
 class In:
     """Marks a number of a pydantic model as a quantity of one unit: ``Annotated[float, In("V")]``.

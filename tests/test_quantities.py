@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 
 from optisize.problem.schema import ProblemFile
 from optisize.process.card import Process
-from optisize.quantities import QuantityError, read, scale_of, write, write_in
+from optisize.quantities import QuantityError, read, write, write_in
 from optisize.stage.measures import CATALOGUE, FIGURES
 from optisize.stage.topology import UNITS
 
@@ -149,7 +149,7 @@ def test_areas_and_slopes_are_written_in_their_usual_units() -> None:
     assert write(2.5e-7, "A") == "250 nA"
     assert write(0.0, "V") == "0 V"
     assert write_in(8.5e-3, "fF/um^2") == "8.5 fF/um^2"
-    assert scale_of("um^2") == pytest.approx(1e-12, rel=1e-14)
+    assert read("1 um^2", "m^2") == pytest.approx(1e-12, rel=1e-14)
 
 
 def _units_of(schema: object) -> set[str]:

@@ -2,8 +2,8 @@
 
 NSGA-II (Deb, Pratap, Agarwal, Meyarivan, IEEE Transactions on Evolutionary Computation 6, 2002) for up to three goals,
 with hypervolume contributions in place of crowding on the non-dominated front (see `ranking.survivors`); NSGA-III (Deb,
-Jain, same journal 18, 2014) above; both with constraint domination, and half of the offspring by
-differential-evolution variation. A generation is a pure step from one `State` to the next.
+Jain, same journal 18, 2014) above; both with constraint domination, and offspring by three kinds of variation whose
+shares adapt (see `variation`). A generation is a pure step from one `State` to the next.
 """
 
 from __future__ import annotations

@@ -2,7 +2,8 @@
 
 Sources: Deb, Agrawal, Simulated binary crossover for continuous search space, Complex Systems 9, 1995; Deb, Goyal,
 A combined genetic adaptive search (GeneAS) for engineering design, 1996 (polynomial mutation); Storn, Price,
-Differential evolution, Journal of Global Optimization 11, 1997. Crossover and mutation are pymoo's array kernels.
+Differential evolution, Journal of Global Optimization 11, 1997; neighbours: see `followed`. Crossover and mutation are
+pymoo's array kernels.
 """
 
 from __future__ import annotations

@@ -24,7 +24,7 @@ class Assessment:
 
     Attributes:
         sizes, measures: SI values by name; the figures of each transistor are named like ``input.p.gm``.
-        limits: for each bound its name, kind, bound, unit, value and whether it is met.
+        limits: for each bound its name, kind, bound, unit, value, whether it is implied rather than stated, and met.
         feasible: whether all are met.
         against: the run that it was compared with; None where there is none.
         better: the designs of that run that beat it; None where there is no run.
@@ -95,6 +95,7 @@ def _limit_rows(problem: Problem, values: Mapping[str, Array]) -> list[dict[str,
                     "bound": bound,
                     "unit": m.unit,
                     "value": float(values[m.name][0]),
+                    "implied": limit.implied,
                     "met": bool(alone.met(values[m.name])[0]),
                 }
             )

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Mapping
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 
-from optisize.front.table import column
+from optisize.front.table import measured
 from optisize.problem.evaluate import Problem
 from optisize.process.law import Array
 
@@ -20,7 +22,7 @@ class Better:
     Attributes:
         design: its number on the front.
         gains: for each goal, how much better it is [the measure's unit], zero where as good.
-        losses: how far it is ahead, in the units of the goals' losses, summed.
+        lead: how far it is ahead, in the units of the goals' losses, summed.
     """
 
     design: int
@@ -39,7 +41,7 @@ def dominating(problem: Problem, values: Mapping[str, Array], front: pd.DataFram
     own = np.array([goal.loss(values[goal.measure.name]) for goal in problem.goals])
     if len(front) == 0 or not np.isfinite(own).all():
         return []
-    columns = [front[column(g.measure.name, g.measure.unit)].to_numpy(dtype=float) for g in problem.goals]
+    columns = [measured(front, g.measure) for g in problem.goals]
     theirs = np.array([goal.loss(row) for goal, row in zip(problem.goals, columns, strict=True)])
     slack = 1e-9 * np.maximum(np.abs(own), 1.0)
     beats = (theirs <= own + slack).all(axis=0) & (theirs < own - slack).any(axis=0)
@@ -65,9 +67,6 @@ def _gain(theirs: float, own: float, larger_is_better: bool) -> float:
 
 def latest_run_of(problem: Problem, results: str = "results") -> str | None:
     """Return the newest run directory of exactly this problem file under a results directory, if there is one."""
-    import json
-    from pathlib import Path
-
     found: list[tuple[float, str]] = []
     for info in Path(results).glob("*/run.json"):
         try:

@@ -90,7 +90,7 @@ def resume(run: Run, *, generations: int | None = None, threads: int | None = No
 
     Args:
         run: as it was read back.
-        generations: in all; those of the problem where None.
+        generations: in all, or that many more for a finished run; those of the problem where None.
         threads, watch: as for `search`.
     """
     wanted = generations or run.problem.settings.generations
@@ -164,6 +164,7 @@ def _finished(problem: Problem, state: State, seconds: float, evaluation: float)
             "python": platform.python_version(),
             "numpy": np.__version__,
             "title": problem.title,
+            "process": problem.process_name,
             "stopped": state.stopped,
             "seed": state.settings.seed,
             "population": state.settings.population,
@@ -210,11 +211,11 @@ def explain_infeasible(problem: Problem, state: State) -> str:
         note = "; every other limit can be met without it" if alone.any() else ""
         lines.append(f"  {m.name}: {bounds} wanted, nearest design has {_reached(values[m.name][best], m.unit)}{note}")
     shown = "\n".join(lines)
-    blame = "these limits stand in the way" if len(lines) > 1 else "this limit stands in the way"
-    return (
-        f"nothing feasible after {state.evaluations} evaluations: {blame}; "
-        f"the nearest design would need each relaxed to its own figure:\n{shown}"
-    )
+    if len(lines) > 1:
+        blame = "these limits stand in the way; the nearest design would need each relaxed to its own figure"
+    else:
+        blame = "this limit stands in the way; the nearest design would need it relaxed to its own figure"
+    return f"nothing feasible after {state.evaluations} evaluations: {blame}:\n{shown}"
 
 
 def _reached(value: float, unit: str) -> str:

@@ -37,7 +37,7 @@ class Run:
     Attributes:
         problem: what was searched.
         front: one row a design, SI values, the unit in the column's name.
-        history: one row a generation.
+        history: one row for each time that the population was bred from.
         info: versions, seed, counts, times, hashes.
         state: the search itself, to go on with; None for a finished run that was read back.
         path: the directory, once there is one.

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from optisize.front.run import Run
-from optisize.front.table import column
+from optisize.front.table import measured
 
 AT_BOUND = 0.03  # in the units of a limit's violation: 2 % of a logarithmic measure, a little of a linear one
 LEAST_SHARE = 0.01  # of the designs; fewer at a bound are chance
@@ -37,12 +37,11 @@ def extremes(run: Run) -> list[Extreme]:
     """Return the best design of each goal; none where there is no design."""
     result: list[Extreme] = []
     goals = run.problem.goals if len(run.front) else ()
-    columns = {g.measure.name: column(g.measure.name, g.measure.unit) for g in goals}
+    columns = {g.measure.name: measured(run.front, g.measure) for g in goals}
     for goal in goals:
-        losses = goal.loss(run.front[columns[goal.measure.name]].to_numpy(dtype=float))
-        row = run.front.iloc[int(np.argmin(losses))]
-        values = {name: float(row[c]) for name, c in columns.items()}
-        result.append(Extreme(goal.measure.name, int(row["design"]), values))
+        best = int(np.argmin(goal.loss(columns[goal.measure.name])))
+        values = {name: float(column[best]) for name, column in columns.items()}
+        result.append(Extreme(goal.measure.name, int(run.front["design"].iloc[best]), values))
     return result
 
 
@@ -51,7 +50,7 @@ def binding_limits(run: Run) -> list[Binding]:
     found = []
     for limit in run.problem.limits:
         m = limit.measure
-        values = run.front[column(m.name, m.unit)].to_numpy(dtype=float)
+        values = measured(run.front, m)
         for name, bound in limit.bounds:
             share = float(np.mean(limit.distance(values, bound) <= AT_BOUND)) if len(values) else 0.0
             if share >= LEAST_SHARE:

@@ -10,7 +10,7 @@ import pandas as pd
 from optisize.errors import InputError, nearest
 from optisize.problem.evaluate import Problem
 from optisize.process.law import Array
-from optisize.stage.measures import CATALOGUE, find
+from optisize.stage.measures import CATALOGUE, Measure, find
 
 UNLIMITED = "unlimited"
 
@@ -52,8 +52,12 @@ def sizes_of(problem: Problem, table: pd.DataFrame) -> dict[str, Array]:
 
 def values_of(problem: Problem, table: pd.DataFrame) -> dict[str, Array]:
     """Return the measures of the designs of a table, each (N,)."""
-    named = units(problem)
-    return {name: table[column(name, named[name])].to_numpy(dtype=float) for name in measure_names(problem)}
+    return {name: measured(table, find(name, problem.topology)) for name in measure_names(problem)}
+
+
+def measured(table: pd.DataFrame, measure: Measure) -> Array:
+    """Return one measure of the designs of a table, (N,)."""
+    return table[column(measure.name, measure.unit)].to_numpy(dtype=float)
 
 
 def find_column(table: pd.DataFrame, name: str) -> str:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any
 
 from pydantic import BeforeValidator, ConfigDict, Field, WithJsonSchema
 
@@ -158,9 +158,6 @@ class SizingFile(Parameters):
     sizes: Annotated[
         dict[str, Any], WithJsonSchema(_named(_QUANTITY, 2)), Field(description="one value for every size")
     ]
-
-
-Bound = Literal["min", "max"]
 
 
 def flatten(table: Mapping[str, Any], is_leaf: Callable[[str, Any], bool], path: str) -> dict[str, Any]:

@@ -14,9 +14,8 @@ import numpy as np
 
 from optisize.errors import OptisizeError
 from optisize.front.run import Run
-from optisize.front.table import column
+from optisize.front.table import measured
 from optisize.process.law import Array
-from optisize.quantities import write
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -77,7 +76,7 @@ def axis_of(run: Run, goal_index: int) -> Axis:
     """Return the axis of one goal."""
     goal = run.problem.goals[goal_index]
     m = goal.measure
-    values = run.front[column(m.name, m.unit)].to_numpy(dtype=float)
+    values = measured(run.front, m)
     factor, unit = _readable(values, m.unit)
     bounds = tuple(
         (name, bound / factor) for x in run.problem.limits if x.measure.name == m.name for name, bound in x.bounds
@@ -274,13 +273,3 @@ def _write(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
         with contextlib.suppress(OSError):
             beside.unlink()
     return path
-
-
-def describe(run: Run) -> str:
-    """Return one line that says what the front spans."""
-    parts = []
-    for goal in run.problem.goals:
-        m = goal.measure
-        values = run.front[column(m.name, m.unit)].to_numpy(dtype=float)
-        parts.append(f"{m.name} {write(float(values.min()), m.unit, 3)} to {write(float(values.max()), m.unit, 3)}")
-    return "; ".join(parts)

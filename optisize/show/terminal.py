@@ -170,7 +170,7 @@ def print_assessment(problem: Problem, report: Assessment) -> None:
     rows = [
         [
             x["name"],
-            f"{x['kind']} {write(x['bound'], x['unit'])}",
+            f"{x['kind']} {write(x['bound'], x['unit'])}{' (implied)' if x['implied'] else ''}",
             write(x["value"], x["unit"]),
             "met" if x["met"] else "MISSED",
         ]

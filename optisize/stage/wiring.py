@@ -41,9 +41,6 @@ class Wiring:
         self.transistors = tuple(x for x in topology.transistors if {x.drain, x.source} & set(solved))
         self.resistors = tuple(x for x in topology.resistors if {x.a, x.b} & set(solved))
         self.sources = tuple(x for x in topology.sources if {x.a, x.b} & set(solved))
-        if not frozen:
-            self.transistors, self.resistors = topology.transistors, topology.resistors
-            self.sources = topology.sources
         t = self.transistors
         self.gate = self._at([x.gate for x in t])
         self.drain = self._at([x.drain for x in t])
@@ -107,7 +104,7 @@ class Wiring:
         return full[: self.unknowns]
 
     def equation_stamp(self, drives: Array | None) -> Array:
-        """Return the constant array that turns `Circuit.branches` into residual, matrix and pulls of the drives.
+        """Return the constant array that turns the branches of `Network.equations` into residual, matrix and pulls.
 
         Args:
             drives: K patterns over all nodes, (A, K).
