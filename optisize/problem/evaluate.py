@@ -204,10 +204,10 @@ def _measure_chunk(circuit: Circuit, wanted: list[Measure]) -> list[Array]:
     analysis = Analysis(circuit)
     solved = np.flatnonzero(analysis.converged)
     if len(solved) == circuit.designs:
-        return [m.function(analysis) for m in wanted]
+        return [m.of(analysis) for m in wanted]
     results = [np.full(circuit.designs, np.nan) for _ in wanted]
     if len(solved):
         part = analysis.take(solved)
         for result, m in zip(results, wanted, strict=True):
-            result[solved] = m.function(part)
+            result[solved] = m.of(part)
     return results

@@ -7,8 +7,8 @@ here.
 from __future__ import annotations
 
 import inspect
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -20,6 +20,25 @@ from optisize.stage.topology import Topology
 
 Sense = Literal["max", "min"]
 Scale = Literal["linear", "log"]
+Setting = float | tuple[float, float]
+
+
+@dataclass(frozen=True)
+class Parameter:
+    """What a measure leaves to the designer, such as the frequency at which it is taken.
+
+    Attributes:
+        name, unit, meaning: as in files and tables; values are SI.
+        default: one value, or two where a band is meant.
+        low, high: the values that are allowed.
+    """
+
+    name: str
+    unit: str
+    meaning: str
+    default: Setting
+    low: float = 0.0
+    high: float = np.inf
 
 
 @dataclass(frozen=True)
@@ -34,7 +53,9 @@ class Measure:
         signed: whether goals and limits act on the magnitude of a signed figure.
         source: where the definition or formula comes from.
         definition: what it is.
-        function: from the analysis to an array (N,).
+        function: from the analysis and the parameters to an array (N,).
+        parameters: what the designer may set.
+        settings: what has been set, by the name of the parameter; the defaults hold for the rest.
     """
 
     name: str
@@ -45,7 +66,22 @@ class Measure:
     signed: bool
     source: str
     definition: str
-    function: Callable[[Analysis], Array]
+    function: Callable[..., Array]
+    parameters: tuple[Parameter, ...] = ()
+    settings: tuple[tuple[str, Setting], ...] = ()
+
+    @property
+    def taken_at(self) -> dict[str, Setting]:
+        """The value of every parameter."""
+        return {p.name: p.default for p in self.parameters} | dict(self.settings)
+
+    def of(self, analysis: Analysis) -> Array:
+        """Return the measure of N designs, (N,)."""
+        return self.function(analysis, **self.taken_at)
+
+    def at(self, name: str, settings: Mapping[str, Setting]) -> Measure:
+        """Return the same measure under a name, with parameters set."""
+        return replace(self, name=name, settings=tuple(settings.items()))
 
 
 CATALOGUE: dict[str, Measure] = {}
@@ -64,23 +100,24 @@ def _entry(
     step: float = 1.0,
     signed: bool = False,
     source: str = _PRACTICE,
-) -> Callable[[Callable[[Analysis], Array]], Callable[[Analysis], Array]]:
+    parameters: tuple[Parameter, ...] = (),
+) -> Callable[[Callable[..., Array]], Callable[..., Array]]:
     """Enter a function into a catalogue under its own name."""
 
-    def enter(function: Callable[[Analysis], Array]) -> Callable[[Analysis], Array]:
+    def enter(function: Callable[..., Array]) -> Callable[..., Array]:
         text = " ".join((inspect.getdoc(function) or "").split())
         name = function.__name__
-        catalogue[name] = Measure(name, unit, better, scale, step, signed, source, text, function)
+        catalogue[name] = Measure(name, unit, better, scale, step, signed, source, text, function, parameters)
         return function
 
     return enter
 
 
-def _measure(unit: str, better: Sense, **options: object) -> Callable[..., Callable[[Analysis], Array]]:
+def _measure(unit: str, better: Sense, **options: object) -> Callable[..., Callable[..., Array]]:
     return _entry(CATALOGUE, unit, better, **options)  # type: ignore[arg-type]
 
 
-def _figure(unit: str, better: Sense, **options: object) -> Callable[..., Callable[[Analysis], Array]]:
+def _figure(unit: str, better: Sense, **options: object) -> Callable[..., Callable[..., Array]]:
     return _entry(FIGURES, unit, better, **options)  # type: ignore[arg-type]
 
 
