@@ -12,7 +12,7 @@ from optisize.problem.schema import ProblemFile
 from optisize.process.card import Process
 from optisize.quantities import QuantityError, read, write, write_in
 from optisize.stage.measures import CATALOGUE, FIGURES
-from optisize.stage.topology import UNITS
+from optisize.stage.elements import UNITS
 
 
 @pytest.mark.parametrize(

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
@@ -16,9 +16,9 @@ from optisize.problem.space import SizingSpace
 from optisize.process.card import Process
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
+from optisize.stage.assembly import Topology
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
 from optisize.stage.measures import Measure, Sense, find
-from optisize.stage.topology import Topology
 
 CHUNK = 2000  # designs solved together: their arrays stay in the cache
 WORST = 20.0  # the violation of a limit is counted no further than this
@@ -121,7 +121,11 @@ class Assessed:
 
 @dataclass(frozen=True)
 class Problem:
-    """A stage in a process under conditions, its sizing space, its goals and limits."""
+    """A stage in a process under conditions, its sizing space, its goals and limits.
+
+    Attributes:
+        own_measures: what the problem says of measures with parameters: by name, each with its settings.
+    """
 
     title: str
     process_name: str
@@ -136,6 +140,14 @@ class Problem:
     process_text: str
     hashes: Mapping[str, str]
     source: str = ""
+    own_measures: Mapping[str, Measure] = field(default_factory=dict)
+
+    def find(self, name: str) -> Measure:
+        """Return a measure of this problem by name: its own first, then the catalogue's, then a transistor's figure.
+
+        Raises InputError for a name that the stage does not have.
+        """
+        return find(name, self.topology, self.own_measures)
 
     @property
     def needed(self) -> tuple[str, ...]:
@@ -157,7 +169,7 @@ class Problem:
             names: the measures wanted; those of goals and limits where None.
             threads: how many chunks of designs are solved at the same time.
         """
-        wanted = [find(name, self.topology) for name in (self.needed if names is None else names)]
+        wanted = [self.find(name) for name in (self.needed if names is None else names)]
         count = len(next(iter(sizes.values())))
         starts = range(0, count, CHUNK)
         if not count:

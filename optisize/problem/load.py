@@ -13,14 +13,17 @@ import numpy as np
 from optisize.errors import InputError, listing, nearest, shorten
 from optisize.files import near_file, read_bytes, read_toml, validated
 from optisize.problem.evaluate import Goal, Limit, Problem
+from optisize.problem.own_measures import own_measures
 from optisize.problem.schema import ProblemFile, SizingFile, flatten, read_size
 from optisize.problem.space import SizeRange, SizingSpace
 from optisize.process.card import Process, load_process, locate_process
 from optisize.process.law import Array
 from optisize.quantities import QuantityError, read, write
+from optisize.stage.assembly import Topology, build
 from optisize.stage.circuit import Conditions
+from optisize.stage.elements import Size
 from optisize.stage.measures import CATALOGUE, FIGURES, Measure, find
-from optisize.stage.topology import Size, Topology, build
+from optisize.stage.topology import DEGENERATION
 
 
 def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
@@ -38,13 +41,15 @@ def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
     try:
         source = process_file or _process_source(file.process, path.parent)
         process = load_process(source)
-        topology = build(**file.stage.model_dump())
+        topology = build(**file.stage.model_dump(), degenerated=_degenerated(file.sizes))
         _check_corner(file.conditions.corner, process)
         conditions = Conditions(**file.conditions.model_dump())
         _check_conditions(conditions)
+        _check_output_common_mode(conditions, topology)
         space = SizingSpace(topology, process, _ranges(file.sizes, topology, process))
-        goals = _goals(file.goals, topology)
-        limits = _limits(file.limits, topology)
+        own = own_measures(file.measures, topology)
+        goals = _goals(file.goals, topology, own)
+        limits = _limits(file.limits, topology, own)
         if not space.dimensions:
             raise InputError("sizes: every size is fixed; free one by giving it two values, or use assess")
     except InputError as error:
@@ -63,6 +68,7 @@ def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
         text=read_bytes(path).decode("utf-8"),
         process_text=read_bytes(source).decode("utf-8"),
         source=str(path),
+        own_measures=own,
         hashes={
             "problem": hashlib.sha256(read_bytes(path)).hexdigest(),
             "process": hashlib.sha256(read_bytes(source)).hexdigest(),
@@ -112,6 +118,27 @@ def _check_conditions(conditions: Conditions) -> None:
         )
 
 
+def _degenerated(sizes: Mapping[str, Any]) -> bool:
+    """Tell whether the sizes ask for resistors under the sources of the pair."""
+    inner = sizes.get("input")
+    names = [size.name for size in DEGENERATION.sizes]
+    return any(name in sizes or (isinstance(inner, dict) and name.split(".")[1] in inner) for name in names)
+
+
+def _check_output_common_mode(conditions: Conditions, topology: Topology) -> None:
+    found, key = conditions.output_common_mode, "conditions.output_common_mode"
+    if found is None:
+        if topology.controls:
+            raise InputError(f'{key}: is missing; load "{topology.load}" holds its outputs there')
+    elif not 0.0 < found < conditions.supply:
+        allowed = f"0 V and {write(conditions.supply, 'V')}"
+        raise InputError(f"{key}: found {write(found, 'V')}; it must lie between the rails, {allowed}")
+    elif not topology.controls and topology.output_kind == "differential":
+        raise InputError(
+            f'{key}: nothing holds the outputs of load "{topology.load}" there; remove it, or take load "source"'
+        )
+
+
 def _ranges(table: Mapping[str, Any], topology: Topology, process: Process) -> tuple[SizeRange, ...]:
     """Return the range of every size of the stage, in the stage's order."""
     known = {size.name: size for size in topology.sizes}
@@ -156,7 +183,7 @@ def _drawable(size: Size, topology: Topology, process: Process) -> tuple[float, 
     if size.kind == "length":
         return grid.minimum_length, grid.maximum_length
     if size.kind == "width":
-        group = size.name.split(".")[0]
+        group = size.name.rpartition(".")[0]
         even = any(t.even_fingers for t in topology.transistors if t.group == group)
         return grid.minimum_width * (2.0 if even else 1.0), 1e-1
     if size.kind == "resistance":
@@ -164,10 +191,10 @@ def _drawable(size: Size, topology: Topology, process: Process) -> tuple[float, 
     return (1.0, 1e5) if size.kind == "count" else (1e-12, 10.0)
 
 
-def _goals(table: Mapping[str, Any], topology: Topology) -> tuple[Goal, ...]:
+def _goals(table: Mapping[str, Any], topology: Topology, own: Mapping[str, Measure]) -> tuple[Goal, ...]:
     goals = []
-    for name, value in flatten(table, lambda name, _: _is_measure(name, topology), "goals").items():
-        measure = _find(name, topology, "goals")
+    for name, value in flatten(table, lambda name, _: _is_measure(name, topology, own), "goals").items():
+        measure = _find(name, topology, own, "goals")
         if value not in ("max", "min"):
             raise InputError(
                 f'goals.{name}: found {shorten(value)}; allowed are "max" and "min"'
@@ -179,30 +206,30 @@ def _goals(table: Mapping[str, Any], topology: Topology) -> tuple[Goal, ...]:
     return tuple(goals)
 
 
-def _is_measure(name: str, topology: Topology) -> bool:
+def _is_measure(name: str, topology: Topology, own: Mapping[str, Measure]) -> bool:
     try:
-        find(name, topology)
+        find(name, topology, own)
     except InputError:
         return False
     return True
 
 
-def _find(name: str, topology: Topology, table: str) -> Measure:
+def _find(name: str, topology: Topology, own: Mapping[str, Measure], table: str) -> Measure:
     """Return the measure that a key of a table names."""
-    if not _is_measure(name, topology):
-        known = [*CATALOGUE, *(f"{t.name}.{figure}" for t in topology.transistors for figure in FIGURES)]
+    if not _is_measure(name, topology, own):
+        known = [*own, *CATALOGUE, *(f"{t.name}.{figure}" for t in topology.transistors for figure in FIGURES)]
         kind = "a size, not a measure" if name in topology.size_names else "no measure"
         raise InputError(f'{table}.{name}: {kind}; "optisize measures" lists them{nearest(name, known)}')
-    return find(name, topology)
+    return find(name, topology, own)
 
 
-def _limits(table: Mapping[str, Any], topology: Topology) -> tuple[Limit, ...]:
+def _limits(table: Mapping[str, Any], topology: Topology, own: Mapping[str, Measure]) -> tuple[Limit, ...]:
     def is_leaf(name: str, value: Any) -> bool:
-        return _is_measure(name, topology) or not any(isinstance(part, dict) for part in value.values())
+        return _is_measure(name, topology, own) or not any(isinstance(part, dict) for part in value.values())
 
     limits = []
     for name, bounds in flatten(table, is_leaf, "limits").items():
-        measure = _find(name, topology, "limits")
+        measure = _find(name, topology, own, "limits")
         if not isinstance(bounds, dict) or not bounds:
             example = shorten(bounds) if isinstance(bounds, str) else f'"… {measure.unit}"'
             raise InputError(

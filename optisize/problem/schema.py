@@ -2,16 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from typing import Annotated, Any
 
 from pydantic import BeforeValidator, ConfigDict, Field, WithJsonSchema
 
 from optisize.errors import InputError, listing, nearest, shorten
+from optisize.problem.own_measures import LONGEST_NAME, NAME, parameter_line, with_parameters
 from optisize.process.parameters import Parameters
 from optisize.quantities import In, QuantityError, read
-from optisize.stage.topology import BULKS, INPUTS, LOADS, OUTPUTS, TAILS, Piece
+from optisize.stage.elements import Piece
+from optisize.stage.measures import Parameter
+from optisize.stage.topology import BULKS, FORMS, INPUTS, LOADS, OUTPUTS, TAILS
 
 
 @dataclass(frozen=True)
@@ -63,6 +66,33 @@ def _named(leaf: dict[str, Any], depth: int = 3) -> dict[str, Any]:
     return {"type": "object", "additionalProperties": inner}
 
 
+def _measures_schema() -> dict[str, Any]:
+    """Return the JSON Schema of the table that sets the parameters of measures."""
+    known = {name: _settings_schema(name, m.parameters) for name, m in with_parameters().items()}
+    return {
+        "type": "object",
+        "propertyNames": {"pattern": f"^{NAME}$", "maxLength": LONGEST_NAME},
+        "properties": known,
+        "additionalProperties": {"anyOf": [{**leaf, "required": ["of"]} for leaf in known.values()]}
+        if known
+        else False,
+    }
+
+
+def _settings_schema(name: str, parameters: Iterable[Parameter]) -> dict[str, Any]:
+    """Return the JSON Schema of the settings of one measure of the catalogue."""
+    keys = {p.name: _parameter_schema(p) for p in parameters}
+    return {"type": "object", "properties": {"of": {"enum": [name]}, **keys}, "additionalProperties": False}
+
+
+def _parameter_schema(parameter: Parameter) -> dict[str, Any]:
+    """Return the JSON Schema of one parameter of a measure."""
+    description = parameter_line(parameter)
+    if not isinstance(parameter.default, tuple):
+        return {**_QUANTITY, "description": description}
+    return {"type": "array", "items": _QUANTITY, "minItems": 2, "maxItems": 2, "description": description}
+
+
 def _summaries(kinds: Mapping[str, Piece]) -> str:
     return "; ".join(f"{name}: {kind.summary}" for name, kind in kinds.items())
 
@@ -82,6 +112,11 @@ class StageTable(Parameters):
         OneOf(tuple(OUTPUTS)),
         Field(description="one drain, or the difference of both"),
     ] = "single-ended"
+    form: Annotated[
+        str,
+        OneOf(tuple(FORMS)),
+        Field(description="; ".join(f"{name}: {form.summary}" for name, form in FORMS.items())),
+    ] = "simple"
     bulk: Annotated[
         str,
         OneOf(BULKS),
@@ -104,6 +139,14 @@ class ConditionsTable(Parameters):
     ]
     temperature: Annotated[float, In("K"), Field(gt=150, lt=500, description="temperature")] = 300.15
     corner: Annotated[str, Field(description="process corner")] = "typical"
+    output_common_mode: Annotated[
+        float | None,
+        In("V"),
+        Field(
+            description="where a source load's common-mode control holds the outputs; of a single-ended output, "
+            "where the next stage wants it at rest, which offset_systematic is counted from"
+        ),
+    ] = None
 
 
 class SearchTable(Parameters):
@@ -133,8 +176,18 @@ class ProblemFile(Parameters):
     conditions: ConditionsTable
     sizes: Annotated[
         dict[str, Any],
-        WithJsonSchema(_named(_RANGE, 2)),
+        WithJsonSchema(_named(_RANGE, 4)),
         Field(description="every size of the stage: one value fixes it, two values free it between them"),
+    ]
+    measures: Annotated[
+        dict[str, Any],
+        WithJsonSchema(_measures_schema()),
+        Field(
+            description="parameters of measures: a name of the catalogue with the keys that are its parameters, "
+            "or a name of your own with the same keys and of, the measure that it stands for; "
+            "a parameter that is not there keeps its default",
+            default_factory=dict,
+        ),
     ]
     goals: Annotated[
         dict[str, Any],
@@ -156,7 +209,7 @@ class SizingFile(Parameters):
 
     title: Annotated[str, Field(max_length=200, description="what the sizing is")] = ""
     sizes: Annotated[
-        dict[str, Any], WithJsonSchema(_named(_QUANTITY, 2)), Field(description="one value for every size")
+        dict[str, Any], WithJsonSchema(_named(_QUANTITY, 4)), Field(description="one value for every size")
     ]
 
 

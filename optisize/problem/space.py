@@ -16,8 +16,9 @@ from optisize.errors import InputError
 from optisize.process.card import Process
 from optisize.process.law import Array
 from optisize.quantities import write
+from optisize.stage.assembly import Topology
+from optisize.stage.elements import Size
 from optisize.stage.layout import snap_length, snap_resistance, snap_width
-from optisize.stage.topology import Size, Topology
 
 CURRENT_DIGITS = 3  # a bias current is set to three significant digits
 
@@ -69,7 +70,7 @@ class SizingSpace:
         """Return the nearest values of one size that can be drawn or set, (N,); snapping twice changes nothing."""
         grid = self.process.grid
         if size.kind == "width":
-            return snap_width(values, grid, size.name.split(".")[0] in self._even_groups)
+            return snap_width(values, grid, size.name.rpartition(".")[0] in self._even_groups)
         if size.kind == "length":
             return snap_length(values, grid)
         if size.kind == "resistance":

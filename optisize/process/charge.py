@@ -28,6 +28,7 @@ from optisize.process.parameters import TransistorParameters
 from optisize.quantities import In
 
 _EXPONENT_MAX = 300.0
+_CHARGE_MIN = 1e-35  # below the smallest charge that is not zero
 
 
 class ChargeParameters(TransistorParameters):
@@ -193,6 +194,26 @@ class ChargeLaw:
             cgd=self.oxide * drain + self.overlap,
             cgb=self.oxide * bulk,
         )
+
+    def noise_conductance(self, vg: Array, vd: Array, vs: Array) -> Array:
+        """Return Gamma gms [S], from half of gms (weak inversion) to two thirds of it (strong), all of it at vds = 0.
+
+        Enz and Vittoz, Charge-Based MOS Transistor Modeling, Wiley, 2006 (value from memory): each part of the channel
+        has the noise of its charge, so Gamma is the mean charge over that at the source. With the normalised charges
+        qs, qd of the ends, i = q^2 + q,
+
+            Gamma = (4 (qs^2 + qs qd + qd^2) + 3 (qs + qd)) / (6 qs (qs + qd + 1)).
+
+        Where drain and source have changed roles, gds stands for gms. Velocity saturation adds nothing to Gamma.
+        """
+        c = self._channel(vg, vd, vs)
+        drain = self._drain(c, vd - vs)
+        inversion = c.u * c.u
+        charge = inversion / (np.sqrt(0.25 + inversion) + 0.5)
+        qs = np.maximum(charge[0], charge[1])
+        ratio = np.minimum(charge[0], charge[1]) / np.maximum(qs, _CHARGE_MIN)
+        gamma = (4.0 * qs * (1.0 + ratio + ratio * ratio) + 3.0 * (1.0 + ratio)) / (6.0 * (qs * (1.0 + ratio) + 1.0))
+        return gamma * np.where(vd >= vs, drain.gms, drain.gds)
 
     def _needed_inversion(self, current: Array) -> Array:
         """Return vp - vs [V] at which a saturated device carries `current`, without second-order effects."""

@@ -83,6 +83,9 @@ class Law(Protocol):
     def capacitances(self, vg: Array, vd: Array, vs: Array) -> Capacitances:
         """Return the gate capacitances at the terminal voltages [V]."""
 
+    def noise_conductance(self, vg: Array, vd: Array, vs: Array) -> Array:
+        """Return the conductance g [S] of the channel's white noise: its current has the density 4 k T g [A^2/Hz]."""
+
     def gate_voltage(self, current: Array, vs: Array) -> Array:
         """Estimate the gate voltage at which a saturated device carries `current` [A]; a start for Newton."""
 

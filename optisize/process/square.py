@@ -142,6 +142,14 @@ class SquareLaw:
         shape = np.broadcast_shapes(part.shape, source.shape)
         return Capacitances(cgs=part * source + self.overlap, cgd=part * drain + self.overlap, cgb=np.zeros(shape))
 
+    def noise_conductance(self, vg: Array, vd: Array, vs: Array) -> Array:
+        """Return 2/3 |gm| [S], which SPICE takes in both regions.
+
+        It is right in saturation only: without drain voltage gm vanishes, and the noise of the channel does not.
+        """
+        conductance: Array = np.abs(self.drain(vg, vd, vs).gm) * (2.0 / 3.0)
+        return conductance
+
     def gate_voltage(self, current: Array, vs: Array) -> Array:
         """Estimate the gate voltage at which a saturated device carries `current`, without modulation."""
         return vs + self._threshold(vs)[0] + np.sqrt(2.0 * current / self.beta)

@@ -245,7 +245,7 @@ class Analysis:
         gate, drain, source = (x[rows] for x in self.terminals.of_law)
         residual, matrix, pulls = self.equations
         return Linearised(
-            Terminals(gate, drain, source, self.terminals.resistors),
+            Terminals(gate, drain, source, self.terminals.linear[part.linear]),
             Drain(*(x[rows] for x in self.drain)),
             Saturation(*(x[rows] for x in self.saturation)),
             Equations(residual[solved], matrix[np.ix_(solved, solved)], pulls[solved, :1]),

@@ -7,11 +7,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from optisize.process.law import Array
+from optisize.process.law import Array, Law
 from optisize.stage.circuit import Circuit
 from optisize.stage.linear import solve
 from optisize.stage.network import Network
-from optisize.stage.topology import DRIVEN, INPUTS
+from optisize.stage.topology import INPUTS
 from optisize.stage.wiring import Indices
 
 ITERATIONS = 40
@@ -35,7 +35,7 @@ class _Start:
 
     def __init__(self, circuit: Circuit, driven: Array) -> None:
         self._circuit = circuit
-        self._driven = dict(zip(DRIVEN, driven, strict=True))
+        self._driven = dict(zip(circuit.topology.driven, driven, strict=True))
 
     def rail(self, node: str) -> Array:
         return self._driven[self._circuit.topology.rail(node)]
@@ -46,28 +46,42 @@ class _Start:
     def tail_current(self) -> Array:
         return self._circuit.topology.tail_current(self)
 
+    def half(self) -> Array:
+        tail, leg = self.tail_current(), self._circuit.topology.leg
+        return 0.5 * np.maximum(tail - self.size(leg), 0.05 * tail) if leg else 0.5 * tail
+
+    def height(self) -> Array:
+        return self.distance(0.5 * (self._driven["in+"] + self._driven["in-"]))
+
+    def toward_load(self, voltage: Array, by: Array) -> Array:
+        return voltage + self._circuit.topology.polarity * by
+
     def away(self, node: str, voltage: Array) -> Array:
         rail = self.rail(node)
         supply = self._driven["supply"]
         return np.where(rail > 0.5 * supply, rail - voltage, rail + voltage)
 
-    def gate_drive(self, transistor: str, current: Array) -> Array:
-        row = self._circuit.wiring.rows[transistor]
-        law = self._circuit.law.take(slice(row, row + 1), slice(None))
-        return law.gate_voltage(current[None], np.zeros((1, 1)))[0]
+    def distance(self, voltage: Array) -> Array:
+        return np.abs(voltage - self.rail("tail_rail"))
+
+    def gate_drive(self, transistor: str, current: Array, source: Array | float = 0.0) -> Array:
+        return self._law(transistor).gate_voltage(current[None], np.atleast_2d(source))[0]
+
+    def under(self, transistor: str, current: Array, gate: Array) -> Array:
+        return self._law(transistor).source_voltage(current[None], gate[None])[0]
 
     def follow(self, transistor: str, current: Array) -> Array:
-        """Return the source voltage under a gate at the common mode, its bulk at the rail of its channel."""
-        circuit = self._circuit
-        row = circuit.wiring.rows[transistor]
-        law = circuit.law.take(slice(row, row + 1), slice(None))
+        topology, supply = self._circuit.topology, self._driven["supply"]
         common = 0.5 * (self._driven["in+"] + self._driven["in-"])
-        if circuit.topology.bulk == "source":
-            return common - circuit.topology.polarity * law.gate_voltage(current[None], np.zeros((1, 1)))[0]
-        if INPUTS[circuit.topology.input] == "n":
-            return law.source_voltage(current[None], common[None])[0]
-        supply = self._driven["supply"]
-        return supply - law.source_voltage(current[None], (supply - common)[None])[0]
+        if topology.bulk == "source":
+            return common - topology.polarity * self.gate_drive(transistor, current)
+        if INPUTS[topology.input] == "n":
+            return self.under(transistor, current, common)
+        return supply - self.under(transistor, current, supply - common)
+
+    def _law(self, transistor: str) -> Law:
+        row = self._circuit.wiring.rows[transistor]
+        return self._circuit.law.take(slice(row, row + 1), slice(None))
 
 
 def first_guess(circuit: Circuit, driven: Array) -> Array:
@@ -83,7 +97,7 @@ def operating_point(circuit: Circuit, driven: Array) -> OperatingPoint:
 
     Args:
         circuit: N sized designs.
-        driven: voltages of the driven nodes, (4, N).
+        driven: voltages of the driven nodes, (K, N).
 
     Returns:
         Node voltages, always finite, and a flag for each design. A design that has not converged keeps its guess.

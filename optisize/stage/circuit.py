@@ -10,9 +10,9 @@ import numpy as np
 
 from optisize.process.card import Process
 from optisize.process.law import Array, Law, Pick, picked, taken
+from optisize.stage.assembly import Topology
 from optisize.stage.layout import Drawn, draw_transistors, resistor_area, resistor_length
 from optisize.stage.network import Network
-from optisize.stage.topology import DRIVEN, Topology
 from optisize.stage.wiring import Wiring, wiring
 
 
@@ -26,6 +26,7 @@ class Conditions:
         load_capacitance: from each output to ground [F].
         temperature: absolute temperature [K].
         corner: name of the process corner.
+        output_common_mode: where a common-mode control holds the outputs, or where one output is wanted at rest [V].
     """
 
     supply: float
@@ -33,6 +34,7 @@ class Conditions:
     load_capacitance: float
     temperature: float = 300.15
     corner: str = "typical"
+    output_common_mode: float | None = None
 
     @property
     def middle(self) -> float:
@@ -93,10 +95,12 @@ class Circuit:
         )
 
     def driven(self, positive: Array, negative: Array) -> Array:
-        """Return the voltages of the driven nodes (4, N) for input voltages (N,)."""
-        voltages = np.empty((len(DRIVEN), len(positive)))
+        """Return the voltages of the driven nodes (K, N) for input voltages (N,)."""
+        voltages = np.empty((len(self.topology.driven), len(positive)))
         voltages[0], voltages[1] = positive, negative
         voltages[2], voltages[3] = self.conditions.supply, 0.0
+        if self.topology.controls:
+            voltages[4] = self.conditions.output_common_mode
         return voltages
 
     @cached_property
@@ -142,7 +146,7 @@ def size_circuit(topology: Topology, process: Process, conditions: Conditions, s
     channels = [topology.channel(x) for x in t]
     law, parameters = process.bind_law(channels, width * units, length, conditions.temperature, conditions.corner)
     ratio = process.resistance_ratio(conditions.temperature, conditions.corner)
-    conductances = [1.0 / (sizes[r.size] * ratio) for r in topology.resistors]
+    conductances = [1.0 / (sizes[r.size] * ratio) for r in topology.resistors] + [one for _ in topology.controls]
     currents = [topology.polarity * sizes[s.size] for s in topology.sources]
     network = Network(
         wiring=wires,

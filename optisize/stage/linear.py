@@ -19,7 +19,8 @@ class Elimination:
     """The order and the steps of eliminating matrices of one sparsity: worked out once, followed for every batch.
 
     Attributes:
-        order: the unknowns in the order of their elimination, fewest neighbours first.
+        order: the unknowns in the order of their elimination, fewest neighbours first; one whose own equation does not
+            contain it (a controlled node) only after others have brought it in.
         steps: for each of them, the later rows it enters and the later columns it has, fill-in included.
     """
 
@@ -38,7 +39,8 @@ def elimination(pattern: Pattern) -> Elimination:
     left = list(range(len(pattern)))
     order, steps = [], []
     while left:
-        k = min(left, key=lambda i: (filled[left, i].sum() - 1) * (filled[i, left].sum() - 1))
+        ready = [i for i in left if filled[i, i]] or left
+        k = min(ready, key=lambda i: (filled[left, i].sum() - 1) * (filled[i, left].sum() - 1))
         left.remove(k)
         rows = tuple(i for i in left if filled[i, k])
         columns = tuple(j for j in left if filled[k, j])
@@ -51,7 +53,8 @@ def elimination(pattern: Pattern) -> Elimination:
 def solve(matrix: NDArray[Any], right: NDArray[Any], pattern: Pattern | None = None) -> NDArray[Any]:
     """Solve N small systems at once by elimination without exchange of rows.
 
-    Nodal matrices of transistor stages need none: each diagonal is the sum of the conductances at its node. A design
+    Nodal matrices of transistor stages need none: each diagonal is the sum of the conductances at its node, or, of a
+    controlled node, what the elimination of those that it acts on leaves there. A design
     whose pivot vanishes comes out as not finite; the caller silences the warning and flags it.
 
     Args:

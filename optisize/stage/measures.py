@@ -16,7 +16,7 @@ import numpy as np
 from optisize.errors import InputError, nearest
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
-from optisize.stage.topology import Topology
+from optisize.stage.assembly import Topology
 
 Sense = Literal["max", "min"]
 Scale = Literal["linear", "log"]
@@ -252,11 +252,18 @@ def inversion(a: Analysis) -> Array:
     return a.saturation.inversion
 
 
-def find(name: str, topology: Topology) -> Measure:
+def find(name: str, topology: Topology, own: Mapping[str, Measure] | None = None) -> Measure:
     """Return a measure by name; ``input.p.gm`` is the figure of one transistor.
+
+    Args:
+        name: as in files and tables.
+        topology: the stage.
+        own: measures by name that come before those of the catalogue.
 
     Raises InputError for a name that the stage does not have.
     """
+    if own and name in own:
+        return own[name]
     if name in CATALOGUE:
         return CATALOGUE[name]
     transistor, _, figure = name.rpartition(".")
@@ -266,5 +273,5 @@ def find(name: str, topology: Topology) -> Measure:
         return Measure(
             **{**entry.__dict__, "name": name, "function": lambda a: entry.function(a)[row]},
         )
-    allowed = [*CATALOGUE, *(f"{t}.{f}" for t in names for f in FIGURES)]
+    allowed = [*(own or ()), *CATALOGUE, *(f"{t}.{f}" for t in names for f in FIGURES)]
     raise InputError(f'"{name}" is not a measure; "optisize measures" lists them{nearest(name, allowed)}')

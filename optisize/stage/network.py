@@ -16,13 +16,13 @@ class Terminals(NamedTuple):
 
     Attributes:
         gate, drain, source: of the transistors, relative to the bulk and in n-channel sense, each (T, ...).
-        resistors: across the resistors, (R, ...).
+        linear: of the linear branches: across the resistors, and what the controls leave, (L, ...).
     """
 
     gate: Array
     drain: Array
     source: Array
-    resistors: Array
+    linear: Array
 
     @property
     def vds(self) -> Array:
@@ -57,7 +57,7 @@ class Network:
         wiring: the constant arrays of the topology.
         supply: supply voltage [V].
         law: the transistor law of the T transistors.
-        conductances: of the resistors, (R, N).
+        conductances: of the linear branches, (L, N): of resistors, and one siemens for a control.
         currents: of the sources, (S, N), signed from a to b.
     """
 
@@ -93,7 +93,7 @@ class Network:
             moving.wiring,
             self.supply,
             self.law.take(moving.transistors, slice(None)),
-            self.conductances[moving.resistors],
+            self.conductances[moving.linear],
             self.currents[moving.sources],
             self.designs,
         )
@@ -106,8 +106,8 @@ class Network:
         return Terminals(stacked[:t], stacked[t : 2 * t], stacked[2 * t : 3 * t], stacked[3 * t :])
 
     def branch_currents(self, terminals: Terminals, drain: Drain) -> Array:
-        """Return the currents of all branches (T + R + S, N), from drain to source and from a to b."""
-        through = terminals.resistors * self.conductances
+        """Return the currents of all branches (T + L + S, N), from drain to source and from a to b."""
+        through = terminals.linear * self.conductances
         return np.concatenate([drain.id * self.wiring.polarity, through, self.currents])
 
     def equations(self, terminals: Terminals, drain: Drain, drives: Array | None = None) -> Equations:
@@ -119,7 +119,7 @@ class Network:
             drives: K patterns over all nodes, (A, K).
         """
         u = self.wiring.unknowns
-        through = terminals.resistors * self.conductances
+        through = terminals.linear * self.conductances
         branches = np.concatenate([drain.id, drain.gm, drain.gds, drain.gms, through, self.conductances, self.currents])
         rows = self.wiring.equation_stamp(drives) @ branches
         end = u + u * u

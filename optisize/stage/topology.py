@@ -2,126 +2,74 @@
 
 Every kind is written once, for both input channels: ``tail_rail`` is ground for an n-channel input and the supply for
 a p-channel one, ``load_rail`` the other rail. Input transistors have the input's channel, load transistors the other
-one. A new load or tail is an entry of `LOADS` or `TAILS`; the solver, the small signal and the measures read the
-entries and know no kind by name.
+one. A new load or tail is an entry of `LOADS` or `TAILS`, a new way to stack them one of `FORMS`; the solver, the
+small signal and the measures read the entries and know no kind by name.
+
+Bias legs are ideal copies of ``bias.current``, the reference of the chip, into transistors that are sized and counted.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
-from functools import lru_cache
-from typing import Literal, Protocol
 
-from optisize.errors import InputError, listing
+import numpy as np
+
 from optisize.process.law import Array
+from optisize.stage.elements import (
+    REFERENCE,
+    Channel,
+    Control,
+    CurrentSource,
+    Form,
+    Guess,
+    LoadKind,
+    PairKind,
+    Piece,
+    Resistor,
+    Size,
+    Start,
+    TailKind,
+    Transistor,
+)
 
-Channel = Literal["n", "p"]
-SizeKind = Literal["width", "length", "resistance", "current", "count"]
-
-UNITS: dict[SizeKind, str] = {"width": "m", "length": "m", "resistance": "ohm", "current": "A", "count": ""}
-DRIVEN = ("in+", "in-", "supply", "ground")
-
-
-@dataclass(frozen=True)
-class Size:
-    """One size or bias that a designer sets: its name, kind and meaning."""
-
-    name: str
-    kind: SizeKind
-    meaning: str
-
-    @property
-    def unit(self) -> str:
-        """The SI unit of the size."""
-        return UNITS[self.kind]
+BIAS_CURRENT = Size("bias.current", "current", "current of the bias branch, and of each leg that makes a gate voltage")
 
 
-@dataclass(frozen=True)
-class Transistor:
-    """A transistor between four nodes.
-
-    Attributes:
-        channel: ``input`` for the channel of the pair, ``opposite`` for the other one.
-        group: whose ``width`` and ``length`` it has; transistors of one group are drawn alike.
-        units: the size that says of how many equal units it is made; one where empty.
-        saturates: whether it has to be saturated for the stage to work (a diode-connected one is by itself).
-        even_fingers: whether it is drawn with an even number of fingers, so that a pair can be cross-coupled.
-    """
-
-    name: str
-    drain: str
-    gate: str
-    source: str
-    channel: Literal["input", "opposite"]
-    group: str
-    units: str = ""
-    saturates: bool = True
-    even_fingers: bool = False
+def _shape(group: str, of: str) -> tuple[Size, Size]:
+    """Return the width and the length of a group of transistors."""
+    return (
+        Size(f"{group}.width", "width", f"channel width of {of}"),
+        Size(f"{group}.length", "length", f"channel length of {of}"),
+    )
 
 
-@dataclass(frozen=True)
-class Resistor:
-    """A resistor between two nodes; `size` names its resistance."""
-
-    name: str
-    a: str
-    b: str
-    size: str
+def _gate(transistor: str, current: Callable[[Start], Array]) -> Guess:
+    """Return the guess of a gate that stands at its rail by what a transistor needs to carry a current."""
+    rail = "tail_rail" if transistor in ("bias", "tail.cascode.bias") else "load_rail"
+    return lambda s: s.away(rail, s.gate_drive(transistor, current(s)))
 
 
-@dataclass(frozen=True)
-class CurrentSource:
-    """An ideal current from node `a` to node `b` for an n-channel input; `size` names its current."""
-
-    name: str
-    a: str
-    b: str
-    size: str
+def _under_cascode(bias: str, cascode: str, current: Callable[[Start], Array]) -> Callable[[Start], Array]:
+    """Return how far the source of a cascode stands from the rail at which its gate voltage is made."""
+    return lambda s: np.maximum(s.under(cascode, current(s), s.gate_drive(bias, _leg(s))), LEAST_STACKED)
 
 
-class Start(Protocol):
-    """What the first guess of a node voltage may ask for; voltages of shape (N,)."""
-
-    def rail(self, node: str) -> Array:
-        """Return the voltage of a driven node."""
-
-    def size(self, name: str) -> Array:
-        """Return a size."""
-
-    def tail_current(self) -> Array:
-        """Return the current that the tail is meant to carry."""
-
-    def away(self, node: str, voltage: Array) -> Array:
-        """Return a voltage that many volts from a rail towards the other one."""
-
-    def gate_drive(self, transistor: str, current: Array) -> Array:
-        """Return the gate-source voltage magnitude at which a transistor with its source at its rail carries it."""
-
-    def follow(self, transistor: str, current: Array) -> Array:
-        """Return the source voltage at which a transistor with its gate at the common mode carries a current."""
+LEAST_STACKED = 0.03  # V, in a first guess
 
 
-Guess = Callable[[Start], Array]
+def _leg(s: Start) -> Array:
+    return s.size("bias.current")
 
 
-@dataclass(frozen=True)
-class Piece:
-    """A pair, a load or a tail: its sizes, its elements, and a first guess for each node that it sets."""
-
-    sizes: tuple[Size, ...]
-    transistors: tuple[Transistor, ...] = ()
-    resistors: tuple[Resistor, ...] = ()
-    sources: tuple[CurrentSource, ...] = ()
-    guesses: tuple[tuple[str, Guess], ...] = ()
-    summary: str = ""
+def _half(s: Start) -> Array:
+    return s.half()
 
 
-def _half(start: Start) -> Array:
-    return 0.5 * start.tail_current()
+def _tail(s: Start) -> Array:
+    return s.follow("input.p", s.half())
 
 
-PAIR = Piece(
+PAIR = PairKind(
     sizes=(
         Size("input.width", "width", "channel width of each input transistor"),
         Size("input.length", "length", "channel length of the input transistors"),
@@ -130,24 +78,74 @@ PAIR = Piece(
         Transistor("input.p", "left", "in+", "tail", "input", "input", even_fingers=True),
         Transistor("input.n", "right", "in-", "tail", "input", "input", even_fingers=True),
     ),
-    guesses=(("tail", lambda s: s.follow("input.p", _half(s))),),
+    guesses=(("tail", _tail),),
 )
 
 
-@dataclass(frozen=True)
-class LoadKind(Piece):
-    """A load and what it means for the output.
+def _input_gate(s: Start) -> Array:
+    """Return how far the gates of the input's cascodes stand from the rail of the tail."""
+    return s.gate_drive("input.cascode.bias", _leg(s), s.distance(_tail(s)))
 
-    Attributes:
-        outputs: the outputs that it can have.
-        steered: the part of the tail current that full steering leaves to charge the output.
-        symmetric: whether both sides of a matched stage are alike, so that one tells what the other does.
-    """
 
-    outputs: tuple[str, ...] = ("single-ended",)
-    steered: float = 0.5
-    symmetric: bool = False
-    refusal: str = ""
+def _input_drain(s: Start) -> Array:
+    """Return how far the drains of a cascoded pair stand from the rail of the tail."""
+    return np.maximum(s.under("input.cascode.p", s.half(), _input_gate(s)), s.distance(_tail(s)) + LEAST_STACKED)
+
+
+# The gate voltage of the cascodes stands on the tail, so that it follows the common mode.
+CASCODED_PAIR = PairKind(
+    sizes=(
+        *PAIR.sizes,
+        *_shape("input.cascode", "each cascode of the input transistors"),
+        *_shape("input.cascode.bias", "the diode on the tail that makes the gate voltage of the input's cascodes"),
+        BIAS_CURRENT,
+    ),
+    transistors=(
+        Transistor("input.p", "left_low", "in+", "tail", "input", "input", even_fingers=True),
+        Transistor("input.n", "right_low", "in-", "tail", "input", "input", even_fingers=True),
+        Transistor("input.cascode.p", "left", "input_gate", "left_low", "input", "input.cascode", even_fingers=True),
+        Transistor("input.cascode.n", "right", "input_gate", "right_low", "input", "input.cascode", even_fingers=True),
+        Transistor(
+            "input.cascode.bias", "input_gate", "input_gate", "tail", "input", "input.cascode.bias", saturates=False
+        ),
+    ),
+    sources=(CurrentSource("input.cascode.bias", "load_rail", "input_gate", "bias.current"),),
+    guesses=(
+        ("tail", _tail),
+        ("left_low", lambda s: s.away("tail_rail", _input_drain(s))),
+        ("right_low", lambda s: s.away("tail_rail", _input_drain(s))),
+        ("input_gate", lambda s: s.away("tail_rail", _input_gate(s))),
+    ),
+    leg="bias.current",
+)
+
+# Joined to a pair where its size is given: the sources of the pair then stand on these resistors.
+DEGENERATION = Piece(
+    summary="a resistor from the source of each input transistor to the tail",
+    sizes=(
+        Size("input.degeneration", "resistance", "resistance from the source of each input transistor to the tail"),
+    ),
+    resistors=(
+        Resistor("input.degeneration.p", "left_source", "tail", "input.degeneration"),
+        Resistor("input.degeneration.n", "right_source", "tail", "input.degeneration"),
+    ),
+    guesses=(
+        ("tail", lambda s: s.toward_load(_tail(s), -s.size("input.degeneration") * s.half())),
+        ("left_source", _tail),
+        ("right_source", _tail),
+    ),
+)
+DEGENERATED = {"input.p": "left_source", "input.n": "right_source"}
+
+_ONE_OUTPUT = "a mirror has one output: the other side is its diode"
+_HELD = "common-mode control holds the mean of two outputs"
+_BOTH = ("single-ended", "differential")
+_LOAD_GATE = _gate("load.p", _half)
+
+
+def _current_source(name: str, drain: str) -> Transistor:
+    """Return one of the current sources of a load, its gate set by the common-mode control."""
+    return Transistor(name, drain, "load_gate", "load_rail", "opposite", "load", "load.units", even_fingers=True)
 
 
 LOADS: dict[str, LoadKind] = {
@@ -159,9 +157,20 @@ LOADS: dict[str, LoadKind] = {
             Resistor("load.n", "right", "load_rail", "load.resistance"),
         ),
         guesses=tuple(
-            (node, lambda s: s.away("load_rail", s.size("load.resistance") * _half(s))) for node in ("left", "right")
+            (node, lambda s: s.away("load_rail", s.size("load.resistance") * s.half())) for node in ("left", "right")
         ),
-        outputs=("single-ended", "differential"),
+        outputs=_BOTH,
+        symmetric=True,
+    ),
+    "diode": LoadKind(
+        summary="a diode-connected transistor from each drain to the rail",
+        sizes=_shape("load", "each load transistor"),
+        transistors=(
+            Transistor("load.p", "left", "left", "load_rail", "opposite", "load", saturates=False, even_fingers=True),
+            Transistor("load.n", "right", "right", "load_rail", "opposite", "load", saturates=False, even_fingers=True),
+        ),
+        guesses=(("left", _LOAD_GATE), ("right", _LOAD_GATE)),
+        outputs=_BOTH,
         symmetric=True,
     ),
     "mirror": LoadKind(
@@ -174,20 +183,117 @@ LOADS: dict[str, LoadKind] = {
             Transistor("load.p", "left", "left", "load_rail", "opposite", "load", saturates=False, even_fingers=True),
             Transistor("load.n", "right", "left", "load_rail", "opposite", "load", even_fingers=True),
         ),
-        guesses=tuple(
-            (node, lambda s: s.away("load_rail", s.gate_drive("load.p", _half(s)))) for node in ("left", "right")
-        ),
+        guesses=(("left", _LOAD_GATE), ("right", _LOAD_GATE)),
         steered=1.0,
-        refusal="a mirror has one output: the other side is its diode",
+        refusal=_ONE_OUTPUT,
+    ),
+    "source": LoadKind(
+        summary="two current sources under ideal common-mode control, which holds the outputs at output_common_mode",
+        sizes=(
+            *_shape("load", "one unit of the current sources and of their bias"),
+            Size("load.units", "count", "number of units in each current source; its bias has one"),
+            BIAS_CURRENT,
+        ),
+        transistors=(
+            Transistor("load.p", "left", "load_gate", "load_rail", "opposite", "load", "load.units", even_fingers=True),
+            Transistor(
+                "load.n", "right", "load_gate", "load_rail", "opposite", "load", "load.units", even_fingers=True
+            ),
+            Transistor("load.bias", "load_bias", "load_bias", "load_rail", "opposite", "load", saturates=False),
+        ),
+        sources=(CurrentSource("load.bias", "load_bias", "tail_rail", "bias.current"),),
+        controls=(Control("load", "load_gate", ("left", "right")),),
+        guesses=(
+            ("left", lambda s: s.rail(REFERENCE)),
+            ("right", lambda s: s.rail(REFERENCE)),
+            ("load_gate", _LOAD_GATE),
+            ("load_bias", _gate("load.bias", _leg)),
+        ),
+        outputs=("differential",),
+        symmetric=True,
+        refusal=_HELD,
     ),
 }
 
+_CASCODED_LOAD_SIZES = (
+    *_shape("load.cascode", "each cascode of the load"),
+    *_shape("load.cascode.bias", "the diode at the rail that makes the gate voltage of the load's cascodes"),
+    BIAS_CURRENT,
+)
+_LOAD_CASCODES = (
+    Transistor("load.cascode.p", "left", "load_cascode", "left_high", "opposite", "load.cascode", even_fingers=True),
+    Transistor("load.cascode.n", "right", "load_cascode", "right_high", "opposite", "load.cascode", even_fingers=True),
+    Transistor(
+        "load.cascode.bias", "load_cascode", "load_cascode", "load_rail", "opposite", "load.cascode.bias",
+        saturates=False,
+    ),
+)  # fmt: skip
+_LOAD_CASCODE_LEG = CurrentSource("load.cascode.bias", "load_cascode", "tail_rail", "bias.current")
+_OVER_CASCODE = _under_cascode("load.cascode.bias", "load.cascode.p", _half)
+_LOAD_CASCODE_GUESSES: tuple[tuple[str, Guess], ...] = (
+    ("left_high", lambda s: s.away("load_rail", _OVER_CASCODE(s))),
+    ("right_high", lambda s: s.away("load_rail", _OVER_CASCODE(s))),
+    ("load_cascode", _gate("load.cascode.bias", _leg)),
+)
 
-@dataclass(frozen=True)
-class TailKind(Piece):
-    """A tail and the current that it is meant to carry."""
+CASCODED_LOADS: dict[str, LoadKind] = {
+    "mirror": LoadKind(
+        summary="a cascoded mirror, its gates at the drain of the cascode",
+        sizes=(*LOADS["mirror"].sizes, *_CASCODED_LOAD_SIZES),
+        transistors=(
+            Transistor("load.p", "left_high", "left", "load_rail", "opposite", "load", even_fingers=True),
+            Transistor("load.n", "right_high", "left", "load_rail", "opposite", "load", even_fingers=True),
+            *_LOAD_CASCODES,
+        ),
+        sources=(_LOAD_CASCODE_LEG,),
+        guesses=(("left", _LOAD_GATE), ("right", _LOAD_GATE), *_LOAD_CASCODE_GUESSES),
+        steered=1.0,
+        refusal=_ONE_OUTPUT,
+    ),
+    "source": LoadKind(
+        summary="two cascoded current sources under ideal common-mode control",
+        sizes=(*LOADS["source"].sizes, *_CASCODED_LOAD_SIZES),
+        transistors=(
+            _current_source("load.p", "left_high"),
+            _current_source("load.n", "right_high"),
+            LOADS["source"].transistors[2],
+            *_LOAD_CASCODES,
+        ),
+        sources=(*LOADS["source"].sources, _LOAD_CASCODE_LEG),
+        controls=LOADS["source"].controls,
+        guesses=(*LOADS["source"].guesses, *_LOAD_CASCODE_GUESSES),
+        outputs=("differential",),
+        symmetric=True,
+        refusal=_HELD,
+    ),
+}
 
-    current: Guess = _half
+FORMS: dict[str, Form] = {
+    "simple": Form("the load on the drains of the pair", PAIR, LOADS),
+    "telescopic": Form("cascodes over the pair and under the load, mirror or source", CASCODED_PAIR, CASCODED_LOADS),
+}
+
+_TAIL_SIZES = (
+    Size("tail.width", "width", "channel width of one unit of tail and bias"),
+    Size("tail.length", "length", "channel length of the units of tail and bias"),
+    Size("tail.units", "count", "number of units in the tail; the bias has one"),
+)
+_BIAS_LEG = CurrentSource("bias", "load_rail", "bias", "bias.current")
+_UNDER_TAIL_CASCODE = _under_cascode("tail.cascode.bias", "bias.cascode", _leg)
+
+
+def _mirrored(s: Start) -> Array:
+    return s.size("tail.units") * s.size("bias.current")
+
+
+def _through_resistor(s: Start) -> Array:
+    """Return the current of a resistive tail: the input transistors' drive changes little, so two passes do."""
+    resistance = s.size("tail.resistance")
+    current = 0.5 * s.height() / resistance
+    for _ in range(2):
+        drop = s.height() - s.gate_drive("input.p", 0.5 * current)
+        current = np.maximum(drop, 0.1 * s.height()) / resistance
+    return current
 
 
 TAILS: dict[str, TailKind] = {
@@ -197,23 +303,51 @@ TAILS: dict[str, TailKind] = {
         sources=(CurrentSource("tail", "tail", "tail_rail", "tail.current"),),
         current=lambda s: s.size("tail.current"),
     ),
+    "resistor": TailKind(
+        summary="a resistor to the rail",
+        sizes=(Size("tail.resistance", "resistance", "resistance of the tail resistor"),),
+        resistors=(Resistor("tail", "tail", "tail_rail", "tail.resistance"),),
+        current=_through_resistor,
+    ),
     "single": TailKind(
         summary="one transistor, mirrored from a diode-connected unit that carries bias.current",
-        sizes=(
-            Size("tail.width", "width", "channel width of one unit of tail and bias"),
-            Size("tail.length", "length", "channel length of the units of tail and bias"),
-            Size("tail.units", "count", "number of units in the tail; the bias has one"),
-            Size("bias.current", "current", "current of the bias branch"),
-        ),
+        sizes=(*_TAIL_SIZES, BIAS_CURRENT),
         transistors=(
             Transistor("tail", "tail", "bias", "tail_rail", "input", "tail", units="tail.units"),
             Transistor("bias", "bias", "bias", "tail_rail", "input", "tail", saturates=False),
         ),
-        sources=(CurrentSource("bias", "load_rail", "bias", "bias.current"),),
-        guesses=(("bias", lambda s: s.away("tail_rail", s.gate_drive("bias", s.size("bias.current")))),),
-        current=lambda s: s.size("tail.units") * s.size("bias.current"),
+        sources=(_BIAS_LEG,),
+        guesses=(("bias", _gate("bias", _leg)),),
+        current=_mirrored,
     ),
-}
+    "cascode": TailKind(
+        summary="a cascoded mirror of bias.current, its cascodes' gate voltage from a diode of its own",
+        sizes=(
+            *_TAIL_SIZES,
+            *_shape("tail.cascode", "one unit of the cascodes over tail and bias"),
+            *_shape("tail.cascode.bias", "the diode at the rail that makes the gate voltage of the tail's cascodes"),
+            BIAS_CURRENT,
+        ),
+        transistors=(
+            Transistor("tail", "tail_low", "bias", "tail_rail", "input", "tail", units="tail.units"),
+            Transistor("tail.cascode", "tail", "tail_cascode", "tail_low", "input", "tail.cascode", units="tail.units"),
+            Transistor("bias", "bias_low", "bias", "tail_rail", "input", "tail"),
+            Transistor("bias.cascode", "bias", "tail_cascode", "bias_low", "input", "tail.cascode"),
+            Transistor(
+                "tail.cascode.bias", "tail_cascode", "tail_cascode", "tail_rail", "input", "tail.cascode.bias",
+                saturates=False,
+            ),
+        ),
+        sources=(_BIAS_LEG, CurrentSource("tail.cascode.bias", "load_rail", "tail_cascode", "bias.current")),
+        guesses=(
+            ("bias", _gate("bias", _leg)),
+            ("tail_low", lambda s: s.away("tail_rail", _UNDER_TAIL_CASCODE(s))),
+            ("bias_low", lambda s: s.away("tail_rail", _UNDER_TAIL_CASCODE(s))),
+            ("tail_cascode", _gate("tail.cascode.bias", _leg)),
+        ),
+        current=_mirrored,
+    ),
+}  # fmt: skip
 
 INPUTS: dict[str, Channel] = {"nmos": "n", "pmos": "p"}
 OUTPUTS: dict[str, tuple[tuple[str, float], ...]] = {
@@ -221,108 +355,3 @@ OUTPUTS: dict[str, tuple[tuple[str, float], ...]] = {
     "differential": (("right", 1.0), ("left", -1.0)),
 }
 BULKS = ("rail", "source")
-
-
-@dataclass(frozen=True)
-class Topology:
-    """A whole stage: pair, load and tail joined, with the input's channel and the output chosen.
-
-    Attributes:
-        transistors, resistors, sources: the elements, with ``tail_rail`` and ``load_rail`` replaced by the rails.
-        sizes: every size that the stage needs, in the order of the pieces.
-        unknown: the nodes whose voltage is solved for.
-        output: nodes of the output with their signs.
-        guesses: first guess of each unknown node.
-        steered: the part of the tail current that full steering leaves to charge the output.
-        symmetric: whether both sides are alike.
-    """
-
-    input: str
-    load: str
-    tail: str
-    output_kind: str
-    bulk: str
-    transistors: tuple[Transistor, ...]
-    resistors: tuple[Resistor, ...]
-    sources: tuple[CurrentSource, ...]
-    sizes: tuple[Size, ...]
-    unknown: tuple[str, ...]
-    output: tuple[tuple[str, float], ...]
-    guesses: tuple[tuple[str, Guess], ...]
-    tail_current: Guess
-    steered: float
-    symmetric: bool
-    rails: tuple[tuple[str, str], ...]
-
-    @property
-    def polarity(self) -> float:
-        """+1 for an n-channel input, -1 for a p-channel one."""
-        return 1.0 if INPUTS[self.input] == "n" else -1.0
-
-    def channel(self, transistor: Transistor) -> Channel:
-        """Return the channel of a transistor: ``n`` or ``p``."""
-        same = transistor.channel == "input"
-        return INPUTS[self.input] if same else ("p" if INPUTS[self.input] == "n" else "n")
-
-    def bulk_node(self, transistor: Transistor) -> str:
-        """Return the node of the bulk: its channel's rail, or the source of the pair where the stage says so."""
-        if self.bulk == "source" and transistor.group == "input":
-            return transistor.source
-        return "ground" if self.channel(transistor) == "n" else "supply"
-
-    def rail(self, node: str) -> str:
-        """Return the name of a node with ``tail_rail`` and ``load_rail`` resolved."""
-        return dict(self.rails).get(node, node)
-
-    @property
-    def size_names(self) -> tuple[str, ...]:
-        """The names of the sizes."""
-        return tuple(size.name for size in self.sizes)
-
-
-@lru_cache(maxsize=64)
-def build(input: str, load: str, tail: str, output: str = "single-ended", bulk: str = "rail") -> Topology:
-    """Join a pair, a load and a tail.
-
-    Raises InputError for a combination that makes no sense.
-    """
-    load_kind, tail_kind = LOADS[load], TAILS[tail]
-    if output not in load_kind.outputs:
-        raise InputError(
-            f'stage.output: "{output}" does not go with load "{load}": {load_kind.refusal}; '
-            f"allowed are {listing(load_kind.outputs)}"
-        )
-    rails = {"tail_rail": "ground", "load_rail": "supply"}
-    if INPUTS[input] == "p":
-        rails = {"tail_rail": "supply", "load_rail": "ground"}
-
-    def at(node: str) -> str:
-        return rails.get(node, node)
-
-    pieces: tuple[Piece, ...] = (PAIR, load_kind, tail_kind)
-    transistors = tuple(
-        Transistor(**{**t.__dict__, "drain": at(t.drain), "gate": at(t.gate), "source": at(t.source)})
-        for piece in pieces
-        for t in piece.transistors
-    )
-    resistors = tuple(Resistor(r.name, at(r.a), at(r.b), r.size) for piece in pieces for r in piece.resistors)
-    sources = tuple(CurrentSource(s.name, at(s.a), at(s.b), s.size) for piece in pieces for s in piece.sources)
-    guesses = tuple(guess for piece in pieces for guess in piece.guesses)
-    return Topology(
-        input=input,
-        load=load,
-        tail=tail,
-        output_kind=output,
-        bulk=bulk,
-        transistors=transistors,
-        resistors=resistors,
-        sources=sources,
-        sizes=tuple(size for piece in pieces for size in piece.sizes),
-        unknown=tuple(node for node, _ in guesses),
-        output=OUTPUTS[output],
-        guesses=guesses,
-        tail_current=tail_kind.current,
-        steered=load_kind.steered,
-        symmetric=load_kind.symmetric,
-        rails=tuple(rails.items()),
-    )

@@ -16,8 +16,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array
+from optisize.stage.assembly import Topology
 from optisize.stage.linear import Pattern
-from optisize.stage.topology import DRIVEN, Topology
 
 Indices = NDArray[np.intp]
 
@@ -35,12 +35,13 @@ class Wiring:
         """
         self.topology = topology
         solved = tuple(node for node in topology.unknown if node not in frozen)
-        self.nodes = (*solved, *DRIVEN, *(node for node in topology.unknown if node in frozen))
+        self.nodes = (*solved, *topology.driven, *(node for node in topology.unknown if node in frozen))
         self.index = {name: i for i, name in enumerate(self.nodes)}
         self.unknowns = len(solved)
         self.transistors = tuple(x for x in topology.transistors if {x.drain, x.source} & set(solved))
         self.resistors = tuple(x for x in topology.resistors if {x.a, x.b} & set(solved))
         self.sources = tuple(x for x in topology.sources if {x.a, x.b} & set(solved))
+        self.controls = tuple(x for x in topology.controls if x.node in solved)
         t = self.transistors
         self.gate = self._at([x.gate for x in t])
         self.drain = self._at([x.drain for x in t])
@@ -49,42 +50,62 @@ class Wiring:
         self.polarity = np.array([[1.0 if topology.channel(x) == "n" else -1.0] for x in t])
         self.rows = {x.name: i for i, x in enumerate(t)}
         self.resistor_ends = (self._at([r.a for r in self.resistors]), self._at([r.b for r in self.resistors]))
+        self.sensed, self.fed = self._linear_branches()
         self._equation_stamps: dict[bytes, Array] = {}
         self.current_stamp = self._current_stamp()
         self.conductance_stamp = self._conductance_stamp()
-        self.capacitance_stamp = self._capacitance_stamp()
+        self.all_capacitances = self._all_capacitances()
+        self.capacitance_stamp = self.all_capacitances[: self.unknowns].copy()
+        # What flows into a controlled node is the control's business: its equation is that of the control alone.
+        self.capacitance_stamp[[self.index[c.node] for c in self.controls]] = 0.0
 
     def _at(self, names: Sequence[str]) -> Indices:
         return np.array([self.index[name] for name in names], dtype=np.intp)
 
+    def _linear_branches(self) -> tuple[Array, Array]:
+        """Return the voltage that each linear branch has, and the nodes that its current leaves, each (A, R + C).
+
+        A resistor has the voltage between its ends, and its current leaves one and enters the other. A control has
+        the mean of what it senses less the reference, and a current of one ampere a volt that leaves its own node:
+        with nothing else there, the node goes to where that voltage is zero.
+        """
+        sensed = np.zeros((len(self.nodes), len(self.resistors) + len(self.controls)))
+        fed = np.zeros_like(sensed)
+        for column, r in enumerate(self.resistors):
+            sensed[self.index[r.a], column] += 1.0
+            sensed[self.index[r.b], column] -= 1.0
+            fed[:, column] = sensed[:, column]
+        for column, c in enumerate(self.controls, start=len(self.resistors)):
+            for node in c.senses:
+                sensed[self.index[node], column] += 1.0 / len(c.senses)
+            sensed[self.index[c.reference], column] -= 1.0
+            fed[self.index[c.node], column] = 1.0
+        return sensed, fed
+
     def _current_stamp(self) -> Array:
-        """Return (A, T + R + S): the current that leaves each node, from drain, resistor and source currents."""
-        ends = [(x.drain, x.source) for x in self.transistors]
-        ends += [(r.a, r.b) for r in self.resistors] + [(s.a, s.b) for s in self.sources]
-        stamp = np.zeros((len(self.nodes), len(ends)))
-        for column, (a, b) in enumerate(ends):
-            stamp[self.index[a], column] += 1.0
-            stamp[self.index[b], column] -= 1.0
-        return stamp
+        """Return (A, T + L + S): the current that leaves each node, from drain, linear and source currents."""
+        unit = np.eye(len(self.nodes))
+        channels = [unit[self.index[x.drain]] - unit[self.index[x.source]] for x in self.transistors]
+        sources = [unit[self.index[x.a]] - unit[self.index[x.b]] for x in self.sources]
+        return np.array([*channels, *self.fed.T, *sources]).T
 
     def _conductance_stamp(self) -> Array:
-        """Return (U, A, 3T + R): how gm, gds, gms of the transistors and the conductances enter the matrix.
+        """Return (U, A, 3T + L): how gm, gds, gms of the transistors and the linear branches enter the matrix.
 
         The bulk takes what the other terminals leave: moving all four together changes nothing.
         """
-        t, r = len(self.transistors), len(self.resistors)
-        full = np.zeros((len(self.nodes), len(self.nodes), 3 * t + r))
+        t, linear = len(self.transistors), self.sensed.shape[1]
+        full = np.zeros((len(self.nodes), len(self.nodes), 3 * t + linear))
         for k in range(t):
             for node, sign in ((self.drain[k], 1.0), (self.source[k], -1.0)):
                 for kind, terminal, value in ((0, self.gate, 1.0), (1, self.drain, 1.0), (2, self.source, -1.0)):
                     full[node, terminal[k], kind * t + k] += sign * value
                     full[node, self.bulk[k], kind * t + k] -= sign * value
-        for k in range(r):
-            _stamp_two_terminal(full[:, :, 3 * t + k], self.resistor_ends[0][k], self.resistor_ends[1][k])
+        full[:, :, 3 * t :] = self.fed[:, None] * self.sensed[None]
         return full[: self.unknowns]
 
-    def _capacitance_stamp(self) -> Array:
-        """Return (U, A, 5T + R + 1): gate to source, drain, bulk; drain and source junctions; resistors; load.
+    def _all_capacitances(self) -> Array:
+        """Return (A, A, 5T + R + 1): gate to source, drain, bulk; drain and source junctions; resistors; load.
 
         Half of a resistor's capacitance stands at each end; a rail's end carries nothing.
         """
@@ -101,7 +122,7 @@ class Wiring:
                 _stamp_two_terminal(full[:, :, 5 * t + k], int(end[k]), ground, 0.5)
         for node, _ in self.topology.output:
             _stamp_two_terminal(full[:, :, -1], self.index[node], ground)
-        return full[: self.unknowns]
+        return full
 
     def equation_stamp(self, drives: Array | None) -> Array:
         """Return the constant array that turns the branches of `Network.equations` into residual, matrix and pulls.
@@ -110,7 +131,7 @@ class Wiring:
             drives: K patterns over all nodes, (A, K).
 
         Returns:
-            (U + U U + U K, 4T + 2R + S): the rows of the residual, of the matrix and of the pulls.
+            (U + U U + U K, 4T + 2L + S): the rows of the residual, of the matrix and of the pulls.
         """
         key = b"" if drives is None else drives.tobytes()
         if key not in self._equation_stamps:
@@ -118,7 +139,7 @@ class Wiring:
         return self._equation_stamps[key]
 
     def _equations(self, drives: Array | None) -> Array:
-        u, t, r, s = self.unknowns, len(self.transistors), len(self.resistors), len(self.sources)
+        u, t, r, s = self.unknowns, len(self.transistors), self.sensed.shape[1], len(self.sources)
         slopes = [self.conductance_stamp[:, :u].reshape(u * u, -1)]
         if drives is not None:
             slopes.append(np.einsum("uae,ak->uke", self.conductance_stamp, drives).reshape(u * drives.shape[1], -1))
@@ -146,11 +167,10 @@ class Wiring:
 
     @cached_property
     def terminal_stamp(self) -> Array:
-        """(3T + R, A): gate, drain and source voltages relative to the bulk in n-channel sense; resistor voltages."""
+        """(3T + L, A): gate, drain, source voltages against the bulk in n-channel sense; those of linear branches."""
         unit = np.eye(len(self.nodes))
         ends = [(unit[x] - unit[self.bulk]) * self.polarity for x in (self.gate, self.drain, self.source)]
-        a, b = self.resistor_ends
-        return np.concatenate([*ends, unit[a] - unit[b]])
+        return np.concatenate([*ends, self.sensed.T])
 
     @cached_property
     def saturating(self) -> Indices:
@@ -211,13 +231,13 @@ class Moving:
 
     Attributes:
         wiring: of the part; the nodes that the inputs cannot move are driven ones.
-        nodes, transistors, resistors, sources: positions in the whole wiring.
+        nodes, transistors, linear, sources: positions in the whole wiring.
     """
 
     wiring: Wiring
     nodes: Indices
     transistors: Indices
-    resistors: Indices
+    linear: Indices
     sources: Indices
 
 
@@ -238,6 +258,6 @@ def moving(topology: Topology) -> Moving:
         part,
         positions(whole.nodes, part.nodes),
         positions(whole.transistors, part.transistors),
-        positions(whole.resistors, part.resistors),
+        positions((*whole.resistors, *whole.controls), (*part.resistors, *part.controls)),
         positions(whole.sources, part.sources),
     )

@@ -152,3 +152,68 @@ def test_capacitances(case: Case) -> None:
     n = pinch_off(case, vg)[1][0, 2]
     np.testing.assert_allclose([found.cgs[0, 2] - overlap, found.cgd[0, 2] - overlap], 0.0, atol=0.01 * oxide)
     assert found.cgb[0, 2] / oxide == pytest.approx((n - 1.0) / n, rel=0.01)
+
+
+def mean_charge(qs: np.ndarray, qd: np.ndarray) -> np.ndarray:
+    """Return the charge of the channel, its mean over the position, by quadrature over the charge.
+
+    The current is q^2 + q between the ends, and where along the channel a charge is follows from its part of it.
+    """
+    points, weights = np.polynomial.legendre.leggauss(16)
+    middle, half = 0.5 * (qs + qd), 0.5 * (qs - qd)
+    q = middle + half * points[:, None, None]
+    return (weights[:, None, None] * q * (2.0 * q + 1.0)).sum(axis=0) * half / (qs * qs + qs - qd * qd - qd)
+
+
+@pytest.mark.parametrize("case", CHARGE_CASES, ids=str)
+def test_noise_is_that_of_the_charge_in_the_channel(case: Case) -> None:
+    """Over gms: the charge in the channel, its mean over the position, over the charge at the source.
+
+    Enz and Vittoz, Charge-Based MOS Transistor Modeling, Wiley, 2006 (value from memory): each part of the channel has
+    the noise of its charge, that of a current q^2 + q.
+    """
+    law = ideal(case, (1, 300))
+    rng = np.random.default_rng(4)
+    vg, vs, vds = rng.uniform(0.2, 2.0, (1, 300)), rng.uniform(0.0, 0.5, (1, 300)), rng.uniform(0.01, 1.2, (1, 300))
+    forward, reverse = (law.saturation(vg, vg, v).inversion for v in (vs, vs + vds))
+    qs, qd = (np.sqrt(0.25 + i) - 0.5 for i in (forward, reverse))
+    clear = (qs > 1e-6) & (qs - qd > 1e-6)  # or the quadrature is rounding
+    gamma = law.noise_conductance(vg, vs + vds, vs) / law.drain(vg, vs + vds, vs).gms
+    assert clear.mean() > 0.7
+    np.testing.assert_allclose(gamma[clear], (mean_charge(qs, qd) / qs)[clear], rtol=1e-6)
+    assert gamma.min() > 0.5 - 1e-12
+    assert gamma.max() < 1.0
+
+
+@pytest.mark.parametrize("case", CHARGE_CASES, ids=str)
+def test_noise_in_saturation(case: Case) -> None:
+    """Half of gms in weak inversion and two thirds in strong: the limits of the same authors."""
+    levels = np.array([[1e-8, 1e-4, 1.0, 4e4]])
+    law = ideal(case, levels.shape)
+    vg, _, vs = saturated_at(case, law, levels)
+    vd = vg + 3.0  # far beyond the gate, and so the far end of the channel empty
+    gamma = law.noise_conductance(vg, vd, vs) / law.drain(vg, vd, vs).gms
+    np.testing.assert_allclose(gamma[0, [0, 1, 3]], [0.5, 0.5, 2.0 / 3.0], atol=1e-3)
+    assert 0.5 < gamma[0, 2] < 2.0 / 3.0
+
+
+@pytest.mark.parametrize("case", CHARGE_CASES, ids=str)
+def test_noise_without_drain_voltage_is_that_of_a_resistor(case: Case) -> None:
+    """In equilibrium the noise is 4 k T times the conductance: Nyquist, "Thermal agitation of electric charge in
+    conductors", Physical Review 32, 1928. Second-order effects and all."""
+    law, (vg, vd, _) = case.random(), voltages()
+    np.testing.assert_allclose(law.noise_conductance(vg, vd, vd), law.drain(vg, vd, vd).gds, rtol=1e-12)
+    near = law.noise_conductance(vg, vd + 1e-9, vd)
+    np.testing.assert_allclose(near, law.drain(vg, vd, vd).gds, rtol=1e-6)
+
+
+@pytest.mark.parametrize("case", CHARGE_CASES, ids=str)
+def test_noise_in_weak_inversion_is_shot_noise(case: Case) -> None:
+    """2 q (forward + reverse current), that is 4 k T times both over 2 ut: common practice, no source."""
+    law = ideal(case, (1, 40))
+    rng = np.random.default_rng(2)
+    vs, vds = rng.uniform(0.0, 0.4, (1, 40)), rng.uniform(0.005, 0.5, (1, 40))
+    vg = case.parameters["threshold"] - 0.35 + vs
+    drain = law.drain(vg, vs + vds, vs)
+    shot = drain.id / np.tanh(vds / (2.0 * UT)) / (2.0 * UT)
+    np.testing.assert_allclose(law.noise_conductance(vg, vs + vds, vs), shot, rtol=0.01)

@@ -105,9 +105,31 @@ def test_current_rises_with_gate_and_drain(case: Case) -> None:
 
 
 @pytest.mark.parametrize("case", CASES, ids=str)
+def test_noise_is_the_same_whichever_end_is_the_source(case: Case) -> None:
+    law, (vg, vd, vs) = case.random(), voltages()
+    noise = law.noise_conductance(vg, vd, vs)
+    np.testing.assert_allclose(law.noise_conductance(vg, vs, vd), noise, rtol=1e-9)
+    conducting = law.drain(vg, vd, vs).id != 0.0
+    assert (noise[conducting] > 0.0).all()
+    assert conducting.mean() > 0.3
+
+
+@pytest.mark.parametrize("case", CASES, ids=str)
+def test_wider_is_noisier(case: Case) -> None:
+    """Devices in parallel: their noise currents add as powers."""
+    width, length = np.array([[10e-6]]), np.array([[2e-6]])
+    v = (np.array([[0.7, 1.0]]), np.array([[0.2, 1.2]]), np.array([[0.1, 0.1]]))
+    one = case.bind(width, length).noise_conductance(*v)
+    assert one.shape == (1, 2)
+    np.testing.assert_allclose(case.bind(3.0 * width, length).noise_conductance(*v), 3.0 * one, rtol=1e-12)
+
+
+@pytest.mark.parametrize("case", CASES, ids=str)
 def test_arrays_and_single_transistors_agree(case: Case) -> None:
     law, (vg, vd, vs) = case.random(), voltages()
     whole = law.drain(vg, vd, vs), law.saturation(vg, vd, vs), law.capacitances(vg, vd, vs)
+    noise = law.noise_conductance(vg, vd, vs)
+    assert noise.shape == vg.shape
     for row, column in ((0, 0), (1, 17), (2, 399)):
         one = law.take(slice(row, row + 1), np.array([column]))
         at = [x[row : row + 1, column : column + 1] for x in (vg, vd, vs)]
@@ -116,6 +138,7 @@ def test_arrays_and_single_transistors_agree(case: Case) -> None:
             for field, value in arrays(single).items():
                 wanted = np.broadcast_to(getattr(record, field), vg.shape)[row, column]
                 np.testing.assert_allclose(np.broadcast_to(value, (1, 1))[0, 0], wanted, rtol=1e-12)
+        np.testing.assert_allclose(one.noise_conductance(*at), noise[row, column], rtol=1e-12)
 
 
 @pytest.mark.parametrize("case", CASES, ids=str)
@@ -126,6 +149,7 @@ def test_inputs_are_left_alone(case: Case) -> None:
     law.drain(*v)
     law.saturation(*v)
     law.capacitances(*v)
+    law.noise_conductance(*v)
     law.gate_voltage(np.full(v[0].shape, 1e-6), v[2])
     law.source_voltage(np.full(v[0].shape, 1e-6), v[0])
 
@@ -139,6 +163,9 @@ def test_far_voltages_stay_finite(case: Case) -> None:
     for record in (law.drain(vg, vd, vs), law.saturation(vg, vd, vs), law.capacitances(vg, vd, vs)):
         for field, value in arrays(record).items():
             assert np.isfinite(value).all(), field
+    noise = law.noise_conductance(vg, vd, vs)
+    assert np.isfinite(noise).all()
+    assert (noise >= 0.0).all()
 
 
 @pytest.mark.parametrize("case", CASES, ids=str)

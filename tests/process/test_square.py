@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from tests.process.law_cases import SQUARE_CASES, Case
+from tests.process.law_cases import SQUARE_CASES, Case, voltages
 
 
 @pytest.mark.parametrize("case", SQUARE_CASES, ids=str)
@@ -46,3 +46,12 @@ def test_capacitances(case: Case) -> None:
     found = law.capacitances(np.full((1, 2), 1.5), np.array([[2.0, 0.0]]), np.zeros((1, 2)))
     np.testing.assert_allclose(found.cgs[0] - overlap, [oxide * 2.0 / 3.0, oxide / 2.0])
     np.testing.assert_allclose(found.cgd[0] - overlap, [0.0, oxide / 2.0], atol=1e-22)
+
+
+@pytest.mark.parametrize("case", SQUARE_CASES, ids=str)
+def test_noise(case: Case) -> None:
+    """Two thirds of gm in every region and direction, as SPICE has it; in saturation that is van der Ziel, "Thermal
+    noise in field-effect transistors", Proc. IRE 50, 1962 (value from memory)."""
+    law, v = case.random(), voltages()
+    np.testing.assert_allclose(law.noise_conductance(*v), np.abs(law.drain(*v).gm) * 2.0 / 3.0, rtol=1e-12)
+    assert (law.drain(*v).gm < 0.0).any()

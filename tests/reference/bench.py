@@ -10,7 +10,8 @@ import numpy as np
 
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
-from optisize.stage.topology import Topology, Transistor
+from optisize.stage.assembly import Topology
+from optisize.stage.elements import Transistor
 from tests.reference import spice
 
 Sources = Callable[[int], list[str]]

@@ -9,7 +9,7 @@ import numpy as np
 from optisize.process.card import Process, load_process
 from optisize.stage.analysis import Analysis
 from optisize.stage.circuit import Conditions, size_circuit
-from optisize.stage.topology import Topology, build
+from optisize.stage.assembly import Topology, build
 
 DRAWS = {True: 2000, False: 12_000}  # sizings that are drawn in search of saturated ones, and of others
 

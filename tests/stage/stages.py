@@ -11,7 +11,7 @@ from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from optisize.stage.bias import OperatingPoint, operating_point
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
-from optisize.stage.topology import Topology, build
+from optisize.stage.assembly import Topology, build
 
 KINDS = [
     (input, load, tail, output)

@@ -13,7 +13,7 @@ from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.topology import build
+from optisize.stage.assembly import build
 from tests.stage.stages import KINDS, driven_point, middle, random_sizes
 
 DESIGNS, POINTS, RATIO = 12, 160, 3000.0

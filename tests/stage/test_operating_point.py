@@ -11,7 +11,7 @@ from optisize.stage.analysis import Analysis
 from optisize.stage.bias import settle
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.topology import build
+from optisize.stage.assembly import build
 from tests.stage.stages import KINDS, analysed, by_hand, driven_point, middle, pair_currents, random_sizes, without
 
 PROCESSES = ("handbook", "generic-180", "generic-65")

@@ -10,7 +10,7 @@ from optisize.process.card import load_process, thermal_voltage
 from optisize.stage.analysis import Analysis
 from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.topology import build
+from optisize.stage.assembly import build
 from tests.stage.stages import KINDS, analysed, driven_point, middle, random_sizes, without
 
 INPUTS = ("nmos", "pmos")

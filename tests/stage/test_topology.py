@@ -6,7 +6,8 @@ from __future__ import annotations
 import pytest
 
 from optisize.errors import InputError
-from optisize.stage.topology import LOADS, TAILS, Topology, build
+from optisize.stage.assembly import Topology, build
+from optisize.stage.topology import LOADS, TAILS
 
 
 def drawn(topology: Topology) -> set[tuple[str, ...]]:
