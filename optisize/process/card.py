@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from functools import cached_property
 from importlib import resources
 from pathlib import Path
@@ -53,7 +53,9 @@ class ResistorParameters(Parameters):
         0.0
     )
     matching: Annotated[
-        float, In("m", "%*um"), Field(ge=0, description="relative sigma of a resistance times sqrt(W L)")
+        float,
+        In("m", "%*um"),
+        Field(ge=0, description="relative sigma of the difference of two resistances times sqrt(W L)"),
     ]
 
 
@@ -139,8 +141,12 @@ class Process(Parameters):
     ) -> tuple[Law, dict[str, Array]]:
         """Return the law of T transistors with widths and lengths [m] of shape (T, N), and its parameters."""
         parameters = self.transistor_arrays(channels, temperature, corner)
+        return self.law_of(parameters, width, length, temperature), parameters
+
+    def law_of(self, parameters: Mapping[str, Array], width: Array, length: Array, temperature: float) -> Law:
+        """Return the law of transistors with parameters of shape (T, 1) or (T, N)."""
         ut = np.array([[float(thermal_voltage(temperature))]])
-        return LAWS[self.law].law.bind(parameters, width, length, ut), parameters
+        return LAWS[self.law].law.bind(parameters, width, length, ut)
 
     def resistance_ratio(self, temperature: float, corner: str) -> float:
         """Return resistance at a temperature [K] and corner over its drawn value."""

@@ -69,5 +69,5 @@ class TransistorParameters(Parameters):
     factor_matching: Annotated[
         float,
         In("m", "%*um"),
-        Field(ge=0, description="matching A_beta: relative sigma of the current factor times sqrt(W L)"),
+        Field(ge=0, description="matching A_beta: relative sigma of the current factors' difference times sqrt(W L)"),
     ]

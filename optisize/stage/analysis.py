@@ -5,8 +5,9 @@ Each quantity is computed when it is first asked for and kept, so a measure that
 
 from __future__ import annotations
 
+from collections.abc import Callable, Hashable
 from functools import cached_property
-from typing import Any
+from typing import Any, TypeVar, cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,20 +19,35 @@ from optisize.stage.circuit import Circuit
 from optisize.stage.excursion import Linearised, follow
 from optisize.stage.linear import Transfer, crossing, solve
 from optisize.stage.network import Equations, Network, Terminals
+from optisize.stage.nulling import null
 from optisize.stage.wiring import Moving, moving
 
 RANGE_SETTLED = 2e-3  # V; leaves less than 0.1 mV at the ends of the range, where only the headroom is read
+Kept = TypeVar("Kept")
 UNLIMITED = 1e-11  # a common-mode gain below this part of the terms it is summed from is rounding, hence zero
 
 
 class Analysis:
-    """The solved and linearised stages of N designs; arrays end in the designs' axis."""
+    """The solved and linearised stages of N designs; arrays end in the designs' axis.
+
+    Attributes:
+        matched: whether devices that are drawn alike are alike.
+    """
+
+    matched = True
 
     def __init__(self, circuit: Circuit) -> None:
         """Take the sized designs; nothing is solved yet."""
         self.circuit = circuit
         self.wiring = circuit.wiring
         self.topology = circuit.topology
+        self._kept: dict[Hashable, object] = {}
+
+    def once(self, key: Hashable, make: Callable[[], Kept]) -> Kept:
+        """Return what `make` makes, made once under a key."""
+        if key not in self._kept:
+            self._kept[key] = make()
+        return cast(Kept, self._kept[key])
 
     @cached_property
     def point(self) -> OperatingPoint:
@@ -44,17 +60,22 @@ class Analysis:
         """The part of the stages that the inputs can move; the rest stays as it is at the operating point."""
         part = moving(self.topology)
         network = self.circuit.network.part(part)
-        return part, (network.single if self._coarse is np.float32 else network)
+        return part, (network.single if self.coarse is np.float32 else network)
+
+    @property
+    def alike(self) -> bool:
+        """Whether both sides of each design are alike, so that one tells what the other does."""
+        return self.topology.symmetric
 
     @cached_property
-    def _coarse(self) -> Any:
-        """The precision of what is known to a part in ten thousand only: single, unless the supply is high.
+    def coarse(self) -> Any:
+        """The precision of what is known to a part in ten thousand only: single, unless supply or gain are high.
 
         Single precision holds exp(v / 2 ut) up to 88; a node may go half a volt beyond the rails.
         """
         conditions = self.circuit.conditions
         highest = (conditions.supply + 1.0) / (2.0 * float(thermal_voltage(conditions.temperature)))
-        return np.float32 if highest < 85.0 else np.float64
+        return np.float32 if highest < 85.0 and not self.topology.delicate else np.float64
 
     def take(self, columns: NDArray[np.intp]) -> Analysis:
         """Return the analysis of some of the designs, with their operating points."""
@@ -97,6 +118,11 @@ class Analysis:
         """The linearised equations with both drives."""
         return self.circuit.network.equations(self.terminals, self.drain, self.drives)
 
+    @cached_property
+    def slopes(self) -> Array:
+        """The derivatives of all branches in the order of the wiring's conductance stamp, (3T + L, N)."""
+        return np.concatenate([self.drain.gm, self.drain.gds, self.drain.gms, self.circuit.network.conductances])
+
     @property
     def matrix(self) -> Array:
         """The conductance matrix between the unknown nodes, (U, U, N)."""
@@ -124,8 +150,15 @@ class Analysis:
         Of a single-ended output: its own change. Of a differential output: that of its common mode, the mean of the
         two sides. Exactly zero where the figure is no more than the rounding of the terms that it is summed from.
         """
-        nodes = [self.wiring.index[node] for node, _ in self.topology.output]
-        gain = self.responses[nodes, 1].mean(axis=0)
+        return self.beyond_rounding(self.wiring.mean_weights @ self.responses[:, 1])
+
+    @cached_property
+    def common_to_difference(self) -> Array:
+        """Gain from the common mode to the difference of the two sides of a differential output, (N,)."""
+        return self.beyond_rounding(self.wiring.output(self.responses[:, 1]))
+
+    def beyond_rounding(self, gain: Array) -> Array:
+        """Return a gain to the output, exactly zero where it is no more than the rounding of its terms, (N,)."""
         return np.where(np.abs(gain) < UNLIMITED * self._rounding_scale, 0.0, gain)
 
     @cached_property
@@ -181,11 +214,8 @@ class Analysis:
     def differential_transfer(self) -> Transfer:
         """The output over the differential input as a function of frequency."""
         w = self.wiring
-        output = np.zeros(w.unknowns)
-        for node, sign in self.topology.output:
-            output[w.index[node]] = sign
         pull_c = np.tensordot(w.capacitance_stamp, self.drives[:, 0], (1, 0)) @ self.capacitance_branches
-        return Transfer(self.matrix, self.capacitance_matrix, self.pulls[:, 0], pull_c, output, w.pattern)
+        return Transfer(self.matrix, self.capacitance_matrix, self.pulls[:, 0], pull_c, w.output_weights, w.pattern)
 
     def gain_crossing(self, level: Array) -> Array:
         """Return the frequency [Hz] at which |Adm(0)/Adm(f)|^2 - 1 has risen to `level`, (N,).
@@ -199,6 +229,34 @@ class Analysis:
             start = self._first_pole[columns] * np.sqrt(part)
             result[columns] = crossing(self.differential_transfer.take(columns), part, start) / (2.0 * np.pi)
         return result
+
+    @cached_property
+    def unity_crossing(self) -> Array:
+        """Frequency [Hz] at which the differential gain has fallen to one, (N,); zero where it is no more at DC."""
+        excess = self.adm**2 - 1.0
+        return np.where(excess > 1e-6, self.gain_crossing(excess), 0.0)
+
+    @cached_property
+    def unity_phase(self) -> Array:
+        """Phase of the differential gain there against that at DC [degrees], (N,); not a number where there is none."""
+        result = np.full(self.circuit.designs, np.nan)
+        columns = np.flatnonzero(self.unity_crossing > 0.0)
+        if len(columns):
+            transfer = self.differential_transfer.take(columns)
+            turned = transfer.at(2.0 * np.pi * self.unity_crossing[columns]) / self.adm[columns]
+            degrees = np.angle(turned, deg=True)
+            result[columns] = np.where(degrees > 90.0, degrees - 360.0, degrees)
+        return result
+
+    @cached_property
+    def offset(self) -> Array:
+        """Differential input [V] that brings one output to where the next stage wants it, (N,); zero without a wish."""
+        wanted = self.circuit.conditions.output_common_mode
+        if wanted is None or len(self.topology.output) > 1:
+            return np.zeros(self.circuit.designs)
+        goal = np.full(self.circuit.designs, wanted)
+        found = null(self.circuit.network, self.point.v, self.drives[:, 0], self.wiring.output_weights, goal)
+        return np.where(found.found, found.input, np.nan)
 
     @cached_property
     def _first_pole(self) -> Array:
@@ -225,8 +283,8 @@ class Analysis:
         start[: self.wiring.unknowns] += change * (common - self.circuit.conditions.middle)
         start = np.minimum(np.maximum(start, 0.0), self.circuit.conditions.supply)[part.nodes]
         for node in ("in+", "in-"):
-            start[part.wiring.index[node]] = common
-        ends = settle(twice, start.astype(self._coarse), RANGE_SETTLED)
+            start[part.wiring.index[node]] += common - self.circuit.conditions.middle
+        ends = settle(twice, start.astype(self.coarse), RANGE_SETTLED)
         terminals = twice.terminals(ends.v)
         room = _room(twice, terminals, twice.law.saturation(*terminals.of_law))
         room = np.where(ends.converged, room, np.nan).reshape(2, -1)
@@ -237,9 +295,8 @@ class Analysis:
         """Smallest vds - vdsat in the middle of the common-mode range [V], (N,)."""
         return _room(self.circuit.network, self.terminals, self.saturation)
 
-    @cached_property
-    def _moving_at_rest(self) -> Linearised:
-        """The linearised moving part with the differential drive."""
+    def moving_at_rest(self, drive: int) -> Linearised:
+        """Return the linearised moving part with the differential drive (0) or the common one (1)."""
         part, _ = self.moving
         rows, solved = part.transistors, part.nodes[: part.wiring.unknowns]
         gate, drain, source = (x[rows] for x in self.terminals.of_law)
@@ -248,7 +305,7 @@ class Analysis:
             Terminals(gate, drain, source, self.terminals.linear[part.linear]),
             Drain(*(x[rows] for x in self.drain)),
             Saturation(*(x[rows] for x in self.saturation)),
-            Equations(residual[solved], matrix[np.ix_(solved, solved)], pulls[solved, :1]),
+            Equations(residual[solved], matrix[np.ix_(solved, solved)], pulls[solved, drive : drive + 1]),
         )
 
     @cached_property
@@ -263,12 +320,12 @@ class Analysis:
         if not len(columns):
             return reach[0], reach[1]
         part, network = self.moving
-        alike = self.topology.symmetric
+        alike = self.alike
         chosen = columns if alike else np.concatenate([columns, columns])
         sign = np.ones(len(columns)) if alike else np.repeat([-1.0, 1.0], len(columns))
-        start: Any = self.point.v[part.nodes].take(chosen, axis=1).astype(self._coarse)
-        rest = self._moving_at_rest.take(chosen, self._coarse)
-        drive, sign = self.drives[part.nodes, 0].astype(self._coarse), sign.astype(self._coarse)
+        start: Any = self.point.v[part.nodes].take(chosen, axis=1).astype(self.coarse)
+        rest = self.moving_at_rest(0).take(chosen, self.coarse)
+        drive, sign = self.drives[part.nodes, 0].astype(self.coarse), sign.astype(self.coarse)
         end = follow(network.take(chosen), start, rest, drive, sign)
         moved = np.where(end.found, end.v - start, np.nan)
         up = np.abs(part.wiring.output(moved))

@@ -40,6 +40,7 @@ class Topology:
         leg: the size whose current flows through the tail beside that of the pair, if any.
         steered: the part of the tail current that full steering leaves to charge the output.
         symmetric: whether both sides are alike.
+        delicate: whether single precision does not do for it.
     """
 
     input: str
@@ -59,6 +60,7 @@ class Topology:
     leg: str
     steered: float
     symmetric: bool
+    delicate: bool
     rails: tuple[tuple[str, str], ...]
 
     @property
@@ -147,6 +149,7 @@ def build(
         leg=pair.leg,
         steered=load_kind.steered,
         symmetric=load_kind.symmetric,
+        delicate=FORMS[form].delicate,
         rails=tuple(rails.items()),
     )
 

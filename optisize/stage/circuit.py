@@ -116,6 +116,11 @@ class Circuit:
         return np.array(rows).reshape(len(rows), self.designs)
 
     @cached_property
+    def resistor_lengths(self) -> Array:
+        """The drawn lengths of the resistors (R, N) [m]."""
+        return resistor_length(self.resistances, self.process.resistor)
+
+    @cached_property
     def resistor_areas(self) -> Array:
         """The drawn areas of the resistors (R, N) [m^2]."""
         return resistor_area(self.resistances, self.process.resistor)
@@ -124,7 +129,7 @@ class Circuit:
     def resistor_capacitances(self) -> Array:
         """The capacitance of each resistor to the substrate (R, N) [F]."""
         r = self.process.resistor
-        return r.capacitance * resistor_length(self.resistances, r) * r.width
+        return r.capacitance * self.resistor_lengths * r.width
 
 
 def size_circuit(topology: Topology, process: Process, conditions: Conditions, sizes: Mapping[str, Array]) -> Circuit:

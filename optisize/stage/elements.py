@@ -174,8 +174,14 @@ class TailKind(Piece):
 
 @dataclass(frozen=True)
 class Form:
-    """How a pair stands under its load: the pair itself, and the loads that go with it."""
+    """How a pair stands under its load.
+
+    Attributes:
+        pair, loads: the pair itself, and the loads that go with it.
+        delicate: whether its outputs stand on such high resistances that single precision does not do for them.
+    """
 
     summary: str
     pair: PairKind
     loads: Mapping[str, LoadKind]
+    delicate: bool = False

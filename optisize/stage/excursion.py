@@ -7,12 +7,12 @@ hand sides, the residual and the drive, and moves the amplitude to where the nea
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any, NamedTuple
+from typing import Any, NamedTuple, Self
 
 import numpy as np
 from numpy.typing import NDArray
 
-from optisize.process.law import Array, Drain, Saturation
+from optisize.process.law import Array, Drain, Pick, Saturation
 from optisize.stage.bias import regular_solve
 from optisize.stage.network import Equations, Network, Terminals
 
@@ -54,12 +54,39 @@ class Linearised(NamedTuple):
         return Linearised(*(chosen(record) for record in self))
 
 
+@dataclass(frozen=True)
+class Ending:
+    """Which margins end a drive.
+
+    Attributes:
+        saturated: whether the transistors that have to be saturated must stay so.
+        steered: whether each input transistor must carry its least share of the pair's current.
+        current: the least current of the pair [A], (N,), if any.
+    """
+
+    saturated: bool = True
+    steered: bool = True
+    current: Array | None = None
+
+    def take(self, columns: Pick) -> Self:
+        """Return the same for some of the designs."""
+        return self if self.current is None else type(self)(self.saturated, self.steered, self.current[columns])
+
+
 @np.errstate(all="ignore")
-def follow(network: Network, start: Array, rest: Linearised, drive: Array, sign: Array) -> Excursion:
+def follow(
+    network: Network,
+    start: Array,
+    rest: Linearised | None,
+    drive: Array,
+    sign: Array,
+    ending: Ending | None = None,
+) -> Excursion:
     """Raise a drive from the operating point until the first margin vanishes.
 
-    Margins are vds - vdsat of every transistor that has to be saturated, and the current of each input transistor
-    above 1 % of the pair's: beyond it the pair is steered and the output no longer moves.
+    Margins are, unless `ending` says otherwise, vds - vdsat of every transistor that has to be saturated, and the
+    current of each input transistor above 1 % of the pair's: beyond it the pair is steered and the output no longer
+    moves.
 
     Args:
         network: N designs.
@@ -67,16 +94,17 @@ def follow(network: Network, start: Array, rest: Linearised, drive: Array, sign:
         rest: the stage there, which saves the first step its linearisation.
         drive: pattern over all nodes, (A,), zero on the unknown ones.
         sign: direction of the drive for each design, (N,).
+        ending: which margins count.
     """
     v, amplitude = start.copy(), np.zeros(network.designs, dtype=start.dtype)
     found = np.zeros(network.designs, dtype=bool)
     active: NDArray[np.intp] = np.arange(network.designs)
-    part, pv, pa, ps = network, v.copy(), amplitude.copy(), sign
+    part, pv, pa, ps, ends = network, v.copy(), amplitude.copy(), sign, ending or Ending()
     over = found.copy()
     for iteration in range(ITERATIONS):
-        here = rest if iteration == 0 else _linearised(part, pv, drive)
+        here = rest if iteration == 0 and rest is not None else linearised(part, pv, drive)
         # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = np.flatnonzero(_step(part, here, pv, pa, drive, ps) & ~over)
+        fresh = np.flatnonzero(_step(part, here, pv, pa, drive, ps, ends) & ~over)
         done = active[fresh]
         v[:, done], amplitude[done] = pv.take(fresh, axis=1), pa[fresh]
         found[done] = over[fresh] = True
@@ -86,17 +114,19 @@ def follow(network: Network, start: Array, rest: Linearised, drive: Array, sign:
             if not len(active):
                 break
             part, pv, pa, ps, over = part.take(left), pv.take(left, axis=1), pa[left], ps[left], over[left]
+            ends = ends.take(left)
     return Excursion(v=v, amplitude=amplitude, found=found)
 
 
-def _linearised(network: Network, v: Array, drive: Array) -> Linearised:
+def linearised(network: Network, v: Array, drive: Array) -> Linearised:
+    """Return a stage linearised at node voltages (A, N), with one drive (A,)."""
     terminals = network.terminals(v)
     drain, saturation = network.law.drain_and_saturation(*terminals.of_law)
     return Linearised(terminals, drain, saturation, network.equations(terminals, drain, drive[:, None]))
 
 
 def _step(
-    network: Network, here: Linearised, v: Array, amplitude: Array, drive: Array, sign: Array
+    network: Network, here: Linearised, v: Array, amplitude: Array, drive: Array, sign: Array, ending: Ending
 ) -> NDArray[np.bool_]:
     """Move node voltages and amplitude in place by one damped step; return which designs have settled, (N,)."""
     unknowns = network.wiring.unknowns
@@ -104,7 +134,7 @@ def _step(
     toward = np.zeros((v.shape[0], 2, v.shape[1]), dtype=v.dtype)
     toward[:unknowns] = regular_solve(network, here.equations.matrix, -right)
     toward[unknowns:, 1] = drive[unknowns:, None] * sign
-    margin, settle, rise = _margins(network, here, toward)
+    margin, settle, rise = _margins(network, here, toward, ending)
     step = np.maximum(_amplitude_step(margin + settle, rise), -amplitude)
     change = toward[:, 0] + step * toward[:, 1]
     moved = np.abs(change[:unknowns]).max(axis=0)
@@ -117,25 +147,40 @@ def _step(
     return np.maximum(moved, np.abs(toward[:unknowns, 0]).max(axis=0)) < SETTLED
 
 
-def _margins(network: Network, here: Linearised, toward: Array) -> tuple[Array, Array, Array]:
+def _margins(network: Network, here: Linearised, toward: Array, ending: Ending) -> tuple[Array, Array, Array]:
     """Return the margins (K, N), how they settle with the residual, and how they rise with the amplitude."""
-    terminals, drain, saturation, _ = here
-    rows, pair = network.wiring.saturating, network.wiring.pair
     change = network.terminals(toward)
-    room = (terminals.vds - saturation.vdsat).take(rows, axis=0)
+    parts = [_saturation_margins(network, here, change)] if ending.saturated else []
+    parts += _pair_margins(network, here, change, ending)
+    margin, both = (np.concatenate(rows) for rows in zip(*parts, strict=True))
+    return margin, both[:, 0], both[:, 1]
+
+
+def _saturation_margins(network: Network, here: Linearised, change: Terminals) -> tuple[Array, Array]:
+    """Return vds - vdsat (K, N), and how it changes along both directions (K, 2, N)."""
+    rows, saturation = network.wiring.saturating, here.saturation
+    room = (here.terminals.vds - saturation.vdsat).take(rows, axis=0)
     moved = change.vds - saturation.by_gate[:, None] * change.gate - saturation.by_source[:, None] * change.source
+    return room, moved.take(rows, axis=0)
+
+
+def _pair_margins(network: Network, here: Linearised, change: Terminals, ending: Ending) -> list[tuple[Array, Array]]:
+    """Return what the pair's currents have left, as roots since these are straighter, and how that changes."""
+    pair, drain = network.wiring.pair, here.drain
     current = drain.id[pair]
     flow = drain.gm[pair, None] * change.gate[pair]
     flow += drain.gds[pair, None] * change.drain[pair]
     flow -= drain.gms[pair, None] * change.source[pair]
-    total = current[0] + current[1]
-    share = np.maximum(current / total, 1e-9)
-    root = np.sqrt(share)
-    flow -= share[:, None] * (flow[0] + flow[1])
-    flow /= (2.0 * total * root)[:, None]
-    margin = np.concatenate([room, root - np.sqrt(STEERED)])
-    both = np.concatenate([moved.take(rows, axis=0), flow])
-    return margin, both[:, 0], both[:, 1]
+    total, whole = current[0] + current[1], flow[0] + flow[1]
+    margins = []
+    if ending.steered:
+        share = np.maximum(current / total, 1e-9)
+        root = np.sqrt(share)
+        margins.append((root - np.sqrt(STEERED), (flow - share[:, None] * whole) / (2.0 * total * root)[:, None]))
+    if ending.current is not None:
+        root = np.sqrt(np.maximum(total / ending.current, 1e-9))
+        margins.append(((root - 1.0)[None], (whole / (2.0 * ending.current * root))[None]))
+    return margins
 
 
 def _amplitude_step(margin: Array, rise: Array) -> Array:

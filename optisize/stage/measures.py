@@ -6,119 +6,40 @@ here.
 
 from __future__ import annotations
 
-import inspect
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
-from typing import Literal
 
 import numpy as np
 
 from optisize.errors import InputError, nearest
 from optisize.process.law import Array
+from optisize.stage import mismatch, noise, ranges
 from optisize.stage.analysis import Analysis
 from optisize.stage.assembly import Topology
-
-Sense = Literal["max", "min"]
-Scale = Literal["linear", "log"]
-Setting = float | tuple[float, float]
-
-
-@dataclass(frozen=True)
-class Parameter:
-    """What a measure leaves to the designer, such as the frequency at which it is taken.
-
-    Attributes:
-        name, unit, meaning: as in files and tables; values are SI.
-        default: one value, or two where a band is meant.
-        low, high: the values that are allowed.
-    """
-
-    name: str
-    unit: str
-    meaning: str
-    default: Setting
-    low: float = 0.0
-    high: float = np.inf
-
-
-@dataclass(frozen=True)
-class Measure:
-    """One figure of a design.
-
-    Attributes:
-        name, unit: as in files and tables; values are SI (or dB).
-        better: the direction that is usually wanted.
-        scale: ``log`` where designs differ by factors rather than by differences.
-        step: a difference that matters on a linear scale, in the unit; scales a limit whose bound is zero.
-        signed: whether goals and limits act on the magnitude of a signed figure.
-        source: where the definition or formula comes from.
-        definition: what it is.
-        function: from the analysis and the parameters to an array (N,).
-        parameters: what the designer may set.
-        settings: what has been set, by the name of the parameter; the defaults hold for the rest.
-    """
-
-    name: str
-    unit: str
-    better: Sense
-    scale: Scale
-    step: float
-    signed: bool
-    source: str
-    definition: str
-    function: Callable[..., Array]
-    parameters: tuple[Parameter, ...] = ()
-    settings: tuple[tuple[str, Setting], ...] = ()
-
-    @property
-    def taken_at(self) -> dict[str, Setting]:
-        """The value of every parameter."""
-        return {p.name: p.default for p in self.parameters} | dict(self.settings)
-
-    def of(self, analysis: Analysis) -> Array:
-        """Return the measure of N designs, (N,)."""
-        return self.function(analysis, **self.taken_at)
-
-    def at(self, name: str, settings: Mapping[str, Setting]) -> Measure:
-        """Return the same measure under a name, with parameters set."""
-        return replace(self, name=name, settings=tuple(settings.items()))
-
+from optisize.stage.catalogue import Measure as Measure
+from optisize.stage.catalogue import Parameter as Parameter
+from optisize.stage.catalogue import Sense as Sense
+from optisize.stage.catalogue import Setting as Setting
+from optisize.stage.catalogue import entry
+from optisize.stage.figures import FIGURES as FIGURES
+from optisize.stage.response import response
 
 CATALOGUE: dict[str, Measure] = {}
-FIGURES: dict[str, Measure] = {}
 
-_PRACTICE = "common practice, no source"
 _HANDBOOK = "Gray, Hurst, Lewis and Meyer, Analysis and Design of Analog Integrated Circuits, ch. 3 (from memory)"
 
 
-def _entry(
-    catalogue: dict[str, Measure],
-    unit: str,
-    better: Sense,
-    *,
-    scale: Scale = "log",
-    step: float = 1.0,
-    signed: bool = False,
-    source: str = _PRACTICE,
-    parameters: tuple[Parameter, ...] = (),
-) -> Callable[[Callable[..., Array]], Callable[..., Array]]:
-    """Enter a function into a catalogue under its own name."""
+_MATCHING = "Pelgrom, Duinmaijer and Welbers, IEEE JSSC 24, 1989 (from memory)"
 
-    def enter(function: Callable[..., Array]) -> Callable[..., Array]:
-        text = " ".join((inspect.getdoc(function) or "").split())
-        name = function.__name__
-        catalogue[name] = Measure(name, unit, better, scale, step, signed, source, text, function, parameters)
-        return function
-
-    return enter
+_FROM_DC = Parameter("frequency", "Hz", "where it is taken; 0 for DC", 0.0, 0.0, 1e13)
+_FREQUENCY = Parameter("frequency", "Hz", "where it is taken", 1e3, 1e-6, 1e13)
+_BAND = Parameter("band", "Hz", "lowest and highest frequency", (1.0, 1e5), 1e-6, 1e13)
+_SIGMAS = Parameter("sigmas", "", "standard deviations of mismatch that are counted", 3.0, 0.0, 10.0)
+_DEPARTURE = Parameter("departure", "", "departure from the tangent, relative", 0.01, 1e-4, 0.5)
+_AMPLITUDE = Parameter("amplitude", "V", "peak of the differential sine at the input", 1e-3, 1e-6, 10.0)
 
 
 def _measure(unit: str, better: Sense, **options: object) -> Callable[..., Callable[..., Array]]:
-    return _entry(CATALOGUE, unit, better, **options)  # type: ignore[arg-type]
-
-
-def _figure(unit: str, better: Sense, **options: object) -> Callable[..., Callable[..., Array]]:
-    return _entry(FIGURES, unit, better, **options)  # type: ignore[arg-type]
+    return entry(CATALOGUE, unit, better, **options)  # type: ignore[arg-type]
 
 
 def decibels(ratio: Array) -> Array:
@@ -141,12 +62,89 @@ def common_mode_gain(a: Analysis) -> Array:
     return a.acm
 
 
-@_measure("dB", "max", scale="linear", step=6.0, source=_HANDBOOK)
-def cmrr(a: Analysis) -> Array:
-    """Systematic common-mode rejection at DC, of perfectly matched devices: gain over common_mode_gain. About
-    1 + 2 gm Rss for a differential output with resistors, half of it for one output. Unlimited with an ideal tail."""
-    rejected = np.abs(a.adm) / np.where(a.acm == 0.0, 1.0, np.abs(a.acm))
-    return np.where(a.acm == 0.0, np.inf, decibels(rejected))
+def _over(wanted: Array, unwanted: Array) -> Array:
+    """Return the ratio of two gains in decibels, unlimited where the unwanted one is zero."""
+    ratio = np.abs(wanted) / np.where(unwanted == 0.0, 1.0, np.abs(unwanted))
+    return np.where(unwanted == 0.0, np.inf, decibels(ratio))
+
+
+@_measure("dB", "max", scale="linear", step=6.0, source=_HANDBOOK, parameters=(_FROM_DC,))
+def cmrr(a: Analysis, frequency: float = 0.0) -> Array:
+    """Systematic common-mode rejection, of perfectly matched devices: differential gain over common-mode gain. About
+    1 + 2 gm Rss for a differential output with resistors, half of it for one output. Unlimited at DC with an ideal tail
+    or under common-mode control; above DC the capacitance of the tail node counts."""
+    if frequency == 0.0:
+        return _over(a.adm, a.acm)
+    r = response(a, frequency)
+    return _over(r.differential, a.beyond_rounding(r.mean_gain("common")))
+
+
+@_measure("dB", "max", scale="linear", step=6.0, source=_MATCHING, parameters=(_SIGMAS,))
+def cmrr_mismatch(a: Analysis, sigmas: float = 3.0) -> Array:
+    """Common-mode rejection at DC with mismatch: gain over the common-mode gain to the output that a number of
+    standard deviations of mismatch adds to the systematic one. Where a sizing makes the systematic one cancel, this
+    does not reward it. Of a differential output: from the common mode to the difference of its sides."""
+    systematic = np.abs(a.acm) if len(a.topology.output) == 1 else np.abs(a.common_to_difference)
+    return _over(a.adm, systematic + sigmas * mismatch.common_gain_sigma(a))
+
+
+@_measure("V/V", "min", scale="log", source=_MATCHING)
+def common_mode_gain_sigma(a: Analysis) -> Array:
+    """Standard deviation, by mismatch and to first order, of the gain from the common mode to the output at DC (of a
+    differential output: to the difference of its sides), with the offset taken out by the input."""
+    return mismatch.common_gain_sigma(a)
+
+
+@_measure("dB", "max", scale="linear", step=6.0, source=_HANDBOOK, parameters=(_FROM_DC,))
+def supply_rejection(a: Analysis, frequency: float = 0.0) -> Array:
+    """Systematic rejection of the positive rail: differential gain over the gain from the supply to the output, the
+    inputs and the ground at rest; of a differential output to the mean of its two sides."""
+    return _rail_rejection(a, "supply", frequency)
+
+
+@_measure("dB", "max", scale="linear", step=6.0, source=_HANDBOOK, parameters=(_FROM_DC,))
+def ground_rejection(a: Analysis, frequency: float = 0.0) -> Array:
+    """Systematic rejection of the ground rail: differential gain over the gain from the ground to the output, the
+    inputs and the supply at rest; of a differential output to the mean of its two sides."""
+    return _rail_rejection(a, "ground", frequency)
+
+
+def _rail_rejection(a: Analysis, rail: str, frequency: float) -> Array:
+    r = response(a, frequency)
+    return _over(r.differential, a.beyond_rounding(r.mean_gain(rail)))
+
+
+@_measure("V", "min", scale="linear", step=1e-3, signed=True)
+def offset_systematic(a: Analysis) -> Array:
+    """Differential input voltage that brings a single-ended output to conditions.output_common_mode; zero for a
+    matched stage without that condition, or with a differential output. Goals and limits act on its magnitude."""
+    return a.offset
+
+
+@_measure("V", "min", source=_MATCHING)
+def offset_sigma(a: Analysis) -> Array:
+    """Standard deviation of the input-referred offset by mismatch of thresholds, current factors and resistances, to
+    first order."""
+    return mismatch.offset_sigma(a)
+
+
+@_measure("V", "min", source=_MATCHING, parameters=(_SIGMAS,))
+def offset(a: Analysis, sigmas: float = 3.0) -> Array:
+    """Input-referred offset: the magnitude of the systematic one and a number of standard deviations of mismatch."""
+    return np.abs(a.offset) + sigmas * mismatch.offset_sigma(a)
+
+
+@_measure("V/Hz^0.5", "min", source=_HANDBOOK, parameters=(_FREQUENCY,))
+def input_noise(a: Analysis, frequency: float = 1e3) -> Array:
+    """Noise density at a frequency, referred to the differential input: thermal and flicker noise of all transistors,
+    thermal noise of all resistors. The bias currents themselves are taken as noiseless."""
+    return np.sqrt(noise.input_density(response(a, frequency)))
+
+
+@_measure("V", "min", source=_HANDBOOK, parameters=(_BAND,))
+def input_noise_total(a: Analysis, band: tuple[float, float] = (1.0, 1e5)) -> Array:
+    """Effective value of the noise referred to the differential input, integrated over a band."""
+    return np.sqrt(noise.integrated(a, band))
 
 
 @_measure("A", "min")
@@ -167,6 +165,43 @@ def headroom(a: Analysis) -> Array:
     """Smallest vds - vdsat of all transistors that must be saturated, worst over the whole common-mode range;
     diode-connected ones are saturated by themselves and do not count."""
     return a.room
+
+
+@_measure("V", "min", scale="linear", step=0.05)
+def input_range_low(a: Analysis) -> Array:
+    """Lowest common-mode input voltage at which everything that must be saturated is, and the pair carries at least
+    half of its current in the middle of the range. Where nothing ends the range within a volt of the rails, -unlimited.
+    """
+    return ranges.input_range(a)[0]
+
+
+@_measure("V", "max", scale="linear", step=0.05)
+def input_range_high(a: Analysis) -> Array:
+    """Highest common-mode input voltage at which everything that must be saturated is, and the pair carries at least
+    half of its current in the middle of the range. Where nothing ends the range within a volt of the rails, unlimited.
+    """
+    return ranges.input_range(a)[1]
+
+
+@_measure("V", "max", scale="log", source=_HANDBOOK, parameters=(_DEPARTURE,))
+def linear_range(a: Analysis, departure: float = 0.01) -> Array:
+    """Differential input voltage, either way, at which the current into outputs that are held at rest departs from its
+    tangent by 1 %, or by another departure that is stated."""
+    return ranges.linear_range(a, departure)
+
+
+@_measure("V", "max", scale="log", source=_HANDBOOK)
+def steering_voltage(a: Analysis) -> Array:
+    """Differential input voltage that steers the pair: one input transistor is left with 1 % of its current, the
+    outputs held at rest."""
+    return ranges.steering_voltage(a)
+
+
+@_measure("dB", "min", scale="linear", step=6.0, parameters=(_AMPLITUDE,))
+def distortion(a: Analysis, amplitude: float = 1e-3) -> Array:
+    """Third harmonic of the output over its fundamental, for a slow differential sine of a stated peak at the input.
+    Undefined where the sine asks for more than the supply at the output."""
+    return decibels(ranges.third_harmonic(a, amplitude))
 
 
 @_measure("V", "max", scale="linear", step=0.1)
@@ -197,8 +232,28 @@ def bandwidth(a: Analysis) -> Array:
 def unity_gain_frequency(a: Analysis) -> Array:
     """Frequency at which the magnitude of the differential gain has fallen to one; zero where the gain at DC is no
     more than one."""
-    excess = a.adm**2 - 1.0
-    return np.where(excess > 1e-6, a.gain_crossing(excess), 0.0)
+    return a.unity_crossing
+
+
+@_measure("deg", "max", scale="linear", step=15.0)
+def phase(a: Analysis) -> Array:
+    """Phase of the differential gain at the unity-gain frequency against that at DC; a lag is negative. Undefined where
+    the gain at DC is no more than one."""
+    return a.unity_phase
+
+
+@_measure("ohm", "min")
+def output_resistance(a: Analysis) -> Array:
+    """Resistance at DC into the output, the inputs at rest; of a differential output between its two sides."""
+    r = response(a, 0.0)
+    return a.wiring.output_weights @ r.adjoint[:, 0]
+
+
+@_measure("F", "min", parameters=(_FROM_DC,))
+def input_capacitance(a: Analysis, frequency: float = 0.0) -> Array:
+    """Capacitance that a source at one input sees under a differential drive, of the heavier input: gate capacitances
+    with what the gain to the drains makes of them, at low frequency unless one is stated."""
+    return response(a, frequency).input_capacitance.max(axis=0)
 
 
 @_measure("V/s", "max")
@@ -207,49 +262,6 @@ def slew_rate(a: Analysis) -> Array:
     the output (all of the tail current for a mirror, half of it for each side otherwise), over that capacitance."""
     tail = a.drain.id[a.wiring.pair].sum(axis=0)
     return len(a.topology.output) * a.topology.steered * tail / a.output_capacitance
-
-
-@_figure("A", "min")
-def id(a: Analysis) -> Array:
-    """Drain current, its magnitude for either channel."""
-    return a.drain.id
-
-
-@_figure("V", "min", scale="linear", step=0.1)
-def vgs(a: Analysis) -> Array:
-    """Gate-source voltage, positive for a conducting device of either channel."""
-    return a.terminals.gate - a.terminals.source
-
-
-@_figure("V", "max", scale="linear", step=0.1)
-def vds(a: Analysis) -> Array:
-    """Drain-source voltage, positive for a conducting device of either channel."""
-    return a.terminals.vds
-
-
-@_figure("V", "min", scale="linear", step=0.05)
-def vdsat(a: Analysis) -> Array:
-    """Drain-source voltage at which saturation begins: 2 ut sqrt(if) + 4 ut for the charge law, the overdrive for the
-    square law."""
-    return a.saturation.vdsat
-
-
-@_figure("S", "max")
-def gm(a: Analysis) -> Array:
-    """Gate transconductance."""
-    return a.drain.gm
-
-
-@_figure("S", "min")
-def gds(a: Analysis) -> Array:
-    """Output conductance."""
-    return a.drain.gds
-
-
-@_figure("", "max")
-def inversion(a: Analysis) -> Array:
-    """Inversion level: forward current over the specific current 2 n beta ut^2; weak below 0.1, strong above 10."""
-    return a.saturation.inversion
 
 
 def find(name: str, topology: Topology, own: Mapping[str, Measure] | None = None) -> Measure:

@@ -270,7 +270,9 @@ CASCODED_LOADS: dict[str, LoadKind] = {
 
 FORMS: dict[str, Form] = {
     "simple": Form("the load on the drains of the pair", PAIR, LOADS),
-    "telescopic": Form("cascodes over the pair and under the load, mirror or source", CASCODED_PAIR, CASCODED_LOADS),
+    "telescopic": Form(
+        "cascodes over the pair and under the load, mirror or source", CASCODED_PAIR, CASCODED_LOADS, delicate=True
+    ),
 }
 
 _TAIL_SIZES = (

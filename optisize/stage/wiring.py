@@ -25,22 +25,26 @@ Indices = NDArray[np.intp]
 class Wiring:
     """The constant arrays of a topology: indices of terminals and incidence of branches on the unknown nodes."""
 
-    def __init__(self, topology: Topology, frozen: frozenset[str] = frozenset()) -> None:
+    def __init__(
+        self, topology: Topology, frozen: frozenset[str] = frozenset(), watched: frozenset[str] = frozenset()
+    ) -> None:
         """Number the nodes and lay out the incidence arrays.
 
         Args:
             topology: the stage.
             frozen: unknown nodes that are held where they are, with the elements that stand at no other unknown node
                 left out: what a drive cannot move need not be solved again.
+            watched: frozen nodes whose currents are asked for, so that their elements stay.
         """
         self.topology = topology
         solved = tuple(node for node in topology.unknown if node not in frozen)
         self.nodes = (*solved, *topology.driven, *(node for node in topology.unknown if node in frozen))
         self.index = {name: i for i, name in enumerate(self.nodes)}
         self.unknowns = len(solved)
-        self.transistors = tuple(x for x in topology.transistors if {x.drain, x.source} & set(solved))
-        self.resistors = tuple(x for x in topology.resistors if {x.a, x.b} & set(solved))
-        self.sources = tuple(x for x in topology.sources if {x.a, x.b} & set(solved))
+        alive = {*solved, *watched}
+        self.transistors = tuple(x for x in topology.transistors if {x.drain, x.source} & alive)
+        self.resistors = tuple(x for x in topology.resistors if {x.a, x.b} & alive)
+        self.sources = tuple(x for x in topology.sources if {x.a, x.b} & alive)
         self.controls = tuple(x for x in topology.controls if x.node in solved)
         t = self.transistors
         self.gate = self._at([x.gate for x in t])
@@ -53,7 +57,8 @@ class Wiring:
         self.sensed, self.fed = self._linear_branches()
         self._equation_stamps: dict[bytes, Array] = {}
         self.current_stamp = self._current_stamp()
-        self.conductance_stamp = self._conductance_stamp()
+        self.all_conductances = self._all_conductances()
+        self.conductance_stamp = self.all_conductances[: self.unknowns]
         self.all_capacitances = self._all_capacitances()
         self.capacitance_stamp = self.all_capacitances[: self.unknowns].copy()
         # What flows into a controlled node is the control's business: its equation is that of the control alone.
@@ -89,8 +94,8 @@ class Wiring:
         sources = [unit[self.index[x.a]] - unit[self.index[x.b]] for x in self.sources]
         return np.array([*channels, *self.fed.T, *sources]).T
 
-    def _conductance_stamp(self) -> Array:
-        """Return (U, A, 3T + L): how gm, gds, gms of the transistors and the linear branches enter the matrix.
+    def _all_conductances(self) -> Array:
+        """Return (A, A, 3T + L): how gm, gds, gms of the transistors and the linear branches enter the matrix.
 
         The bulk takes what the other terminals leave: moving all four together changes nothing.
         """
@@ -102,7 +107,7 @@ class Wiring:
                     full[node, terminal[k], kind * t + k] += sign * value
                     full[node, self.bulk[k], kind * t + k] -= sign * value
         full[:, :, 3 * t :] = self.fed[:, None] * self.sensed[None]
-        return full[: self.unknowns]
+        return full
 
     def _all_capacitances(self) -> Array:
         """Return (A, A, 5T + R + 1): gate to source, drain, bulk; drain and source junctions; resistors; load.
@@ -201,6 +206,19 @@ class Wiring:
             vector[self.index[names[key]]] = value
         return vector
 
+    @cached_property
+    def output_weights(self) -> Array:
+        """(U,): the output as a combination of the unknown nodes."""
+        weights = np.zeros(self.unknowns)
+        for node, sign in self.topology.output:
+            weights[self.index[node]] = sign
+        return weights
+
+    @cached_property
+    def mean_weights(self) -> Array:
+        """(U,): the mean of the sides of the output."""
+        return np.abs(self.output_weights) / len(self.topology.output)
+
     def output(self, voltages: Array, *, mirrored: bool = False) -> Array:
         """Return the output of node voltages (A, ...) as a combination of its nodes; mirrored: with sides exchanged."""
         other = {"left": "right", "right": "left"} if mirrored else {}
@@ -227,7 +245,7 @@ def wiring(topology: Topology) -> Wiring:
 
 @dataclass(frozen=True)
 class Moving:
-    """The part of a stage that the inputs can move, and where its elements stand in the whole.
+    """A part of a stage that the inputs can move, and where its elements stand in the whole.
 
     Attributes:
         wiring: of the part; the nodes that the inputs cannot move are driven ones.
@@ -241,15 +259,32 @@ class Moving:
     sources: Indices
 
 
-@lru_cache(maxsize=64)
+@lru_cache(maxsize=256)
 def moving(topology: Topology) -> Moving:
     """Return the part of a stage whose node voltages depend on the input voltages."""
+    return _part(topology, _still(topology))
+
+
+@lru_cache(maxsize=256)
+def held(topology: Topology) -> Moving:
+    """Return the part that the inputs can move while the outputs, and what controls them, are held where they are."""
+    outputs = frozenset(node for node, _ in topology.output)
+    return _part(topology, _still(topology) | outputs | {c.node for c in topology.controls}, outputs)
+
+
+def _still(topology: Topology) -> frozenset[str]:
+    """Return the unknown nodes whose voltage does not depend on the input voltages."""
     whole = wiring(topology)
     depends = np.any(whole.conductance_stamp != 0.0, axis=2)
     moved = np.isin(np.arange(len(whole.nodes)), [whole.index["in+"], whole.index["in-"]])
     for _ in range(whole.unknowns):
         moved[: whole.unknowns] |= (depends & moved).any(axis=1)
-    part = Wiring(topology, frozenset(whole.nodes[i] for i in range(whole.unknowns) if not moved[i]))
+    return frozenset(whole.nodes[i] for i in range(whole.unknowns) if not moved[i])
+
+
+def _part(topology: Topology, frozen: frozenset[str], watched: frozenset[str] = frozenset()) -> Moving:
+    """Return a part of a stage, and where its elements stand in the whole."""
+    whole, part = wiring(topology), Wiring(topology, frozen, watched)
 
     def positions(all_of: tuple[Any, ...], some: tuple[Any, ...]) -> Indices:
         return np.array([all_of.index(x) for x in some], dtype=np.intp)

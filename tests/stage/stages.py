@@ -13,27 +13,52 @@ from optisize.stage.bias import OperatingPoint, operating_point
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
 from optisize.stage.assembly import Topology, build
 
-KINDS = [
+KINDS: list[tuple[str, ...]] = [
     (input, load, tail, output)
     for input, (load, output), tail in product(
         ("nmos", "pmos"),
         (("resistor", "single-ended"), ("resistor", "differential"), ("mirror", "single-ended")),
         ("ideal", "single"),
     )
+] + [  # every other load, tail and form once or more; all of them together stand against the circuit simulator
+    ("nmos", "diode", "resistor", "differential"),
+    ("pmos", "diode", "cascode", "single-ended"),
+    ("nmos", "source", "single", "differential"),
+    ("pmos", "source", "cascode", "differential"),
+    ("nmos", "source", "ideal", "differential"),
+    ("pmos", "mirror", "resistor", "single-ended"),
+    ("nmos", "mirror", "cascode", "single-ended"),
+    ("nmos", "mirror", "single", "single-ended", "rail", "telescopic"),
+    ("pmos", "source", "cascode", "differential", "rail", "telescopic"),
 ]
 
-# Handbook process: 100 uA in the pair, 1 V across a load resistor, everything saturated.
+# Handbook process: 100 uA in the tail, 1 V across a load resistor, everything saturated.
 BY_HAND = {
     "input.width": 100e-6,
     "input.length": 2e-6,
+    "input.degeneration": 2e3,
+    "input.cascode.width": 100e-6,
+    "input.cascode.length": 1e-6,
+    "input.cascode.bias.width": 5e-6,
+    "input.cascode.bias.length": 3e-6,
     "load.width": 60e-6,
     "load.length": 4e-6,
+    "load.units": 2.0,
     "load.resistance": 20e3,
+    "load.cascode.width": 120e-6,
+    "load.cascode.length": 1e-6,
+    "load.cascode.bias.width": 8e-6,
+    "load.cascode.bias.length": 3e-6,
     "tail.width": 30e-6,
     "tail.length": 3e-6,
     "tail.units": 4.0,
-    "bias.current": 25e-6,
+    "tail.resistance": 9e3,
     "tail.current": 100e-6,
+    "tail.cascode.width": 30e-6,
+    "tail.cascode.length": 1e-6,
+    "tail.cascode.bias.width": 6e-6,
+    "tail.cascode.bias.length": 3e-6,
+    "bias.current": 25e-6,
 }
 RANGES = {"width": (1e-8, 1e-2), "length": (1e-8, 1e-3), "resistance": (10.0, 1e11), "current": (1e-14, 0.1)}
 
@@ -63,9 +88,10 @@ def middle(input: str, supply: float = 3.3) -> float:
 def analysed(kind: tuple[str, ...], process: Process | str = "handbook", bulk: str = "rail", **changes) -> Analysis:
     """Return the analysis of the sizing by hand."""
     p = load_process(process) if isinstance(process, str) else process
-    topology = build(*kind, bulk=bulk)
+    topology = build(*kind[:4], bulk, *kind[5:])
     common = middle(kind[0], p.nominal.supply)
-    conditions = Conditions(p.nominal.supply, (common, common), 1e-12)
+    held = 0.5 * p.nominal.supply if topology.controls else None
+    conditions = Conditions(p.nominal.supply, (common, common), 1e-12, output_common_mode=held)
     return Analysis(size_circuit(topology, p, conditions, by_hand(topology, **changes)))
 
 

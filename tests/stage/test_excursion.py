@@ -72,7 +72,7 @@ def test_single_precision_is_enough(process: str, kind: tuple[str, ...]) -> None
     """Range ends and excursions in single precision are those of double precision to a small part of a millivolt."""
     supply = load_process(process).nominal.supply
     coarse, fine = (spread_stages(process, kind, supply) for _ in range(2))
-    fine.__dict__["_coarse"] = np.float64
+    fine.__dict__["coarse"] = np.float64
     assert coarse.moving[1].conductances.dtype == np.float32
     assert fine.moving[1].conductances.dtype == np.float64
     np.testing.assert_allclose(coarse.room, fine.room, atol=2e-5)

@@ -191,9 +191,11 @@ def test_a_design_does_not_depend_on_its_neighbours(process: str, kind: tuple[st
     assert together["converged"].any()
     ok = together["converged"]
     for name, values in together.items():
-        close = {"rtol": 1e-9, "atol": 1e-12 if name in ("v", "headroom") else 0.0, "err_msg": name}
-        np.testing.assert_allclose(among[name][200:][::-1][ok], values[ok], **close)
-        np.testing.assert_allclose(np.concatenate([x[name] for x in alone])[ok], values[ok], **close)
+        # What single precision does for, and the third harmonic of a nearly straight curve, carry more rounding.
+        rounded = name in ("steering_voltage", "input_range_low", "input_range_high", "output_swing", "distortion")
+        close = {"rtol": 2e-5 if rounded else 1e-9, "atol": 1e-12 if name in ("v", "headroom") else 0.0}
+        np.testing.assert_allclose(among[name][200:][::-1][ok], values[ok], **close, err_msg=name)
+        np.testing.assert_allclose(np.concatenate([x[name] for x in alone])[ok], values[ok], **close, err_msg=name)
 
 
 @pytest.mark.parametrize("kind", KINDS, ids="-".join)
