@@ -248,7 +248,7 @@ def front(
         print_front(loaded, table)
 
 
-@app.command(epilog="Example: optisize assess problems/thermopile-preamplifier.toml sizing.toml")
+@app.command(epilog="Example: optisize assess problems/thermopile-preamplifier.toml sizing.toml --sensitivity")
 @guarded
 def assess(
     problem: ProblemPath,
@@ -256,28 +256,37 @@ def assess(
     against: Annotated[
         Path | None, typer.Option(help="A run to compare with; the newest one of this problem under results/.")
     ] = None,
+    sensitivity: Annotated[
+        bool, typer.Option("--sensitivity", help="How each measure moves with each size, by 1 % and by one step.")
+    ] = False,
     as_json: Json = False,
 ) -> None:
     """Assess a manual sizing: its measures, its limits, and the designs of a front that beat it."""
     from optisize.front.assess import assess_sizing
+    from optisize.front.sensitivity import sensitivity as sensitivity_of
     from optisize.problem.load import load_problem, load_sizing
-    from optisize.show.terminal import json_number, print_assessment
+    from optisize.show.sensitivity import print_sensitivity, sensitivity_record
+    from optisize.show.terminal import json_number, print_assessment, print_caution
 
     loaded = load_problem(problem)
-    report = assess_sizing(loaded, load_sizing(sizing, loaded), against, str(sizing))
+    sizes = load_sizing(sizing, loaded)
+    report = assess_sizing(loaded, sizes, against, str(sizing))
+    found = sensitivity_of(loaded, sizes) if sensitivity else None
     if as_json:
-        _print_json(
-            {
-                "sizes": report.sizes,
-                "measures": {k: json_number(v) for k, v in report.measures.items()},
-                "limits": [{**row, "value": json_number(row["value"])} for row in report.limits],
-                "feasible": report.feasible,
-                "against": report.against,
-                "dominated_by": report.dominated_by,
-            }
-        )
-    else:
-        print_assessment(loaded, report)
+        data = {
+            "sizes": report.sizes,
+            "measures": {k: json_number(v) for k, v in report.measures.items()},
+            "limits": [{**row, "value": json_number(row["value"])} for row in report.limits],
+            "feasible": report.feasible,
+            "against": report.against,
+            "dominated_by": report.dominated_by,
+        }
+        _print_json(data if found is None else {**data, "sensitivity": sensitivity_record(loaded, found)})
+        return
+    print_assessment(loaded, report)
+    if found is not None:
+        print_sensitivity(loaded, found)
+    print_caution()
 
 
 @app.command(epilog="Example: optisize plot results/sample --format svg")

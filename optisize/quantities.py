@@ -1,4 +1,4 @@
-"""Engineering text to SI numbers and back: ``"250 nA"``, ``"6000 um^2"``, ``"3.5 mV*um"``.
+"""Engineering text to SI numbers and back: ``"250 nA"``, ``"6000 um^2"``, ``"3.5 mV*um"``, ``"20 nV/√Hz"``.
 
 Inside the package every number is SI; text with prefixes lives in files, on the command line and in tables. Numbers
 and prefixes are read and written by quantiphy. Powers and products need a reading of their own, since a prefix on an
@@ -23,31 +23,40 @@ ZERO_CELSIUS = 273.15
 _NUMBER = re.compile(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(.*?)\s*", re.DOTALL)
 _DECIMAL_COMMA = re.compile(r",\d")
 _FACTOR = re.compile(r"([^\W\d_]+|%|1)(?:\^(-?\d(?:\.\d+)?))?")
-_BASES = ("ohm", "degC", "dB", "Hz", "V", "A", "m", "F", "s", "K", "W", "S")
+_ROOT = re.compile(r"(?:√|sqrt|rt)\s*(?:\(([^()]*)\)|([^()]+))")
+_ROOT_BELOW = re.compile(r"/(\w+)\^0\.5")  # as units are kept; tables write it with a root sign
+_BASES = ("ohm", "degC", "deg", "dB", "Hz", "V", "A", "m", "F", "s", "K", "W", "S")
 _ALIASES = str.maketrans({"µ": "u", "μ": "u", "\u03a9": "ohm", "\u2126": "ohm", "²": "^2", "·": "*"})
-_NO_PREFIX = ("dB", "degC", "%", "1")
+_NO_PREFIX = ("dB", "degC", "deg", "%", "1")
+UNPREFIXED = ("", "dB", "deg", "V/V")  # written without a prefix
 
 
 class QuantityError(ValueError):
     """A text is not a quantity of the unit that was asked for."""
 
 
+def _plain(expression: str) -> str:
+    """Return a unit expression in the letters that are parsed: ``Ω`` is ``ohm``, ``°C`` is ``degC``."""
+    return expression.translate(_ALIASES).replace("°C", "degC").replace("°", "deg").strip()
+
+
 @lru_cache(maxsize=1024)
 def _parse_unit(expression: str) -> tuple[float, tuple[tuple[str, float], ...]]:
-    """Return the scale to SI and the sorted dimensions of a unit expression such as ``uA/V^2``.
+    """Return the scale to SI and the sorted dimensions of a unit expression such as ``uA/V^2`` or ``nV/√Hz``.
 
     Raises QuantityError when a factor is no known unit.
     """
     scale = 1.0
     powers: Counter[str] = Counter()
-    text = expression.translate(_ALIASES).replace("°C", "degC").replace("√", "").strip()
+    text = _plain(expression)
     if not text:
         return 1.0, ()
     for sign, factor in _factors(text):
-        match = _FACTOR.fullmatch(factor.strip())
+        root = _ROOT.fullmatch(factor.strip())
+        match = _FACTOR.fullmatch((root.group(1) or root.group(2) or "" if root else factor).strip())
         if match is None:
             raise QuantityError(f"{shorten(expression)} is not a unit")
-        power = sign * float(match.group(2) or 1.0)
+        power = sign * float(match.group(2) or 1.0) * (0.5 if root else 1.0)
         factor_scale, base = _parse_factor(match.group(1), expression)
         scale *= factor_scale**power
         if base:
@@ -115,7 +124,7 @@ def _read_text(text: str, unit: str) -> float:
     figure, expression = match.groups()
     if _DECIMAL_COMMA.match(expression):
         raise QuantityError("a decimal point is needed in place of the comma")
-    if expression.translate(_ALIASES).replace("°C", "degC") == "degC" and unit == "K":
+    if _plain(expression) == "degC" and unit == "K":
         return float(figure) + ZERO_CELSIUS
     try:
         scale, dimensions = _parse_unit(expression)
@@ -142,7 +151,8 @@ def _unit_phrase(unit: str) -> str:
 def _example(unit: str) -> str:
     examples = {
         "V": "1.8 V", "A": "250 nA", "m": "1.2 um", "m^2": "6000 um^2", "ohm": "5 kohm", "F": "500 fF",
-        "Hz": "1 MHz", "K": "27 degC", "W": "60 uW", "dB": "40 dB", "V/s": "2 V/us",
+        "Hz": "1 MHz", "K": "27 degC", "W": "60 uW", "dB": "40 dB", "V/s": "2 V/us", "deg": "60 deg",
+        "V/Hz^0.5": "20 nV/√Hz",
     }  # fmt: skip
     return f' (such as "{examples[unit]}")' if unit in examples else ""
 
@@ -150,7 +160,8 @@ def _example(unit: str) -> str:
 def write(value: float, unit: str, digits: int = 4) -> str:
     """Return a number in engineering notation: ``write(2.5e-7, "A")`` is ``250 nA``.
 
-    Areas are written in um^2, slopes in V/us, decibels without a prefix; an infinite value is ``unlimited``.
+    Areas are written in um^2, slopes in V/us, noise densities in V/√Hz, decibels and degrees without a prefix; an
+    infinite value is ``unlimited``.
     """
     from quantiphy import Quantity
 
@@ -160,12 +171,17 @@ def write(value: float, unit: str, digits: int = 4) -> str:
         return "unlimited" if value > 0 else "-unlimited"
     if unit in _PREFERRED:
         return write_in(value, _PREFERRED[unit], digits)
-    if unit in ("", "dB", "V/V"):
+    if unit in UNPREFIXED:
         return write_in(value, unit, digits)
-    return str(Quantity(value, unit).render(prec=digits - 1))
+    return str(Quantity(value, written(unit)).render(prec=digits - 1))
 
 
 _PREFERRED = {"m^2": "um^2", "V/s": "V/us"}
+
+
+def written(unit: str) -> str:
+    """Return a unit as tables write it: ``V/√Hz`` for ``V/Hz^0.5``."""
+    return _ROOT_BELOW.sub(r"/√\1", unit)
 
 
 def write_in(value: float, unit: str, digits: int = 4) -> str:

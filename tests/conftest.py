@@ -1,4 +1,6 @@
-"""What several rooms' tests use: the command line in a directory of its own, and one small run to read."""
+"""What several rooms' tests use: the command line in a directory of its own, one small run to read, and measures with
+parameters that no catalogue has.
+"""
 
 from __future__ import annotations
 
@@ -6,10 +8,14 @@ import shutil
 from collections.abc import Callable
 from pathlib import Path
 
+import numpy as np
 import pytest
 from typer.testing import CliRunner, Result
 
 from optisize.cli import app
+from optisize.process.law import Array
+from optisize.stage.analysis import Analysis
+from optisize.stage.measures import CATALOGUE, Measure, Parameter, Setting
 from tests.problem.texts import RESISTOR
 
 Cli = Callable[..., Result]
@@ -41,3 +47,38 @@ def finished_run(tmp_path_factory: pytest.TempPathFactory) -> Path:
 def run_copy(finished_run: Path, tmp_path: Path) -> Path:
     """A copy of that run in the test's own directory, named `run`."""
     return Path(shutil.copytree(finished_run, tmp_path / "run"))
+
+
+def _hum(a: Analysis, frequency: float) -> Array:
+    """A density that falls with frequency."""
+    return np.sqrt((1.0 + 1e3 / frequency) / a.drain.gm[a.wiring.pair].sum(axis=0)) * 1e-10
+
+
+def _hum_total(a: Analysis, band: tuple[float, float]) -> Array:
+    """The same over a band."""
+    low, high = band
+    return _hum(a, 1e3) * np.sqrt(high - low)
+
+
+def _unlikeness(a: Analysis, sigmas: float, frequency: float) -> Array:
+    """Something with two parameters."""
+    return sigmas * np.abs(a.acm) * frequency / 1e3
+
+
+@pytest.fixture
+def humming(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Three more measures in the catalogue: `hum` at a frequency, `hum_total` over a band, `unlikeness` with two."""
+
+    def enter(name: str, unit: str, function: Callable[..., Array], *parameters: Parameter) -> None:
+        text = "As tests need it."
+        entry = Measure(name, unit, "min", "log", 1.0, False, "no source", text, function, parameters)
+        monkeypatch.setitem(CATALOGUE, name, entry)
+
+    def frequency(default: Setting) -> Parameter:
+        return Parameter("frequency", "Hz", "where it is taken", default, 1e-3, 1e12)
+
+    band = Parameter("band", "Hz", "from where to where", (1.0, 1e5), 1e-3, 1e12)
+    sigmas = Parameter("sigmas", "", "how many", 3.0, 0.0, 10.0)
+    enter("hum", "V/Hz^0.5", _hum, frequency(1e3))
+    enter("hum_total", "V", _hum_total, band)
+    enter("unlikeness", "V/V", _unlikeness, sigmas, frequency(1e6))

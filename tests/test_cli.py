@@ -134,6 +134,34 @@ def test_options_take_the_place_of_the_problem_s(cli: Cli) -> None:
         assert not Path("no").exists()
 
 
+def test_a_measure_at_two_frequencies_goes_from_the_problem_to_the_figures(cli: Cli) -> None:
+    table = """[measures]
+input_noise = { frequency = "10 Hz" }
+wideband = { of = "input_noise", frequency = "100 kHz" }
+[goals]"""
+    text = changed(RESISTOR, ("[goals]", table), ("cmrr", 'wideband = "min"'))
+    text = changed(text, ("power", 'input_noise = { max = "20 uV/√Hz" }'))
+    Path("stage.toml").write_text(text, encoding="utf-8")
+    Path("hand.toml").write_text(SIZING, encoding="utf-8")
+    shown = cli("search", "stage.toml", "--to", "run", *QUICK, "--quiet")
+    assert shown.exit_code == 0, shown.stderr
+    assert "wideband (min)" in shown.stdout
+    front = pd.read_csv("run/front.csv")
+    wideband, slow = front["wideband [V/Hz^0.5]"], front["input_noise [V/Hz^0.5]"]
+    assert ((wideband > 0) & (wideband < slow) & (slow <= 20e-6 * (1 + 1e-9))).all()
+    bound = float(np.median(wideband) * 1e9)
+    chosen = cli("front", "run", "--sort", "wideband", "--where", f"wideband<={bound} nV/√Hz", "--csv")
+    assert 0 < len(chosen.stdout.splitlines()) - 1 < len(front)
+    own = json.loads(cli("assess", "stage.toml", "hand.toml", "--json").stdout)["measures"]
+    assert 0 < own["wideband"] < own["input_noise"]
+    words = cli("assess", "stage.toml", "hand.toml").stdout
+    assert "wideband (input_noise at 100 kHz)" in words
+    assert "input_noise (at 10 Hz)" in words
+    drawn = cli("plot", "run", "--format", "svg")
+    assert (drawn.exit_code, drawn.stderr) == (0, "")
+    assert cli("resume", "run", "--no-figures", "--quiet").exit_code == 0
+
+
 def test_words_that_are_no_command_or_option_are_refused(cli: Cli) -> None:
     assert "Did you mean 'search'" in cli("serch").stderr
     for words in (["serch"], ["search"], ["search", "--popluation", "3"], ["front", "a", "b"]):
@@ -200,6 +228,20 @@ def test_a_new_problem_can_be_searched(cli: Cli) -> None:
     before = Path("my-stage.toml").read_bytes()
     refused(cli, "my-stage.toml: already exists", words=("new", "my-stage"))
     assert Path("my-stage.toml").read_bytes() == before
+
+
+def test_the_measures_of_a_new_problem_need_no_more_than_their_comment_marks_taken_away(cli: Cli) -> None:
+    cli("new", "my-stage")
+    path = Path("my-stage.toml")
+    text = path.read_text(encoding="utf-8")
+    begin = text.index("# [measures]")
+    end = text.index("\n\n", begin)
+    block = text[begin:end].replace("\n# ", "\n").removeprefix("# ")
+    path.write_text(text[:begin] + block + text[end:], encoding="utf-8")
+    assert {name: m.taken_at for name, m in load_problem(path).own_measures.items()} == {
+        "input_noise": {"frequency": 10.0},
+        "wideband": {"frequency": 1e5},
+    }
 
 
 @pytest.mark.parametrize("name", ["a b", "{title}", "ΩΩ", 'it\'s "quoted" \\ [red]', "x" * 220, "a.toml", "$x$", "-"])

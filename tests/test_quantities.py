@@ -10,9 +10,9 @@ from hypothesis import strategies as st
 
 from optisize.problem.schema import ProblemFile
 from optisize.process.card import Process
-from optisize.quantities import QuantityError, read, write, write_in
-from optisize.stage.measures import CATALOGUE, FIGURES
+from optisize.quantities import QuantityError, read, write, write_in, written
 from optisize.stage.elements import UNITS
+from optisize.stage.measures import CATALOGUE, FIGURES
 
 
 @pytest.mark.parametrize(
@@ -65,6 +65,17 @@ def test_decimal_texts_are_read_to_the_last_digit(text: object, unit: str, value
         ("0.9 mV/K", "V/K", 0.9e-3),
         ("2e-24 V^2*F", "V^2*F", 2e-24),
         ("3 V/V", "", 3.0),
+        ("20 nV/Hz^0.5", "V/Hz^0.5", 20e-9),
+        ("20 nV/√Hz", "V/Hz^0.5", 20e-9),
+        ("20nV/√Hz", "V/Hz^0.5", 20e-9),
+        ("20 nV/√(Hz)", "V/Hz^0.5", 20e-9),
+        ("20 nV/sqrt(Hz)", "V/Hz^0.5", 20e-9),
+        ("20 nV/rtHz", "V/Hz^0.5", 20e-9),
+        ("1 uV/√kHz", "V/Hz^0.5", 1e-6 / 1e3**0.5),
+        ("3 pA/√Hz", "A/Hz^0.5", 3e-12),
+        ("0.52 √V", "V^0.5", 0.52),  # the root of a volt, not a volt
+        ("0.52 sqrt(V)", "V^0.5", 0.52),
+        ("4 V^2/√Hz^2", "V^2/Hz", 4.0),
     ],
 )
 def test_powers_products_and_quotients_scale_each_factor(text: str, unit: str, value: float) -> None:
@@ -77,6 +88,14 @@ def test_degrees_celsius_are_shifted_and_kelvin_is_not() -> None:
     assert read("-40 degC", "K") == pytest.approx(233.15, rel=1e-15)
     assert read("300 K", "K") == 300.0
     assert read("1 mV/degC", "V/K") == 1e-3  # a difference has no zero point
+
+
+def test_degrees_of_angle_are_no_degrees_of_temperature() -> None:
+    assert read("60 deg", "deg") == 60.0
+    assert read("60°", "deg") == 60.0
+    assert read(60, "deg") == 60.0
+    assert write(60.0, "deg") == "60 deg"
+    assert write(0.001, "deg") == "0.001 deg"
 
 
 @pytest.mark.parametrize(
@@ -93,6 +112,18 @@ def test_degrees_celsius_are_shifted_and_kelvin_is_not() -> None:
         ("5 Meg", "ohm", '"Meg" is not a unit'),
         ("40 mdB", "dB", '"mdB" is not a unit'),
         ("27 C", "K", 'such as "27 degC"'),
+        ("27 deg", "K", 'is in "deg", but a quantity in "K"'),
+        ("60 degC", "deg", 'is in "degC", but a quantity in "deg" is needed (such as "60 deg")'),
+        ("60 mdeg", "deg", '"mdeg" is not a unit'),
+        ("20 nV/Hz", "V/Hz^0.5", 'is in "nV/Hz", but a quantity in "V/Hz^0.5" is needed (such as "20 nV/√Hz")'),
+        ("20 nV", "V/Hz^0.5", 'is in "nV"'),
+        ("20 nV/√Hz", "V/Hz", 'is in "nV/√Hz"'),
+        ("1 √V", "V", 'is in "√V"'),
+        ("20 nV/√", "V/Hz^0.5", "is not a unit"),
+        ("20 nV/√√Hz", "V/Hz^0.5", "is not a unit"),
+        ("20 nV/sqrt()", "V/Hz^0.5", "is not a unit"),
+        ("20 nV/sqrt(Hz", "V/Hz^0.5", "is not a unit"),
+        ("1 rt", "V", "is not a unit"),
         ("0x10 V", "V", "is not a unit"),
         ("V", "V", "is not a number"),
         ("", "V", "is not a number"),
@@ -118,7 +149,9 @@ def test_what_is_no_quantity_of_the_unit_is_refused(value: object, unit: str, wo
     assert str(caught.value).isprintable()
 
 
-SHOWN = sorted({m.unit for m in (*CATALOGUE.values(), *FIGURES.values())} | set(UNITS.values()))
+SHOWN = sorted(
+    {m.unit for m in (*CATALOGUE.values(), *FIGURES.values())} | set(UNITS.values()) | {"V/Hz^0.5", "A/Hz^0.5", "deg"}
+)
 
 
 @given(value=st.floats(1e-17, 1e14), unit=st.sampled_from(SHOWN))
@@ -150,6 +183,10 @@ def test_areas_and_slopes_are_written_in_their_usual_units() -> None:
     assert write(0.0, "V") == "0 V"
     assert write_in(8.5e-3, "fF/um^2") == "8.5 fF/um^2"
     assert read("1 um^2", "m^2") == pytest.approx(1e-12, rel=1e-14)
+    assert write(2e-8, "V/Hz^0.5") == "20 nV/√Hz"
+    assert write_in(2e-8, "nV/√Hz") == "20 nV/√Hz"
+    assert written("V/Hz^0.5") == "V/√Hz"
+    assert written("V^0.5") == "V^0.5"
 
 
 def _units_of(schema: object) -> set[str]:

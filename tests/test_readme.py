@@ -11,9 +11,11 @@ import pytest
 from typer.testing import CliRunner
 
 from optisize.cli import app
+from optisize.problem.load import load_problem
 
 ROOT = Path(__file__).parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
+LEFT_OUT = "…"
 
 
 def blocks(language: str) -> list[str]:
@@ -48,7 +50,8 @@ def test_every_command_works(place: Path, monkeypatch: pytest.MonkeyPatch) -> No
         assert result.exit_code == 0, (line, result.output)
         assert result.stdout.strip(), line
         if line.startswith(("optisize front", "optisize assess")):
-            assert tidy(result.stdout) == tidy(shown_output(line)), line
+            output, shown_lines = tidy(result.stdout), tidy(shown_output(line))
+            assert as_shown(output, shown_lines) if LEFT_OUT in shown_lines else output == shown_lines, line
 
 
 def shown_output(command: str) -> str:
@@ -57,9 +60,42 @@ def shown_output(command: str) -> str:
     return block.split(f"$ {command}\n", 1)[1]
 
 
+def as_shown(output: list[str], shown: list[str]) -> bool:
+    """Tell whether lines are those that are shown; an ellipsis stands for any number of them."""
+    here = shown.index(LEFT_OUT) if LEFT_OUT in shown else len(shown)
+    if output[:here] != shown[:here]:
+        return False
+    if here == len(shown):
+        return len(output) == here
+    return any(as_shown(output[i:], shown[here + 1 :]) for i in range(here, len(output) + 1))
+
+
+def test_an_ellipsis_stands_for_lines_that_are_left_out() -> None:
+    assert as_shown(["a", "b"], ["a", "b"])
+    assert not as_shown(["a", "b"], ["a"])
+    assert not as_shown(["a"], ["a", "b"])
+    assert not as_shown(["a", "c"], ["a", "b"])
+    for shown in (["…"], ["…", "c", "d"], ["a", "…"], ["a", "…", "c", "…"], ["a", "b", "…", "c", "d"]):
+        assert as_shown(["a", "b", "c", "d"], shown)
+    for shown in (["…", "c"], ["b", "…"], ["…", "c", "…", "b", "…"], ["a", "…", "e", "…"]):
+        assert not as_shown(["a", "b", "c", "d"], shown)
+
+
 def tidy(text: str) -> list[str]:
     """Return the lines of an output without trailing blanks."""
     return [line.rstrip() for line in text.strip("\n").splitlines()]
+
+
+def test_the_lines_of_a_problem_fit_into_a_problem(place: Path) -> None:
+    problem = (place / "problems" / "thermopile-preamplifier.toml").read_text(encoding="utf-8")
+    (lines,) = blocks("toml")
+    tables = dict(re.findall(r"\[(\w+)\]\n(.*?)(?=\n\[|\Z)", lines, re.DOTALL))
+    problem = problem.replace("[goals]", f"[measures]\n{tables['measures']}\n[goals]\n{tables['goals']}")
+    (place / "with-lines.toml").write_text(
+        problem.replace("[limits]", f"[limits]\n{tables['limits']}"), encoding="utf-8"
+    )
+    loaded = load_problem(place / "with-lines.toml")
+    assert set(loaded.own_measures) == {"input_noise", "wideband"} <= set(loaded.needed)
 
 
 def test_the_python_lines_work(place: Path) -> None:

@@ -14,6 +14,7 @@ from optisize.front.compare import Better, dominating, latest_run_of
 from optisize.front.run import load_run
 from optisize.front.table import measure_names
 from optisize.problem.evaluate import Problem
+from optisize.problem.own_measures import origin
 from optisize.process.law import Array
 from optisize.stage.measures import FIGURES
 
@@ -66,8 +67,7 @@ def assess_sizing(
     run = load_run(directory) if directory is not None else None
     better = None
     if run is not None:
-        wanted = {(g.measure.name, g.sense) for g in problem.goals}
-        if wanted != {(g.measure.name, g.sense) for g in run.problem.goals}:
+        if _goals(problem) != _goals(run.problem):
             raise InputError(f"{directory}: was searched for other goals than this problem's")
         better = dominating(problem, values, run.front)
     return Assessment(
@@ -80,6 +80,11 @@ def assess_sizing(
         better=better,
         front=None if run is None else run.front,
     )
+
+
+def _goals(problem: Problem) -> set[tuple[object, ...]]:
+    """Return what tells the goals of one problem from another's: name, measure, settings and sense."""
+    return {(g.measure.name, origin(g.measure), tuple(g.measure.taken_at.items()), g.sense) for g in problem.goals}
 
 
 def _limit_rows(problem: Problem, values: Mapping[str, Array]) -> list[dict[str, Any]]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import json
 import os
 import shutil
@@ -12,7 +13,6 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-import numpy as np
 import pandas as pd
 
 from optisize.errors import InputError, OptisizeError
@@ -163,20 +163,29 @@ def load_run(directory: str | Path) -> Run:
 
 
 def _read_table(path: Path, wanted: Sequence[str]) -> pd.DataFrame:
-    """Read a table whose wanted columns hold a number in every row."""
+    """Read a table whose rows are whole and whose wanted columns hold a number in each of them."""
     try:
-        table = pd.read_csv(path, dtype=object)  # numbers are read below, to the last digit
+        text = path.read_text(encoding="utf-8")
+        _check_rows(path, text.splitlines())
+        table = pd.read_csv(io.StringIO(text), dtype=object)  # numbers are read below, to the last digit
         lacking = [name for name in wanted if name not in table.columns]
         if lacking:
             raise InputError(f"{path}: the run is damaged: the column {lacking[0]} is missing")
         whole = {c: int if c == "design" else float for c in table.columns}
-        table = table.replace(UNLIMITED, np.inf).astype(whole)
+        table = table.replace(UNLIMITED).astype(whole)
     except (ValueError, OSError) as error:
         raise InputError(f"{path}: the run is damaged: {error}") from None
     empty = [name for name in wanted if table[name].isna().any()]
     if empty:
         raise InputError(f"{path}: the run is damaged: the column {empty[0]} has a row without a number")
     return table
+
+
+def _check_rows(path: Path, lines: Sequence[str]) -> None:
+    """Raise InputError for a row that ends before its last column."""
+    for number, line in enumerate(lines, start=1):
+        if line and line.count(",") < lines[0].count(","):
+            raise InputError(f"{path}: the run is damaged: line {number} is cut short")
 
 
 def _read_info(path: Path) -> dict[str, Any]:

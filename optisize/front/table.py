@@ -7,12 +7,13 @@ from collections.abc import Mapping
 import numpy as np
 import pandas as pd
 
-from optisize.errors import InputError, nearest
+from optisize.errors import InputError, listing, nearest
 from optisize.problem.evaluate import Problem
 from optisize.process.law import Array
-from optisize.stage.measures import CATALOGUE, Measure, find
+from optisize.stage.measures import CATALOGUE, Measure
 
-UNLIMITED = "unlimited"
+LISTED = 300  # characters of the columns' names in a message
+UNLIMITED = {"unlimited": np.inf, "-unlimited": -np.inf}  # infinite figures in words
 
 
 def column(name: str, unit: str) -> str:
@@ -24,13 +25,13 @@ def units(problem: Problem) -> dict[str, str]:
     """Return the unit of every size and measure of a problem's designs, in the order of the columns."""
     named = {size.name: size.unit for size in problem.topology.sizes}
     for name in measure_names(problem):
-        named[name] = find(name, problem.topology).unit
+        named[name] = problem.find(name).unit
     return named
 
 
 def measure_names(problem: Problem) -> tuple[str, ...]:
-    """Return the goals first, then the limits, then the rest of the catalogue."""
-    return tuple(dict.fromkeys([*problem.needed, *CATALOGUE]))
+    """Return the goals first, then the limits, the problem's other measures, and the rest of the catalogue."""
+    return tuple(dict.fromkeys([*problem.needed, *problem.own_measures, *CATALOGUE]))
 
 
 def design_table(problem: Problem, sizes: Mapping[str, Array]) -> pd.DataFrame:
@@ -52,7 +53,7 @@ def sizes_of(problem: Problem, table: pd.DataFrame) -> dict[str, Array]:
 
 def values_of(problem: Problem, table: pd.DataFrame) -> dict[str, Array]:
     """Return the measures of the designs of a table, each (N,)."""
-    return {name: measured(table, find(name, problem.topology)) for name in measure_names(problem)}
+    return {name: measured(table, problem.find(name)) for name in measure_names(problem)}
 
 
 def measured(table: pd.DataFrame, measure: Measure) -> Array:
@@ -67,7 +68,9 @@ def find_column(table: pd.DataFrame, name: str) -> str:
     """
     plain = {str(c).split(" [")[0]: str(c) for c in table.columns}
     if name not in plain:
-        columns = ", ".join(plain)
+        columns = listing(plain)
+        if len(columns) > LISTED:  # what the problem names comes first
+            columns = f"{columns[: columns.rindex(', ', 0, LISTED)]}, …"
         raise InputError(f'"{name}" is no column of the front; its columns are {columns}{nearest(name, plain)}')
     return plain[name]
 
@@ -78,5 +81,5 @@ def unit_of(heading: str) -> str:
 
 
 def to_csv(table: pd.DataFrame) -> str:
-    """Return a table as CSV with every digit, an infinite figure as ``unlimited``."""
-    return table.replace([np.inf], UNLIMITED).to_csv(index=False)
+    """Return a table as CSV with every digit, an infinite figure as ``unlimited`` or ``-unlimited``."""
+    return table.replace({value: word for word, value in UNLIMITED.items()}).to_csv(index=False)

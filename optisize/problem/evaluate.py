@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field
 from functools import cached_property
@@ -177,7 +177,7 @@ class Problem:
 
         def part(start: int) -> list[Array]:
             chosen = {name: np.asarray(v, dtype=float)[start : start + CHUNK] for name, v in sizes.items()}
-            return _measure_chunk(self.circuit(chosen), wanted)
+            return measured(Analysis(self.circuit(chosen)), wanted)
 
         if threads > 1 and len(starts) > 1:
             with ThreadPoolExecutor(threads) as pool:
@@ -211,13 +211,12 @@ class Problem:
                 )
 
 
-def _measure_chunk(circuit: Circuit, wanted: list[Measure]) -> list[Array]:
-    """Return each measure (N,) of one chunk; designs without an operating point are left out of the analysis."""
-    analysis = Analysis(circuit)
+def measured(analysis: Analysis, wanted: Sequence[Measure]) -> list[Array]:
+    """Return each measure (N,) of solved designs; those without an operating point are left out, and not a number."""
     solved = np.flatnonzero(analysis.converged)
-    if len(solved) == circuit.designs:
+    if len(solved) == analysis.circuit.designs:
         return [m.of(analysis) for m in wanted]
-    results = [np.full(circuit.designs, np.nan) for _ in wanted]
+    results = [np.full(analysis.circuit.designs, np.nan) for _ in wanted]
     if len(solved):
         part = analysis.take(solved)
         for result, m in zip(results, wanted, strict=True):

@@ -69,13 +69,12 @@ def _named(leaf: dict[str, Any], depth: int = 3) -> dict[str, Any]:
 def _measures_schema() -> dict[str, Any]:
     """Return the JSON Schema of the table that sets the parameters of measures."""
     known = {name: _settings_schema(name, m.parameters) for name, m in with_parameters().items()}
+    other = [{**leaf, "required": ["of"]} for leaf in known.values()]
     return {
         "type": "object",
         "propertyNames": {"pattern": f"^{NAME}$", "maxLength": LONGEST_NAME},
         "properties": known,
-        "additionalProperties": {"anyOf": [{**leaf, "required": ["of"]} for leaf in known.values()]}
-        if known
-        else False,
+        "additionalProperties": {"anyOf": other} if other else False,
     }
 
 

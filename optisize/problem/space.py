@@ -18,7 +18,7 @@ from optisize.process.law import Array
 from optisize.quantities import write
 from optisize.stage.assembly import Topology
 from optisize.stage.elements import Size
-from optisize.stage.layout import snap_length, snap_resistance, snap_width
+from optisize.stage.layout import finger_count, resistor_length, snap_length, snap_resistance, snap_width
 
 CURRENT_DIGITS = 3  # a bias current is set to three significant digits
 
@@ -66,11 +66,15 @@ class SizingSpace:
     def _even_groups(self) -> frozenset[str]:
         return frozenset(t.group for t in self.topology.transistors if t.even_fingers)
 
+    def _even(self, size: Size) -> bool:
+        """Whether a width is drawn with an even number of fingers."""
+        return size.name.rpartition(".")[0] in self._even_groups
+
     def snap(self, size: Size, values: Array) -> Array:
         """Return the nearest values of one size that can be drawn or set, (N,); snapping twice changes nothing."""
         grid = self.process.grid
         if size.kind == "width":
-            return snap_width(values, grid, size.name.rpartition(".")[0] in self._even_groups)
+            return snap_width(values, grid, self._even(size))
         if size.kind == "length":
             return snap_length(values, grid)
         if size.kind == "resistance":
@@ -78,6 +82,37 @@ class SizingSpace:
         if size.kind == "count":
             return np.maximum(np.rint(values), 1.0)
         return round_significant(values, CURRENT_DIGITS)
+
+    def neighbours(self, size: Size, value: float) -> tuple[float | None, float | None]:
+        """Return the next values of one size below and above one value [SI] that can be drawn or set.
+
+        None where there is none: below one unit, below what the process can draw, above its longest channel.
+        """
+        pitch, reach = self._pitch(size, value)
+        near: Array = value + pitch * np.arange(-reach, reach + 1.0)
+        found = self.snap(size, near[near > 0.0])
+        if size.kind == "length":
+            found = found[found <= self.process.grid.maximum_length * (1.0 + 1e-9)]
+        below, above = found[found < value * (1.0 - 1e-9)], found[found > value * (1.0 + 1e-9)]
+        return float(below.max()) if len(below) else None, float(above.min()) if len(above) else None
+
+    def _pitch(self, size: Size, value: float) -> tuple[float, int]:
+        """Return the distance whose multiples part the values that can be drawn, and how many a gap near one has.
+
+        The widths of f fingers are f steps apart, or as far as two fingers of the narrowest where two more are begun.
+        A current has ten times as many values below a power of ten as above it.
+        """
+        grid = self.process.grid
+        if size.kind == "width":
+            fingers = int(finger_count(np.array(value), grid, self._even(size)))
+            return grid.step, fingers + 2 + 2 * int(np.ceil(grid.minimum_width / grid.step))
+        if size.kind == "length":
+            return grid.step, 2
+        if size.kind == "resistance":
+            return grid.step / float(resistor_length(np.array(1.0), self.process.resistor)), 2
+        if size.kind == "count":
+            return 1.0, 2
+        return float(10.0 ** (np.floor(np.log10(value) + 1e-9) - CURRENT_DIGITS)), 20
 
     def fitted(self, size: Size, low: float, high: float) -> tuple[float, float]:
         """Return the smallest and the largest value between two ends that can be drawn or set.

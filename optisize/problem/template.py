@@ -30,6 +30,10 @@ tail.length  = ["0.18 um", "8 um"]
 tail.units   = [1, 16]                  # units in the tail; the bias branch has one
 bias.current = ["100 nA", "20 uA"]      # an ideal tail has tail.current instead of tail.* and bias.current
 
+# [measures]                       # where measures with parameters are taken; each has a default
+# input_noise = {{ frequency = "10 Hz" }}                        # of the catalogue
+# wideband    = {{ of = "input_noise", frequency = "100 kHz" }}  # the same again, under a name of your own
+
 [goals]                            # one to many; each "max" or "min"
 gain           = "max"
 cmrr           = "max"

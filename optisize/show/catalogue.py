@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import math
+from dataclasses import asdict
 from typing import Any
 
+from optisize.problem.own_measures import parameter_line
 from optisize.process.card import Channel, Process, built_in_names, load_process
 from optisize.process.characteristics import Characteristic, characteristic, lengths, parameters
 from optisize.quantities import write
 from optisize.show.terminal import print_table
-from optisize.stage.measures import CATALOGUE, FIGURES, Measure
+from optisize.stage.measures import CATALOGUE, FIGURES, Measure, Parameter
 
 
 def measure_records() -> list[dict[str, Any]]:
@@ -21,14 +24,21 @@ def measure_records() -> list[dict[str, Any]]:
             "of": of,
             "definition": m.definition,
             "source": m.source,
+            "parameters": [_parameter_record(p) for p in m.parameters],
         }
         for catalogue, of in ((CATALOGUE, "stage"), (FIGURES, "transistor"))
         for name, m in catalogue.items()
     ]
 
 
+def _parameter_record(parameter: Parameter) -> dict[str, Any]:
+    """Return a parameter as plain data, a bound that is open as nothing."""
+    bounds = {"low": parameter.low, "high": parameter.high}
+    return {**asdict(parameter), **{key: b if math.isfinite(b) else None for key, b in bounds.items()}}
+
+
 def print_measures() -> None:
-    """Print every measure with unit, sense, definition and source."""
+    """Print every measure with unit, sense, definition, parameters and source."""
     print_table("measures of a stage", ["measure", "unit", "better", "definition; source"], _rows(CATALOGUE), left=4)
     print_table(
         "\nfigures of each transistor, as goals or limits named like input.p.gm",
@@ -39,7 +49,14 @@ def print_measures() -> None:
 
 
 def _rows(catalogue: dict[str, Measure]) -> list[list[str]]:
-    return [[name, m.unit, m.better, f"{m.definition} ({m.source})"] for name, m in catalogue.items()]
+    return [[name, m.unit, m.better, _text(m)] for name, m in catalogue.items()]
+
+
+def _text(measure: Measure) -> str:
+    """Return definition, parameters with their defaults, and source of a measure."""
+    lines = "; ".join(map(parameter_line, measure.parameters))
+    heading = "Parameter" if len(measure.parameters) == 1 else "Parameters"
+    return f"{measure.definition}{f' {heading}: {lines}.' if lines else ''} ({measure.source})"
 
 
 def process_records() -> list[dict[str, Any]]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import textwrap
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -15,7 +16,9 @@ import numpy as np
 from optisize.errors import OptisizeError
 from optisize.front.run import Run
 from optisize.front.table import measured
+from optisize.problem.own_measures import label
 from optisize.process.law import Array
+from optisize.quantities import UNPREFIXED, written
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -32,6 +35,7 @@ _PREFIXES = (
     (1e-9, "n"),
     (1e-12, "p"),
 )
+LINE = 40  # letters that fit beside an axis
 _LOG_SPAN = 8.0  # an axis whose figures span more than this factor is logarithmic
 
 
@@ -40,7 +44,7 @@ class Axis:
     """One goal as an axis: values in a readable unit, and which way is better.
 
     Attributes:
-        label: name and unit.
+        label: name, settings of its parameters, and unit.
         values: (N,), in that unit.
         better: ``max`` or ``min``.
         logarithmic: whether the axis is.
@@ -83,7 +87,7 @@ def axis_of(run: Run, goal_index: int) -> Axis:
     )
     positive = values[np.isfinite(values) & (values > 0)]
     wide = m.scale == "log" and len(positive) == len(values) > 0 and positive.max() / positive.min() > _LOG_SPAN
-    name = m.name.replace("_", " ")
+    name = label(m).replace("_", " ")
     return Axis(f"{name} [{unit}]" if unit else name, values / factor, goal.sense, bool(wide), bounds)
 
 
@@ -95,10 +99,10 @@ def _readable(values: Array, unit: str) -> tuple[float, str]:
         return 1e6, "V/us"
     finite = np.abs(values[np.isfinite(values)])
     middle = float(np.median(finite)) if len(finite) else 1.0
-    if unit in ("dB", "", "V/V") or middle == 0.0:
-        return 1.0, unit
+    if unit in UNPREFIXED or middle == 0.0:
+        return 1.0, written(unit)
     factor, prefix = next(((f, p) for f, p in _PREFIXES if middle >= f), _PREFIXES[-1])
-    return factor, f"{prefix.strip()}{unit}"
+    return factor, f"{prefix.strip()}{written(unit)}"
 
 
 def trade_offs(run: Run) -> list[TradeOff]:
@@ -142,14 +146,14 @@ def _draw_trade_off(figure: Figure, spot: Axes, shown: TradeOff) -> None:
         norm = _norm(colour)
         drawn = spot.scatter(shown.x.values, shown.y.values, c=colour.values, cmap="viridis", norm=norm, **options)
         bar = figure.colorbar(drawn, ax=spot)
-        bar.set_label(f"{colour.label}, {_way(colour)}")
+        bar.set_label(_heading(colour))
     else:
         spot.scatter(shown.x.values, shown.y.values, color="#31688e", **options)
     for axis, set_label, set_scale, line in (
         (shown.x, spot.set_xlabel, spot.set_xscale, spot.axvline),
         (shown.y, spot.set_ylabel, spot.set_yscale, spot.axhline),
     ):
-        set_label(f"{axis.label}, {_way(axis)}")
+        set_label(_heading(axis))
         if axis.logarithmic:
             set_scale("log")
         for name, bound in axis.bounds:
@@ -162,8 +166,11 @@ def _draw_trade_off(figure: Figure, spot: Axes, shown: TradeOff) -> None:
     spot.set_axisbelow(True)
 
 
-def _way(axis: Axis) -> str:
-    return "higher is better" if axis.better == "max" else "lower is better"
+def _heading(axis: Axis) -> str:
+    """Return what stands at an axis, in lines that are no longer than the axis."""
+    way = "higher is better" if axis.better == "max" else "lower is better"
+    whole = f"{axis.label}, {way}"
+    return whole if len(whole) <= LINE else f"{textwrap.fill(axis.label, LINE)},\n{way}"
 
 
 def _norm(axis: Axis) -> Any:

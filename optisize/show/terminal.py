@@ -20,8 +20,8 @@ from optisize.front.run import Run
 from optisize.front.summary import Binding, Extreme
 from optisize.front.table import column, unit_of
 from optisize.problem.evaluate import Problem
+from optisize.problem.own_measures import label
 from optisize.quantities import write
-from optisize.stage.measures import find
 
 CAUTION = "A starting point for your simulator, not a sign-off: layout, reliability and ESD need the foundry's models."
 
@@ -132,13 +132,14 @@ def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Bindin
 
 
 def print_front(run: Run, table: pd.DataFrame) -> None:
-    """Print designs: the goals first, then the sizes, then the limits."""
+    """Print designs: the goals first, then the sizes, then the limits, then other measures that the problem names."""
     problem = run.problem
     goals = [column(g.measure.name, g.measure.unit) for g in problem.goals]
     sizes = [column(s.name, s.unit) for s in problem.topology.sizes]
     free = [column(r.size.name, r.size.unit) for r in problem.space.free]
     limits = [column(x.measure.name, x.measure.unit) for x in problem.limits]
-    chosen = list(dict.fromkeys(["design", *goals, *(c for c in sizes if c in free), *limits]))
+    own = [c for c in (column(m.name, m.unit) for m in problem.own_measures.values()) if c in table]
+    chosen = list(dict.fromkeys(["design", *goals, *(c for c in sizes if c in free), *limits, *own]))
     headings = [c.split(" [")[0] for c in chosen]
     rows = [
         [str(int(row["design"]))] + [write(float(row[c]), unit_of(c)) for c in chosen[1:]]
@@ -156,12 +157,8 @@ def print_assessment(problem: Problem, report: Assessment) -> None:
     print_table(
         "sizes, on the process grid", ["size", "value"], [[n, write(v, units[n])] for n, v in report.sizes.items()]
     )
-    rows = [
-        [name, write(value, find(name, problem.topology).unit)]
-        for name, value in report.measures.items()
-        if "." not in name
-    ]
-    print_table("\nmeasures", ["measure", "value"], rows)
+    measures = [(problem.find(name), value) for name, value in report.measures.items() if "." not in name]
+    print_table("\nmeasures", ["measure", "value"], [[label(m), write(v, m.unit)] for m, v in measures])
     rows = [
         [t, *(write(report.measures[f"{t}.{figure}"], unit, 3) for figure, unit in _SHOWN.items())]
         for t in report.transistors
@@ -178,6 +175,10 @@ def print_assessment(problem: Problem, report: Assessment) -> None:
     ]
     print_table("\nlimits", ["limit", "bound", "value", ""], rows)
     _print_better(problem, report)
+
+
+def print_caution() -> None:
+    """Print what no figure here replaces."""
     console().print(CAUTION)
 
 
@@ -203,9 +204,9 @@ def _gain(value: float, unit: str) -> str:
 
 
 def json_number(value: float) -> float | str | None:
-    """Return a number as JSON can hold it: ``unlimited`` for infinity, null for what is undefined."""
+    """Return a number as JSON can hold it: ``unlimited`` or ``-unlimited`` for infinity, null for what is undefined."""
     if isinstance(value, np.generic):
         value = value.item()
     if math.isnan(value):
         return None
-    return "unlimited" if math.isinf(value) else value
+    return write(value, "") if math.isinf(value) else value

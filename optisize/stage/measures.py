@@ -185,15 +185,15 @@ def input_range_high(a: Analysis) -> Array:
 
 @_measure("V", "max", scale="log", source=_HANDBOOK, parameters=(_DEPARTURE,))
 def linear_range(a: Analysis, departure: float = 0.01) -> Array:
-    """Differential input voltage, either way, at which the current into outputs that are held at rest departs from its
-    tangent by 1 %, or by another departure that is stated."""
+    """Differential input voltage, either way, at which the current into the output departs from its tangent by 1 %, or
+    by another departure that is stated, while the output is held at rest (both drains where the sides are alike)."""
     return ranges.linear_range(a, departure)
 
 
 @_measure("V", "max", scale="log", source=_HANDBOOK)
 def steering_voltage(a: Analysis) -> Array:
-    """Differential input voltage that steers the pair: one input transistor is left with 1 % of its current, the
-    outputs held at rest."""
+    """Differential input voltage that steers the pair: one input transistor is left with 1 % of its current, while the
+    output is held at rest (both drains where the sides are alike)."""
     return ranges.steering_voltage(a)
 
 

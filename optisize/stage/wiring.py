@@ -267,8 +267,11 @@ def moving(topology: Topology) -> Moving:
 
 @lru_cache(maxsize=256)
 def held(topology: Topology) -> Moving:
-    """Return the part that the inputs can move while the outputs, and what controls them, are held where they are."""
-    outputs = frozenset(node for node, _ in topology.output)
+    """Return the part that the inputs can move while the outputs, and what controls them, are held where they are.
+
+    Both sides of a stage whose sides are alike are held, whichever of them is the output.
+    """
+    outputs = frozenset(("left", "right") if topology.symmetric else (node for node, _ in topology.output))
     return _part(topology, _still(topology) | outputs | {c.node for c in topology.controls}, outputs)
 
 

@@ -13,8 +13,8 @@ from tests.conftest import Cli
 from tests.problem.test_bad_input import refused
 
 
-def _rows(text: str) -> list[dict[str, float]]:
-    return [{k: float(v) for k, v in row.items()} for row in csv.DictReader(io.StringIO(text))]
+def _rows(text: str) -> list[dict[str, float | None]]:
+    return [{k: float(v) if v else None for k, v in row.items()} for row in csv.DictReader(io.StringIO(text))]
 
 
 @pytest.mark.parametrize(

@@ -233,6 +233,13 @@ def _arrays(**arrays: np.ndarray) -> Callable[[Path], object]:
     return lambda run: np.savez(run / "checkpoint.npz", **arrays)  # type: ignore[arg-type]
 
 
+def _without_first_value(text: str) -> str:
+    """The table with nothing in the second column of its first row."""
+    heading, first, rest = text.split("\n", 2)
+    number, _, values = first.split(",", 2)
+    return f"{heading}\n{number},,{values}\n{rest}"
+
+
 DAMAGES: dict[str, tuple[Callable[[Path], object], list[str]]] = {
     "no size": (_without("input.width [m]"), ["front.csv", "the column input.width [m] is missing"]),
     "no goal": (_without("gain [dB]"), ["front.csv", "the column gain [dB] is missing"]),
@@ -241,7 +248,8 @@ DAMAGES: dict[str, tuple[Callable[[Path], object], list[str]]] = {
     "front empty": (_edit("front.csv", lambda _: ""), ["front.csv", "damaged"]),
     "front binary": (lambda r: (r / "front.csv").write_bytes(random.Random(2).randbytes(400)), ["front.csv"]),
     "front ragged": (_edit("front.csv", lambda t: t + "1," * 90 + "\n"), ["front.csv", "damaged"]),
-    "front cut": (_edit("front.csv", lambda t: t[:-200]), ["front.csv", "without a number"]),
+    "front cut": (_edit("front.csv", lambda t: t[:-200]), ["front.csv", "damaged", "cut short"]),
+    "front gap": (_edit("front.csv", _without_first_value), ["front.csv", "without a number"]),
     "front word": (_edit("front.csv", lambda t: t.replace("\n1,", "\n1,wide", 1)), ["front.csv", "wide"]),
     "history empty": (_edit("history.csv", lambda _: ""), ["history.csv", "damaged"]),
     "history other": (_edit("history.csv", lambda _: "a,b\n1,2\n"), ["history.csv", "evaluations is missing"]),
@@ -294,3 +302,12 @@ def test_a_table_of_designs_leaves_out_what_misses_a_limit(finished_run: Path) -
     table = design_table(problem, sizes)
     assert list(table["design"]) == list(range(1, feasible.sum() + 1))
     assert list(table["gain [dB]"]) == sorted(table["gain [dB]"], reverse=True)
+
+
+def test_infinite_figures_of_either_sign_and_undefined_ones_survive_a_file(tmp_path: Path, finished_run: Path) -> None:
+    run = load_run(finished_run)
+    run.front.loc[[0, 1, 2], "area [m^2]"] = [np.inf, -np.inf, 3e-9]
+    run.front.loc[[0, 1, 2], "slew_rate [V/s]"] = [np.nan, -np.inf, np.inf]
+    run.save(tmp_path / "odd")
+    assert "-unlimited" in (tmp_path / "odd" / "front.csv").read_text(encoding="utf-8")
+    pd.testing.assert_frame_equal(load_run(tmp_path / "odd").front, run.front, check_exact=True)

@@ -77,6 +77,9 @@ CASES = {
     "units text": (("tail.units", 'tail.units = "four"'), ["sizes.tail.units", "is not a number"]),
     "units with unit": (("tail.units", 'tail.units = "4 um"'), ["sizes.tail.units", '"um"', "plain number"]),
     "units none": (("tail.units", "tail.units = 0"), ["sizes.tail.units", "above zero"]),
+    # the table of measures; what is wrong inside it has tests of its own
+    "measures array": (("[goals]", "[[measures]]\n[goals]"), ["measures:", "a table is needed"]),
+    "measures name": (("[goals]", "[measurs]\n[goals]"), ["measurs: unknown key", '"measures"?']),
     # the other tables
     "stage word": (("input", 'input = "npn"'), ["stage.input", '"npn"', "nmos, pmos"]),
     "stage near": (("tail", 'tail = "singel"'), ["stage.tail", 'mean "single"?']),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import re
 import tomllib
@@ -11,8 +12,9 @@ from typing import Any
 
 import pytest
 
+from optisize.errors import InputError
 from tests.conftest import Cli
-from tests.problem.texts import MIRROR, RESISTOR, SIZING, changed
+from tests.problem.texts import MIRROR, RESISTOR, SIZING, changed, loaded
 
 PROBLEMS = sorted((Path(__file__).parents[2] / "problems").glob("*.toml"))
 PROCESSES = sorted(Path(str(resources.files("optisize.process").joinpath("data"))).glob("*.toml"))
@@ -76,6 +78,39 @@ def test_sizings_and_new_problems_fit_the_schema(schema: Any, cli: Cli) -> None:
     assert fits(tomllib.loads(MIRROR), root, root)
     cli("new", "fresh")
     assert fits(tomllib.loads(Path("fresh.toml").read_text(encoding="utf-8")), root, root)
+
+
+NOISE = """[measures]
+input_noise = { frequency = "10 Hz" }
+wideband = { of = "input_noise", frequency = 1e5 }
+total = { of = "input_noise_total", band = ["1 Hz", 1000] }
+[goals]"""
+
+
+@pytest.mark.parametrize(
+    ("edit", "good"),
+    [
+        (("wideband", "wideband = { of = 'input_noise' }"), True),
+        (("wideband", "input_noise_total = { band = [1, 2] }"), True),
+        (("wideband", "wideband = { frequency = 1e5 }"), False),
+        (("wideband", "wideband = { of = 'gain' }"), False),
+        (("wideband", "wideband = { of = 'input_noise', band = [1, 2] }"), False),
+        (("input_noise", "input_noise = { freqency = 1 }"), False),
+        (("input_noise", "input_noise = 10"), False),
+        (("total", "total = { of = 'input_noise_total', band = 1 }"), False),
+        (("total", "total = { of = 'input_noise_total', band = [1] }"), False),
+    ],
+)
+def test_measures_fit_the_schema_where_the_package_reads_them(
+    schema: Any, edit: tuple[str, str], good: bool, tmp_path: Path
+) -> None:
+    root = schema("problem")
+    text = changed(RESISTOR, ("[goals]", NOISE))
+    assert fits(tomllib.loads(text), root, root)
+    text = changed(text, edit)
+    assert fits(tomllib.loads(text), root, root) is good
+    with contextlib.nullcontext() if good else pytest.raises(InputError):
+        loaded(tmp_path, text)
 
 
 @pytest.mark.parametrize(

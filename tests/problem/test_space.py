@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +14,7 @@ from optisize.errors import InputError
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_sizing
 from optisize.problem.space import SizingSpace, round_significant
+from optisize.stage.elements import Size
 from tests.problem.texts import MIRROR, RESISTOR, SIZING, changed, loaded
 
 QUICK = settings(max_examples=60, derandomize=True, deadline=None, suppress_health_check=[HealthCheck.too_slow])
@@ -89,10 +91,52 @@ def test_the_scale_is_logarithmic(space: SizingSpace) -> None:
 
 
 @given(value=st.floats(1e-12, 1e12), digits=st.integers(1, 6))
+@QUICK
 def test_rounding_keeps_as_many_digits_as_asked(value: float, digits: int) -> None:
     rounded = round_significant(np.array([value]), digits)[0]
     assert rounded == pytest.approx(float(f"{value:.{digits}g}"), rel=10.0**-digits)
     assert abs(rounded - value) <= 0.51 * 10.0 ** (np.floor(np.log10(value)) + 1 - digits)
+
+
+AWKWARD = {"minimum_width": 0.22e-6, "maximum_finger": 0.3e-6, "step": 5e-9}  # few widths with that many fingers
+NARROW = {"minimum_width": 10e-9, "maximum_finger": 1e-6, "step": 5e-9}  # the number of fingers alone makes the gaps
+SPANS = {"width": 4.5e-6, "length": 0.2e-6, "resistance": 100.0, "count": 3.0}  # wider than any gap
+
+
+@pytest.mark.parametrize("other", [{}, AWKWARD, NARROW])
+@given(log=st.floats(-6.3, -4.3), exact=st.booleans())
+@QUICK
+def test_neighbours_are_the_nearest_that_a_fine_sweep_finds(
+    space: SizingSpace, other: dict[str, float], log: float, exact: bool
+) -> None:
+    grid = space.process.grid.model_copy(update=other)
+    space = replace(space, process=space.process.model_copy(update={"grid": grid}))
+    for size in sizes_of_every_kind(space):
+        value = 10.0**log * {"resistance": 1e9, "count": 1e6, "length": 0.1}.get(size.kind, 1.0)
+        value = float(space.snap(size, np.array([value]))[0]) if exact else value
+        sweep = value + SPANS.get(size.kind, 0.03 * value) * np.linspace(-1.0, 1.0, 9001)
+        drawable = np.unique(space.snap(size, sweep[sweep > 0.0]))
+        down, up = space.neighbours(size, value)
+        below, above = drawable[drawable < value * (1 - 1e-9)], drawable[drawable > value * (1 + 1e-9)]
+        assert up == pytest.approx(above.min(), rel=1e-12, abs=0.0), size
+        assert down == (pytest.approx(below.max(), rel=1e-12, abs=0.0) if len(below) else None), size
+        for near in (down, up):
+            assert near is None or space.snap(size, np.array([near]))[0] == pytest.approx(near, rel=1e-12, abs=0.0)
+
+
+def sizes_of_every_kind(space: SizingSpace) -> list[Size]:
+    """Return the sizes of a stage, and a resistor beside them."""
+    return [*space.topology.sizes, Size("load.resistance", "resistance", "")]
+
+
+def test_there_is_nothing_to_draw_beyond_the_ends(space: SizingSpace) -> None:
+    grid, sizes = space.process.grid, {size.name: size for size in space.topology.sizes}
+    assert space.neighbours(sizes["tail.units"], 1.0) == (None, 2.0)
+    assert space.neighbours(sizes["input.length"], grid.minimum_length)[0] is None
+    assert space.neighbours(sizes["input.length"], grid.maximum_length)[1] is None
+    assert space.neighbours(sizes["tail.width"], grid.minimum_width)[0] is None
+    assert space.neighbours(sizes["input.width"], 2.0 * grid.minimum_width)[0] is None
+    assert space.neighbours(sizes["bias.current"], 1e-6) == pytest.approx((999e-9, 1.01e-6), rel=1e-12, abs=0.0)
 
 
 def test_a_manual_sizing_is_put_on_the_grid(tmp_path: Path) -> None:

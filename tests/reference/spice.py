@@ -3,13 +3,32 @@
 Written from the SPICE manuals, not from the package's equations: it takes process values, sizes and the terminals of
 the elements. Many sized stages stand side by side in one deck, each with sources of its own, so that one process of
 the simulator solves them all. Names: node ``tail`` of stage 3 is ``tail_3``, transistor ``input.p`` is ``m_input_p_3``.
+
+What was found by trying (version 39), and what follows for a bench:
+
+- One ``ac lin 1 1 1`` is as good as DC and serves every stage at once. ``alter @v_supply_3[acmag]=1`` also works on a
+  source without an AC value. An output resistance is the voltage under an AC current into the output, not ``tf``: that
+  takes one command a stage and crashes on a large deck. An input capacitance is the imaginary part of the current of
+  the input's source over 2 pi f and its voltage, at 1 Hz as at 1 mHz.
+- An ideal control as a source with a gain of 1e4 and more mostly does not converge, and a loop of voltage sources
+  (no gain at all) is singular as long as no transistor conducts. A current into a node that nothing loads is exact and
+  converges, see `control` and `nulled_input`.
+- At reltol 1e-7 a voltage near 2 V is known to 0.2 uV only. Distortion needs ``option reltol=1e-10 vntol=1e-12``
+  before its analysis, which costs nothing. Its static curve is ``dc v_theta 0 16 1`` with a source
+  ``b_d_3 d_3 0 v=amplitude*cos(pi/16*v(theta))`` a stage, and a cosine transform (type 1); one operating point of
+  sixteen copies of every stage takes thirty times as long.
+- ``noise``: densities are V/sqrt(Hz) (V^2/Hz after ``set sqrnoise``), totals are V (V^2). A single frequency makes one
+  plot; more make two, of which the last, current one holds the totals, so that ``setplot previous`` comes before
+  ``write``. The totals are exact for power laws between the points. The output may be ``v(a,b)``. The source has to
+  have an AC value, which may be zero; its magnitude does not matter, nor do other sources. Every command repeats the
+  operating point of the whole deck, 45 ms for forty stages; see `output_chain` for all of them at once.
 """
 
 from __future__ import annotations
 
 import subprocess
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -18,10 +37,12 @@ from optisize.process.card import Process
 from optisize.process.law import Array
 from optisize.process.parameters import TransistorParameters
 from optisize.stage.circuit import Circuit
+from optisize.stage.elements import REFERENCE, Control
 
 OXIDE_PERMITTIVITY = 3.9 * 8.854214871e-12  # F/m, the constant with which the level-1 model reads TOX
 OPTIONS = ".options reltol=1e-7 abstol=1e-16 vntol=1e-10 gmin=1e-16 temp=27 tnom=27 itl1=500"
-NODES = {"in+": "inp", "in-": "inn", "supply": "vdd", "ground": "0"}
+LOOP = 1e-6  # A/V, of ideal loops; a thousand times more and they often do not converge
+NODES = {"in+": "inp", "in-": "inn", "supply": "vdd", "ground": "gnd"}
 
 
 @dataclass(frozen=True)
@@ -50,9 +71,9 @@ def number(value: float) -> str:
     return f"{value:.17g}"
 
 
-def node(name: str, k: int) -> str:
-    """Return the name in the deck of a node of stage `k`."""
-    return "0" if name == "ground" else f"{NODES.get(name, name)}_{k}"
+def node(name: str, k: int, *, own_ground: bool = False) -> str:
+    """Return the name in the deck of a node of stage `k`; the ground is that of the deck or one of the stage's own."""
+    return "0" if name == "ground" and not own_ground else f"{NODES.get(name, name)}_{k}"
 
 
 def part(name: str, k: int) -> str:
@@ -61,7 +82,10 @@ def part(name: str, k: int) -> str:
 
 
 def level1(t: Transistor, process: Process) -> list[str]:
-    """Return a level-1 transistor with a model of its own, since lambda follows its length; junctions do not leak."""
+    """Return a level-1 transistor with a model of its own, since lambda follows its length; junctions do not leak.
+
+    Its white noise current is 4 k T (2/3 gm) in both regions. It carries no flicker noise; see `with_flicker`.
+    """
     card: TransistorParameters = process.nmos if t.channel == "n" else process.pmos
     values = {
         "level": 1,
@@ -90,16 +114,59 @@ def level1(t: Transistor, process: Process) -> list[str]:
     ]
 
 
-def transistors(circuit: Circuit, k: int) -> list[Transistor]:
+def with_flicker(device: Device) -> Device:
+    """Return the same device with flicker noise: a noise voltage in series with its gate, K / f^Af.
+
+    The level-1 model cannot do it: there is no NLEV, and its flicker current is KF |Id|^AF / (f W L Cox^2), with the
+    exponent of f always one and gm nowhere. A resistor's model has the exponent EF, and with AF = 0 its flicker current
+    KF / f^EF flows without any bias. A kilohm and a gain of 1e-6 leave 1.7e-29 V^2/Hz of its own white noise.
+    """
+
+    def flickering(t: Transistor, process: Process) -> list[str]:
+        card: TransistorParameters = process.nmos if t.channel == "n" else process.pmos
+        density = card.flicker_coefficient / (card.oxide_capacitance * t.width * t.length)
+        gate = f"gate_{t.name}"
+        return [
+            *device(replace(t, gate=gate), process),
+            f"e_flicker_{t.name} {gate} {t.gate} flicker_{t.name} 0 1e-6",
+            f"r_flicker_{t.name} flicker_{t.name} 0 1k model_flicker_{t.name}",
+            f".model model_flicker_{t.name} r kf={number(density * 1e6)} af=0 ef={number(card.flicker_exponent)}",
+        ]
+
+    return flickering
+
+
+def control(c: Control, k: int) -> list[str]:
+    """Return an ideal control of stage `k`: the mean of what it senses is at the reference, at every frequency.
+
+    Currents in proportion to the errors flow into a node where nothing else takes them, so the errors cancel; the
+    controlled node follows it. It has to lower what is sensed when it rises, as the gate of a load does. While the
+    simulator steps its gmin down, the gain rises with it from nothing: so it converges from any guess.
+    """
+    name, share = part(c.name, k), number(LOOP / len(c.senses))
+    return [
+        *(
+            f"g_control_{name}_{i} 0 control_{name} {node(sensed, k)} {node(c.reference, k)} {share}"
+            for i, sensed in enumerate(c.senses)
+        ),
+        f"e_control_{name} {node(c.node, k)} 0 control_{name} 0 1",
+    ]
+
+
+def transistors(circuit: Circuit, k: int, *, own_ground: bool = False) -> list[Transistor]:
     """Return the transistors of stage `k`; the units of a mirror are one device as wide as all of them."""
     top, drawn = circuit.topology, circuit.drawn
+
+    def at(name: str) -> str:
+        return node(name, k, own_ground=own_ground)
+
     return [
         Transistor(
             name=part(t.name, k),
-            drain=node(t.drain, k),
-            gate=node(t.gate, k),
-            source=node(t.source, k),
-            bulk=node(top.bulk_node(t), k),
+            drain=at(t.drain),
+            gate=at(t.gate),
+            source=at(t.source),
+            bulk=at(top.bulk_node(t)),
             channel=top.channel(t),
             width=circuit.sizes[f"{t.group}.width"][k] * (circuit.sizes[t.units][k] if t.units else 1.0),
             length=circuit.sizes[f"{t.group}.length"][k],
@@ -112,31 +179,100 @@ def transistors(circuit: Circuit, k: int) -> list[Transistor]:
     ]
 
 
-def stage(circuit: Circuit, k: int, device: Device) -> list[str]:
-    """Return the elements of stage `k`, its supply and its load, without its inputs."""
+def stage(circuit: Circuit, k: int, device: Device, *, own_ground: bool = False) -> list[str]:
+    """Return the elements of stage `k`, its supply and its load, without its inputs.
+
+    With `own_ground` the ground of the stage is the node ``gnd_k``, held by the source ``v_ground_k``.
+    """
     top, process, sizes = circuit.topology, circuit.process, circuit.sizes
-    lines = [f"v_supply_{k} {node('supply', k)} 0 {number(circuit.conditions.supply)}"]
-    for t in transistors(circuit, k):
+
+    def at(name: str) -> str:
+        return node(name, k, own_ground=own_ground)
+
+    lines = [f"v_supply_{k} {at('supply')} 0 {number(circuit.conditions.supply)}"]
+    if own_ground:
+        lines.append(f"v_ground_{k} {at('ground')} 0 0")
+    for t in transistors(circuit, k, own_ground=own_ground):
         lines += device(t, process)
     for r in top.resistors:
         value = sizes[r.size][k]
-        ends = node(r.a, k), node(r.b, k)
+        ends = at(r.a), at(r.b)
         lines.append(f"r_{part(r.name, k)} {ends[0]} {ends[1]} {number(value)}")
         squares = value / process.resistor.sheet_resistance
         half = 0.5 * process.resistor.capacitance * squares * process.resistor.width**2
-        lines += [f"c_{part(r.name, k)}_{i} {end} 0 {number(half)}" for i, end in enumerate(ends)]
+        lines += [f"c_{part(r.name, k)}_{i} {end} {at('ground')} {number(half)}" for i, end in enumerate(ends)]
     for s in top.sources:
         a, b = (s.a, s.b) if top.input == "nmos" else (s.b, s.a)
-        lines.append(f"i_{part(s.name, k)} {node(a, k)} {node(b, k)} {number(sizes[s.size][k])}")
+        lines.append(f"i_{part(s.name, k)} {at(a)} {at(b)} {number(sizes[s.size][k])}")
     for name, _ in top.output:
-        lines.append(f"c_load_{part(name, k)} {node(name, k)} 0 {number(circuit.conditions.load_capacitance)}")
+        load = number(circuit.conditions.load_capacitance)
+        lines.append(f"c_load_{part(name, k)} {at(name)} {at('ground')} {load}")
+    if top.controls:
+        held = circuit.conditions.output_common_mode
+        assert held is not None
+        lines.append(f"v_reference_{k} {at(REFERENCE)} 0 {number(held)}")
+    for c in top.controls:
+        lines += control(c, k)
     return lines
+
+
+def output_terminals(circuit: Circuit, k: int) -> tuple[str, str]:
+    """Return the two nodes between which the output of stage `k` is."""
+    nodes = {sign: node(name, k) for name, sign in circuit.topology.output}
+    return nodes[1.0], nodes.get(-1.0, "0")
+
+
+def nulled_input(circuit: Circuit, k: int, wanted: str = "0") -> list[str]:
+    """Return inputs of stage `k` that a loop sets, at DC only, so that its output is at the node `wanted`.
+
+    The input that it takes is ``v(null_k)``, the offset. A current in proportion to the error flows into a capacitor:
+    at DC the error is zero, and from far below 1 mHz on the loop is open and ``v_d_k`` drives the stage. The output has
+    to rise with the input.
+    """
+    plus, minus = output_terminals(circuit, k)
+    return [
+        f"v_cm_{k} cm_{k} 0 {number(circuit.conditions.middle)}",
+        f"g_plus_{k} 0 null_{k} {wanted} {plus} {number(LOOP)}",
+        f"g_minus_{k} 0 null_{k} {minus} 0 {number(LOOP)}",
+        f"c_null_{k} null_{k} 0 1e12",
+        f".nodeset v(null_{k})=0",
+        f"v_d_{k} d_{k} null_{k} 0 ac 1",
+        f"e_inp_{k} inp_{k} cm_{k} d_{k} 0 0.5",
+        f"e_inn_{k} inn_{k} cm_{k} d_{k} 0 -0.5",
+    ]
+
+
+def output_chain(circuit: Circuit) -> tuple[list[str], str]:
+    """Return sources that add the outputs of all stages, and the node of the sum.
+
+    With ``noise v(<sum>) <any source> <sweep> 1`` (the last number asks for the parts of every element) the simulator
+    gives the noise of all stages at once: the noise of an element of a stage comes by the output of that stage only.
+    """
+    nodes = ["0", *(f"sum_{k}" for k in range(circuit.designs))]
+    lines = []
+    for k in range(circuit.designs):
+        plus, minus = output_terminals(circuit, k)
+        lines.append(f"e_sum_{k} {nodes[k + 1]} {nodes[k]} {plus} {minus} 1")
+    return lines, nodes[-1]
+
+
+def output_noise(circuit: Circuit, plot: Plot) -> Array:
+    """Return the density of the noise at the output of every stage from such an analysis, (N, points) [V/sqrt(Hz)]."""
+    top = circuit.topology
+    elements = [f"m_{t.name}" for t in top.transistors] + [f"r_{r.name}" for r in top.resistors]
+    elements += [f"r_flicker_{t.name}" for t in top.transistors]
+    rows = []
+    for k in range(circuit.designs):
+        names = [f"onoise_{part(element, k)}" for element in elements]
+        rows.append(np.sqrt(sum(plot[name] ** 2 for name in names if name in plot.names)))
+    return np.array(rows)
 
 
 def nodesets(circuit: Circuit, k: int, voltages: Array) -> list[str]:
     """Return where the simulator shall begin: voltages of the unknown nodes to a tenth of a volt, no finer."""
-    names = circuit.topology.unknown
-    return [f".nodeset v({node(name, k)})={voltages[i, k]:.1f}" for i, name in enumerate(names)]
+    top = circuit.topology
+    free = {c.node: f"control_{part(c.name, k)}" for c in top.controls}  # what a control holds follows this one
+    return [f".nodeset v({free.get(name, node(name, k))})={voltages[i, k]:.1f}" for i, name in enumerate(top.unknown)]
 
 
 @dataclass(frozen=True)

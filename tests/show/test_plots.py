@@ -14,7 +14,9 @@ from matplotlib.figure import Figure
 
 from optisize.errors import OptisizeError
 from optisize.front.run import Run, load_run
+from optisize.problem.evaluate import Limit
 from optisize.show.plots import axis_of, history, trade_offs, write_figures
+from optisize.stage.measures import CATALOGUE
 from tests.conftest import Cli
 from tests.problem.test_bad_input import refused
 
@@ -33,7 +35,7 @@ def _with_goals(run: Run, count: int) -> Run:
 
 def test_every_pair_of_goals_is_a_trade_off_with_the_third_as_colour(run: Run) -> None:
     shown = trade_offs(run)
-    names = [[x.label.split(" [")[0] if x else None for x in (t.x, t.y, t.colour)] for t in shown]
+    names = [[x.label.split(" [")[0].split(" (")[0] if x else None for x in (t.x, t.y, t.colour)] for t in shown]
     assert names == [
         ["cmrr", "gain", "supply current"],
         ["supply current", "gain", "cmrr"],
@@ -52,6 +54,18 @@ def test_an_axis_shows_the_values_of_the_front_in_a_readable_unit(run: Run) -> N
     gain = axis_of(run, 0)
     assert (gain.label, gain.better, gain.logarithmic, gain.bounds) == ("gain [dB]", "max", False, ())
     np.testing.assert_array_equal(gain.values, run.front["gain [dB]"])
+
+
+@pytest.mark.usefixtures("humming")
+def test_an_axis_says_how_its_measure_is_taken(run: Run) -> None:
+    wideband = CATALOGUE["hum"].at("wide_band", {"frequency": 1e5})
+    goal, limit = replace(run.problem.goals[2], measure=wideband), Limit(wideband, None, 4e-8)
+    problem = replace(run.problem, goals=(goal,), limits=(limit,))
+    front = pd.DataFrame({"wide_band [V/Hz^0.5]": [1e-8, 2e-8, 3e-8]})
+    shown = axis_of(replace(run, problem=problem, front=front), 0)
+    assert shown.label == "wide band (hum at 100 kHz) [nV/√Hz]"
+    np.testing.assert_allclose(shown.values, [10.0, 20.0, 30.0])
+    assert [(name, pytest.approx(40.0)) for name, _ in shown.bounds] == [*shown.bounds]
 
 
 def test_a_limit_on_a_goal_is_part_of_its_axis(run: Run) -> None:

@@ -99,6 +99,7 @@ def test_lines_are_whole_when_it_is_no_terminal(capsys: pytest.CaptureFixture[st
 
 def test_numbers_of_json() -> None:
     assert json_number(float("inf")) == "unlimited"
+    assert json_number(float("-inf")) == "-unlimited"
     assert json_number(float("nan")) is None
     assert json_number(1.5) == 1.5
 
@@ -111,9 +112,30 @@ def test_catalogues_name_every_measure_and_process(cli: Cli) -> None:
     assert {r["name"] for r in records} == {*CATALOGUE, *FIGURES}
     assert all(r["definition"] and r["source"] and r["better"] in ("max", "min") for r in records)
     assert all(name in shown for name in CATALOGUE)
+    assert all({"parameters"} < set(r) for r in records)
     shown, records = cli("process", "list").stdout, json.loads(cli("process", "list", "--json").stdout)
     assert [r["name"] for r in records] == list(built_in_names())
     assert all(name in shown for name in built_in_names())
+
+
+@pytest.mark.usefixtures("humming")
+def test_the_catalogue_lists_parameters_with_their_defaults(cli: Cli) -> None:
+    shown = " ".join(cli("measures").stdout.split())
+    assert "As tests need it. Parameter: frequency = 1 kHz (where it is taken). (no source)" in shown
+    assert "Parameter: band = 1 Hz to 100 kHz (from where to where). (no source)" in shown
+    assert "Parameters: sigmas = 3 (how many); frequency = 1 MHz (where it is taken). (no source)" in shown
+    records = {r["name"]: r["parameters"] for r in json.loads(cli("measures", "--json").stdout)}
+    assert records["gain"] == []
+    assert records["hum_total"] == [
+        {
+            "name": "band",
+            "unit": "Hz",
+            "meaning": "from where to where",
+            "default": [1.0, 1e5],
+            "low": 1e-3,
+            "high": 1e12,
+        }
+    ]
 
 
 @pytest.mark.parametrize("name", ["generic-180", "generic-65", "handbook"])
