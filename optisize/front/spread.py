@@ -57,13 +57,19 @@ class Distribution:
         measure: the measure.
         matched: without mismatch.
         values: of the samples, (N,); not a number where one has no operating point.
-        linear_sigma: standard deviation of the same samples to first order.
+        linear: the same samples to first order, (N,).
     """
 
     measure: Measure
     matched: float
     values: Array
-    linear_sigma: float
+    linear: Array
+
+    @property
+    def linear_sigma(self) -> float:
+        """The standard deviation of the same samples to first order."""
+        found = self.linear[np.isfinite(self.linear)]
+        return float(found.std(ddof=1)) if len(found) > 1 and self.sigma > 0.0 else 0.0
 
     @property
     def finite(self) -> Array:
@@ -78,7 +84,10 @@ class Distribution:
     @property
     def sigma(self) -> float:
         """The standard deviation of the samples."""
-        return float(self.finite.std(ddof=1)) if len(self.finite) > 1 else float("nan")
+        found = self.finite
+        if len(found) < 2:
+            return float("nan")
+        return float(found.std(ddof=1)) if np.ptp(found) > 0.0 else 0.0
 
     @property
     def quantiles(self) -> tuple[float, ...]:
@@ -176,7 +185,7 @@ def spread(
     linear = _first_order(matched, spread_of, wanted, seed, samples)
     at_rest = measured(matched, wanted)
     distributions = [
-        Distribution(m, float(rest[0]), row, float(np.nanstd(expected)))
+        Distribution(m, float(rest[0]), row, expected)
         for m, rest, row, expected in zip(wanted, at_rest, values, linear, strict=True)
     ]
     return Spread(
@@ -193,7 +202,7 @@ def spread(
 def _tells(found: Distribution, problem: Problem) -> bool:
     """Tell whether a measure varies from sample to sample, or has a limit."""
     limited = any(limit.measure.name == found.measure.name for limit in problem.limits)
-    return limited or (len(found.finite) > 1 and found.sigma > 1e-12 * abs(found.mean))
+    return limited or found.sigma > 0.0
 
 
 def _yields(limits: Sequence[Limit], names: list[str], values: Array, linear: Array) -> tuple[Yield, ...]:

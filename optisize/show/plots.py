@@ -81,7 +81,7 @@ def axis_of(run: Run, goal_index: int) -> Axis:
     goal = run.problem.goals[goal_index]
     m = goal.measure
     values = measured(run.front, m)
-    factor, unit = _readable(values, m.unit)
+    factor, unit = readable(values, m.unit)
     bounds = tuple(
         (name, bound / factor) for x in run.problem.limits if x.measure.name == m.name for name, bound in x.bounds
     )
@@ -91,7 +91,7 @@ def axis_of(run: Run, goal_index: int) -> Axis:
     return Axis(f"{name} [{unit}]" if unit else name, values / factor, goal.sense, bool(wide), bounds)
 
 
-def _readable(values: Array, unit: str) -> tuple[float, str]:
+def readable(values: Array, unit: str) -> tuple[float, str]:
     """Return the factor and the prefixed unit in which the middle of the values reads well."""
     if unit == "m^2":
         return 1e-12, "um^2"
@@ -127,7 +127,7 @@ def draw_trade_offs(run: Run) -> Figure:
     if not figures:
         axis = axis_of(run, 0)
         raise OptisizeError(f"one goal ({axis.label}) has no trade-off to draw; see `optisize front`")
-    plt = _pyplot()
+    plt = pyplot()
     columns = min(len(figures), 3)
     rows = -(-len(figures) // columns)
     figure, axes = plt.subplots(rows, columns, figsize=(5.2 * columns, 4.5 * rows), squeeze=False, layout="constrained")
@@ -135,7 +135,7 @@ def draw_trade_offs(run: Run) -> Figure:
         _draw_trade_off(figure, spot, trade_off)
     for spot in axes.flat[len(figures) :]:
         spot.set_visible(False)
-    figure.suptitle(f"{_plain(run.problem.title)}\n{len(run.front)} designs, each meets every limit", fontsize=11)
+    figure.suptitle(f"{title_text(run.problem.title)}\n{len(run.front)} designs, each meets every limit", fontsize=11)
     return figure
 
 
@@ -215,7 +215,7 @@ def _plain_ticks(spot: Axes, shown: TradeOff) -> None:
 def draw_history(run: Run) -> Figure:
     """Draw hypervolume and feasible share over the evaluations."""
     record = history(run)
-    plt = _pyplot()
+    plt = pyplot()
     figure, spot = plt.subplots(figsize=(6.4, 4.0), layout="constrained")
     spot.plot(record.evaluations, record.hypervolume, color="#31688e", drawstyle="steps-post", label="hypervolume")
     spot.set_xlabel("evaluations")
@@ -229,16 +229,17 @@ def draw_history(run: Run) -> Figure:
     lines = [*spot.get_lines(), *other.get_lines()]
     spot.legend(lines, [str(line.get_label()) for line in lines], loc="lower right", frameon=False)
     spot.grid(True, color="0.9", linewidth=0.6)
-    figure.suptitle(f"Search history: {_plain(run.problem.title)}", fontsize=11)
+    figure.suptitle(f"Search history: {title_text(run.problem.title)}", fontsize=11)
     return figure
 
 
-def _plain(text: str) -> str:
+def title_text(text: str) -> str:
     """Return a title without what matplotlib would read as mathematics or lines."""
     return "".join(c if c.isprintable() else " " for c in text).replace("$", r"\$")
 
 
-def _pyplot() -> Any:
+def pyplot() -> Any:
+    """Return matplotlib's interface, drawing into files only."""
     import matplotlib
 
     matplotlib.use("Agg")
@@ -252,7 +253,7 @@ def write_figures(run: Run, directory: Path, formats: Sequence[str] = ("png",), 
 
     Raises OptisizeError when they cannot be written.
     """
-    plt = _pyplot()
+    plt = pyplot()
     drawings = {"history": draw_history}
     if len(run.problem.goals) > 1 and len(run.front):
         drawings = {"trade-offs": draw_trade_offs, **drawings}
@@ -260,13 +261,13 @@ def write_figures(run: Run, directory: Path, formats: Sequence[str] = ("png",), 
     for name, draw in drawings.items():
         figure = draw(run)
         try:
-            written += [_write(figure, directory / f"{name}.{kind}", kind, dpi) for kind in formats]
+            written += [write_figure(figure, directory / f"{name}.{kind}", kind, dpi) for kind in formats]
         finally:
             plt.close(figure)
     return written
 
 
-def _write(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
+def write_figure(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
     """Write one figure beside its place, then put it there; a letter that the font lacks is drawn as a box."""
     beside = path.with_name(f".{path.name}")
     try:

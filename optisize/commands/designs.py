@@ -1,0 +1,106 @@
+"""Designs of a run, and sizings by hand: tables, assessment, figures."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from optisize.commands.common import Json, ProblemPath, RunPath, app, guarded, print_json
+from optisize.errors import InputError, nearest
+
+
+@app.command(epilog='Example: optisize front results/sample --where "gain>=20 dB" --sort supply_current')
+@guarded
+def front(
+    run: RunPath,
+    sort: Annotated[str | None, typer.Option(help="A measure or size; best first for a goal.")] = None,
+    where: Annotated[list[str] | None, typer.Option(help='A condition such as "gain>=40 dB"; may be repeated.')] = None,
+    as_csv: Annotated[bool, typer.Option("--csv", help="Print CSV with every column, in SI units.")] = False,
+    as_json: Json = False,
+) -> None:
+    """Print the front of a run as a table."""
+    from optisize.front import choose
+    from optisize.front.run import load_run
+    from optisize.front.table import to_csv
+    from optisize.show.terminal import json_number, print_front
+
+    if as_csv and as_json:
+        raise InputError("--csv and --json: found both; one of them is allowed")
+    loaded = load_run(run)
+    table = choose.where(loaded.front, where or [])
+    if sort is not None:
+        table = choose.sort(loaded, table, sort)
+    if as_csv:
+        typer.echo(to_csv(table), nl=False)
+    elif as_json:
+        print_json([{str(k): json_number(v) for k, v in row.items()} for row in table.to_dict("records")])
+    else:
+        print_front(loaded, table)
+
+
+@app.command(epilog="Example: optisize assess problems/thermopile-preamplifier.toml sizing.toml --sensitivity")
+@guarded
+def assess(
+    problem: ProblemPath,
+    sizing: Annotated[Path, typer.Argument(metavar="SIZING.toml", help="A value for every size.", show_default=False)],
+    against: Annotated[
+        Path | None, typer.Option(help="A run to compare with; the newest one of this problem under results/.")
+    ] = None,
+    sensitivity: Annotated[
+        bool, typer.Option("--sensitivity", help="How each measure moves with each size, by 1 % and by one step.")
+    ] = False,
+    as_json: Json = False,
+) -> None:
+    """Assess a manual sizing: its measures, its limits, and the designs of a front that beat it."""
+    from optisize.front.assess import assess_sizing
+    from optisize.front.sensitivity import sensitivity as sensitivity_of
+    from optisize.problem.load import load_problem, load_sizing
+    from optisize.show.sensitivity import print_sensitivity, sensitivity_record
+    from optisize.show.terminal import json_number, print_assessment, print_caution
+
+    loaded = load_problem(problem)
+    sizes = load_sizing(sizing, loaded)
+    report = assess_sizing(loaded, sizes, against, str(sizing))
+    found = sensitivity_of(loaded, sizes) if sensitivity else None
+    if as_json:
+        data = {
+            "sizes": report.sizes,
+            "measures": {k: json_number(v) for k, v in report.measures.items()},
+            "limits": [{**row, "value": json_number(row["value"])} for row in report.limits],
+            "feasible": report.feasible,
+            "against": report.against,
+            "dominated_by": report.dominated_by,
+        }
+        print_json(data if found is None else {**data, "sensitivity": sensitivity_record(loaded, found)})
+        return
+    print_assessment(loaded, report)
+    if found is not None:
+        print_sensitivity(loaded, found)
+    print_caution()
+
+
+@app.command(epilog="Example: optisize plot results/sample --format svg")
+@guarded
+def plot(
+    run: RunPath,
+    to: Annotated[Path | None, typer.Option("--to", help="A directory; that of the run otherwise.")] = None,
+    formats: Annotated[list[str] | None, typer.Option("--format", help="png, svg or pdf; may be repeated.")] = None,
+    dpi: Annotated[int, typer.Option(min=50, max=1200, help="Dots per inch of a png.")] = 150,
+) -> None:
+    """Draw the trade-offs between the goals and the history of the search."""
+    from optisize.front.run import load_run
+    from optisize.show.plots import write_figures
+
+    for kind in formats or []:
+        if kind not in ("png", "svg", "pdf"):
+            raise InputError(
+                f'--format: found "{kind}"; allowed are png, svg, pdf{nearest(kind, ("png", "svg", "pdf"))}'
+            )
+    loaded = load_run(run)
+    directory = to or run
+    if not directory.is_dir():
+        raise InputError(f"{directory}: there is no such directory")
+    for path in write_figures(loaded, directory, formats or ["png"], dpi):
+        typer.echo(str(path))

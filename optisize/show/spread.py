@@ -1,0 +1,209 @@
+"""The spread of a design: in the terminal, as plain data, and as histograms."""
+
+from __future__ import annotations
+
+import sys
+import time
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from optisize.errors import InputError, nearest
+from optisize.front.spread import CONFIDENCE, Distribution, Spread, Yield
+from optisize.problem.own_measures import label as label_of
+from optisize.process.law import Array
+from optisize.quantities import write
+from optisize.show.plots import pyplot, readable, title_text, write_figure
+from optisize.show.terminal import console, json_number, print_caution, print_table
+from optisize.stage.catalogue import Measure
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+
+BARS = " ▁▂▃▄▅▆▇█"
+BAR_BINS = 24
+KINDS = (".png", ".svg", ".pdf")
+
+
+class Counter:
+    """Shows on stderr how many samples are done, once it takes longer than two seconds."""
+
+    def __init__(self, samples: int, quiet: bool) -> None:
+        """Prepare for a number of samples."""
+        self._samples, self._quiet = samples, quiet
+        self._last = time.monotonic()
+        self._live = sys.stderr.isatty()
+        self._shown = False
+
+    def __enter__(self) -> Counter:
+        return self
+
+    def __call__(self, done: int) -> None:
+        """Show the number, if it is time to."""
+        now = time.monotonic()
+        if self._quiet or now - self._last < (0.2 if self._shown and self._live else 2.0):
+            return
+        self._last, self._shown = now, True
+        text = f"samples {done}/{self._samples}"
+        print(f"\r{text}\x1b[K" if self._live else text, end="" if self._live else "\n", file=sys.stderr, flush=True)
+
+    def __exit__(self, *_: object) -> None:
+        if self._shown and self._live:
+            print("\r\x1b[K", end="", file=sys.stderr, flush=True)
+
+
+def bars(found: Distribution, bins: int = BAR_BINS) -> str:
+    """Return a histogram as a line of blocks, from the lowest sample to the highest."""
+    _, counts = found.histogram(bins)
+    if not len(counts) or not found.sigma > 0.0:
+        return ""
+    return "".join(BARS[int(np.ceil(count / counts.max() * (len(BARS) - 1)))] for count in counts)
+
+
+def sample_label(measure: Measure) -> str:
+    """Return what to call a measure of samples: one that counts standard deviations reads what a sample has itself."""
+    counts = any(p.name == "sigmas" for p in measure.parameters)
+    return f"{measure.name} (of each)" if counts else label_of(measure)
+
+
+def print_spread(found: Spread, label: str) -> None:
+    """Print distributions, yields and the first-order prediction."""
+    rows = []
+    for d in found.distributions:
+        unit = d.measure.unit
+        figures = (d.matched, d.mean, d.sigma, d.linear_sigma, *d.quantiles)
+        rows.append([sample_label(d.measure), *(write(x, unit) for x in figures), bars(d)])
+    headings = ["measure", "matched", "mean", "sigma", "sigma, first order", "0.135 %", "median", "99.865 %", "samples"]
+    print_table(f"{found.problem.title}: {label}, {found.samples} samples of mismatch", headings, rows, left=1)
+    rows = [[y.name, str(y.passed), *_percent(y)] for y in found.yields]
+    interval = f"{100 * CONFIDENCE:g} % interval"
+    print_table("\nyield against the limits", ["limit", "passed", "yield", interval, "first order"], rows)
+    out = console()
+    if found.unsolved:
+        out.print(f"{found.unsolved} samples have no operating point with the output where it is without mismatch")
+    out.print(f"interval: Clopper and Pearson; seed {found.seed}; each sample's offset is taken out by the input")
+    print_caution()
+
+
+def _percent(y: Yield) -> list[str]:
+    low, high = y.interval
+    return [f"{100 * y.share:.2f} %", f"{100 * low:.2f} to {100 * high:.2f} %", f"{100 * y.linear:.2f} %"]
+
+
+def spread_record(found: Spread) -> dict[str, Any]:
+    """Return the spread as plain data in SI units."""
+
+    def record(d: Distribution) -> dict[str, Any]:
+        edges, counts = d.histogram()
+        low, median, high = (json_number(q) for q in d.quantiles)
+        figures = {"matched": d.matched, "mean": d.mean, "sigma": d.sigma, "sigma_first_order": d.linear_sigma}
+        return {
+            "unit": d.measure.unit,
+            **{key: json_number(value) for key, value in figures.items()},
+            "quantiles": {"0.00135": low, "0.5": median, "0.99865": high},
+            "histogram": {"edges": edges.tolist(), "counts": counts.tolist()},
+        }
+
+    return {
+        "samples": found.samples,
+        "seed": found.seed,
+        "unsolved": found.unsolved,
+        "measures": {d.measure.name: record(d) for d in found.distributions},
+        "yield": {
+            y.name: {"passed": y.passed, "yield": y.share, "interval": list(y.interval), "first_order": y.linear}
+            for y in found.yields
+        },
+    }
+
+
+@dataclass(frozen=True)
+class Histogram:
+    """One measure over the samples, as it is drawn.
+
+    Attributes:
+        label: name, settings of its parameters, and unit.
+        edges, counts: of the bins, (B + 1,) and (B,), in that unit.
+        linear: counts of the same samples to first order, (B,).
+        matched: the value without mismatch.
+        bounds: limits on the measure.
+    """
+
+    label: str
+    edges: Array
+    counts: Array
+    linear: Array
+    matched: float
+    bounds: tuple[tuple[str, float], ...]
+
+
+def histograms(found: Spread) -> list[Histogram]:
+    """Return the histogram of every measure that varies."""
+    return [_histogram(d, found) for d in found.distributions if d.sigma > 0.0]
+
+
+def _histogram(d: Distribution, found: Spread) -> Histogram:
+    factor, unit = readable(d.finite, d.measure.unit)
+    edges, counts = d.histogram()
+    linear, _ = np.histogram(d.linear[np.isfinite(d.linear)], bins=edges)
+    name = sample_label(d.measure).replace("_", " ")
+    limits = [b for x in found.problem.limits if x.measure.name == d.measure.name for b in x.bounds]
+    return Histogram(
+        label=f"{name} [{unit}]" if unit else name,
+        edges=edges / factor,
+        counts=counts.astype(float),
+        linear=linear.astype(float),
+        matched=d.matched / factor,
+        bounds=tuple((name, bound / factor) for name, bound in limits),
+    )
+
+
+def check_figure(path: Path) -> None:
+    """Raise InputError for a figure file of a kind that cannot be drawn, or in no directory."""
+    if path.suffix not in KINDS:
+        raise InputError(f'--figure: found "{path.name}"; allowed are {", ".join(KINDS)}{nearest(path.suffix, KINDS)}')
+    if not path.parent.is_dir():
+        raise InputError(f"--figure: {path.parent}: there is no such directory")
+
+
+def draw_spread(found: Spread, label: str, path: Path, dpi: int = 150) -> None:
+    """Draw the histograms into a file.
+
+    Raises OptisizeError when it cannot be written.
+    """
+    shown = histograms(found)
+    plt = pyplot()
+    columns = min(max(len(shown), 1), 3)
+    rows = max(-(-len(shown) // columns), 1)
+    figure, axes = plt.subplots(rows, columns, figsize=(4.6 * columns, 3.6 * rows), squeeze=False, layout="constrained")
+    for spot, histogram in zip(axes.flat, shown, strict=False):
+        _draw(spot, histogram)
+    for spot in axes.flat[len(shown) :]:
+        spot.set_visible(False)
+    everything = found.yields[-1]
+    figure.suptitle(
+        f"{title_text(found.problem.title)}\n{title_text(label)}: {found.samples} samples of mismatch, "
+        f"{100 * everything.share:.2f} % meet every limit",
+        fontsize=11,
+    )
+    try:
+        write_figure(figure, path, path.suffix[1:], dpi)
+    finally:
+        plt.close(figure)
+
+
+def _draw(spot: Axes, shown: Histogram) -> None:
+    spot.stairs(shown.counts, shown.edges, fill=True, color="#8fb8d8", label="samples")
+    spot.stairs(shown.linear, shown.edges, color="#1f3a52", linewidth=1.3, label="to first order")
+    spot.axvline(shown.matched, color="0.25", linestyle=":", linewidth=1.2, label="without mismatch")
+    low, high = shown.edges[0], shown.edges[-1]
+    for name, bound in shown.bounds:
+        if low - 0.5 * (high - low) <= bound <= high + 0.5 * (high - low):
+            spot.axvline(bound, color="#b5367a", linestyle="--", linewidth=1.2, label=f"limit: {name} {bound:g}")
+    spot.set_xlabel(shown.label)
+    spot.set_ylabel("samples in a bin")
+    spot.set_ylim(top=1.35 * float(max(shown.counts.max(), shown.linear.max())))
+    spot.legend(fontsize=7, frameon=False, loc="upper right", ncols=2)
+    spot.grid(True, color="0.9", linewidth=0.6)
+    spot.set_axisbelow(True)
