@@ -119,7 +119,9 @@ def with_flicker(device: Device) -> Device:
 
     The level-1 model cannot do it: there is no NLEV, and its flicker current is KF |Id|^AF / (f W L Cox^2), with the
     exponent of f always one and gm nowhere. A resistor's model has the exponent EF, and with AF = 0 its flicker current
-    KF / f^EF flows without any bias. A kilohm and a gain of 1e-6 leave 1.7e-29 V^2/Hz of its own white noise.
+    KF / f^EF flows without any bias. A kilohm and a gain of 1e-6 leave 1.7e-29 V^2/Hz of its own white noise. At high
+    frequencies it also drives the gate's capacitances, which a current gm K of the channel does not: up to 0.002 % of
+    the whole density at 100 kHz and 0.06 % at 1 MHz.
     """
 
     def flickering(t: Transistor, process: Process) -> list[str]:
@@ -141,7 +143,7 @@ def control(c: Control, k: int) -> list[str]:
 
     Currents in proportion to the errors flow into a node where nothing else takes them, so the errors cancel; the
     controlled node follows it. It has to lower what is sensed when it rises, as the gate of a load does. While the
-    simulator steps its gmin down, the gain rises with it from nothing: so it converges from any guess.
+    simulator steps its gmin down, the gain rises from nothing: so it converges from `nodesets`.
     """
     name, share = part(c.name, k), number(LOOP / len(c.senses))
     return [
