@@ -23,7 +23,20 @@ from tests.conftest import Cli
 from tests.problem.test_bad_input import refused
 from tests.problem.texts import RESISTOR, SIZING, changed
 
-COMMANDS = ("search", "resume", "front", "assess", "plot", "measures", "schema", "new", "process list", "process show")
+COMMANDS = (
+    "search",
+    "resume",
+    "front",
+    "assess",
+    "plot",
+    "spread",
+    "corners",
+    "measures",
+    "schema",
+    "new",
+    "process list",
+    "process show",
+)
 COMMAND = Path(sys.executable).with_name("optisize")
 QUICK = ("--population", "40", "--generations", "21", "--no-figures")
 

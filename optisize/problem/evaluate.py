@@ -195,7 +195,8 @@ class Problem:
         """Return losses and violations of designs whose measures are known, each (N,)."""
         losses = np.array([goal.loss(values[goal.measure.name]) for goal in self.goals])
         violations = np.array([limit.violation(values[limit.measure.name]) for limit in self.limits])
-        solved = ~np.isnan(values[self.goals[0].measure.name])
+        # A measure may be undefined of a stage that works, such as the phase where there is no gain; not all of them.
+        solved = ~np.all([np.isnan(values[name]) for name in self.needed], axis=0)
         return Assessed(losses, violations, solved)
 
     def check_goals_vary(self, losses: Array) -> None:

@@ -7,8 +7,6 @@ Design of Analog Integrated Circuits, ch. 3 and 4, from memory).
 
 from __future__ import annotations
 
-from pathlib import Path
-
 import numpy as np
 import pytest
 

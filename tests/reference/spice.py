@@ -143,7 +143,7 @@ def control(c: Control, k: int) -> list[str]:
 
     Currents in proportion to the errors flow into a node where nothing else takes them, so the errors cancel; the
     controlled node follows it. It has to lower what is sensed when it rises, as the gate of a load does. While the
-    simulator steps its gmin down, the gain rises from nothing: so it converges from `nodesets`.
+    simulator steps its gmin down, the gain rises from nothing, so it converges from rough `nodesets`.
     """
     name, share = part(c.name, k), number(LOOP / len(c.senses))
     return [
@@ -270,11 +270,16 @@ def output_noise(circuit: Circuit, plot: Plot) -> Array:
     return np.array(rows)
 
 
-def nodesets(circuit: Circuit, k: int, voltages: Array) -> list[str]:
-    """Return where the simulator shall begin: voltages of the unknown nodes to a tenth of a volt, no finer."""
+def nodesets(circuit: Circuit, k: int, voltages: Array, digits: int = 1) -> list[str]:
+    """Return where the simulator shall begin: voltages of the unknown nodes to a tenth of a volt, no finer.
+
+    Of forty telescopic stages under control one now and then does not converge from there; three digits help.
+    """
     top = circuit.topology
     free = {c.node: f"control_{part(c.name, k)}" for c in top.controls}  # what a control holds follows this one
-    return [f".nodeset v({free.get(name, node(name, k))})={voltages[i, k]:.1f}" for i, name in enumerate(top.unknown)]
+    return [
+        f".nodeset v({free.get(name, node(name, k))})={voltages[i, k]:.{digits}f}" for i, name in enumerate(top.unknown)
+    ]
 
 
 @dataclass(frozen=True)

@@ -2,18 +2,21 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from itertools import product
 
 import numpy as np
 
-from optisize.process.card import Process, load_process
+from optisize.process.card import Process, load_process, thermal_voltage
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
+from optisize.stage.assembly import Topology, build
 from optisize.stage.bias import OperatingPoint, operating_point
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
-from optisize.stage.assembly import Topology, build
 
-KINDS: list[tuple[str, ...]] = [
+UT = float(thermal_voltage(300.15))
+Kind = tuple[str, ...]
+KINDS: list[Kind] = [
     (input, load, tail, output)
     for input, (load, output), tail in product(
         ("nmos", "pmos"),
@@ -63,6 +66,23 @@ BY_HAND = {
 RANGES = {"width": (1e-8, 1e-2), "length": (1e-8, 1e-3), "resistance": (10.0, 1e11), "current": (1e-14, 0.1)}
 
 
+# At 1.8 V and below: a twentieth of the currents, 0.4 V across a load resistor, deeper gates for the cascodes.
+LOW_VOLTAGE = {"current": 0.05, "resistance": 8.0}
+LOW_VOLTAGE_CASCODE_BIAS = 0.3
+
+
+def stage(kind: Kind, bulk: str = "rail", degenerated: bool = False) -> Topology:
+    """Return the topology of a kind: input, load, tail and, where it says so, output, bulk and form."""
+    form = kind[5] if len(kind) > 5 else "simple"
+    return build(*kind[:4], bulk=bulk, form=form, degenerated=degenerated)
+
+
+def exposed(topology: Topology, supply: float, low: float, high: float | None = None, load: float = 1e-12):
+    """Return conditions; common-mode control holds the outputs at half of the supply."""
+    held = 0.5 * supply if topology.controls else None
+    return Conditions(supply, (low, low if high is None else high), load, output_common_mode=held)
+
+
 def by_hand(topology: Topology, **changes: float | Array) -> dict[str, Array]:
     """Return the sizing by hand, with sizes changed; ``input_width`` stands for ``input.width``."""
     changed = BY_HAND | {key.replace("_", "."): value for key, value in changes.items()}
@@ -80,19 +100,69 @@ def random_sizes(topology: Topology, count: int, seed: int, ranges: dict[str, tu
     return sizes
 
 
+def near_hand(topology: Topology, process: Process, count: int, seed: int, spread: float = 1.6) -> dict[str, Array]:
+    """Return random sizes around those by hand, up to a factor each way, scaled to the supply of the process."""
+    rng, low = np.random.default_rng(seed), process.nominal.supply < 2.0
+    sizes = {}
+    for size, value in zip(topology.sizes, by_hand(topology).values(), strict=True):
+        sizes[size.name] = value * spread ** rng.uniform(-1.0, 1.0, count)
+        if low:
+            sizes[size.name] *= LOW_VOLTAGE.get(size.kind, 1.0)
+            if size.name.endswith("cascode.bias.width"):
+                sizes[size.name] *= LOW_VOLTAGE_CASCODE_BIAS
+    return sizes
+
+
+def has_room(kind: Kind, process: str) -> bool:
+    """Tell whether a kind fits under the supply of a process: not four transistors between 1.2 V."""
+    return process != "generic-65" or (kind[2] != "cascode" and len(kind) < 6)
+
+
+def kinds_in(*processes: str) -> list[tuple[str, Kind]]:
+    """Return every kind in each process that has room for it."""
+    return [(process, kind) for process in processes for kind in KINDS if has_room(kind, process)]
+
+
+def named(case: object) -> str | None:
+    """Return the name of a kind in the list of tests."""
+    return "-".join(case) if isinstance(case, tuple) else None
+
+
 def middle(input: str, supply: float = 3.3) -> float:
     """Return a common mode at which a stage of that input has room."""
     return (0.56 if input == "nmos" else 0.44) * supply
 
 
-def analysed(kind: tuple[str, ...], process: Process | str = "handbook", bulk: str = "rail", **changes) -> Analysis:
-    """Return the analysis of the sizing by hand."""
+def analysed(kind: Kind, process: Process | str = "handbook", bulk: str = "rail", **changes: float | Array) -> Analysis:
+    """Return the analysis of the sizing by hand; degenerated where that resistance is among the changes."""
     p = load_process(process) if isinstance(process, str) else process
-    topology = build(*kind[:4], bulk, *kind[5:])
-    common = middle(kind[0], p.nominal.supply)
-    held = 0.5 * p.nominal.supply if topology.controls else None
-    conditions = Conditions(p.nominal.supply, (common, common), 1e-12, output_common_mode=held)
+    topology = stage(kind, bulk, "input_degeneration" in changes)
+    conditions = exposed(topology, p.nominal.supply, middle(kind[0], p.nominal.supply))
     return Analysis(size_circuit(topology, p, conditions, by_hand(topology, **changes)))
+
+
+def under(a: Analysis, **conditions: object) -> Analysis:
+    """Return the analysis of the same sizes under conditions that differ."""
+    c = a.circuit
+    return Analysis(size_circuit(a.topology, c.process, replace(c.conditions, **conditions), c.sizes))
+
+
+def saturated(
+    kind: Kind, process: str, count: int, seed: int, bulk: str = "rail", half_range: float = 0.0, room: float = 0.02
+) -> Analysis:
+    """Return random stages around the sizing by hand, all saturated in the middle of their common-mode range."""
+    p, topology = load_process(process), stage(kind, bulk)
+    common = middle(kind[0], p.nominal.supply)
+    conditions = exposed(topology, p.nominal.supply, common - half_range, common + half_range)
+    every = Analysis(size_circuit(topology, p, conditions, near_hand(topology, p, 5 * count + 10, seed)))
+    good = np.flatnonzero(every.converged & (every.room_at_rest > room))[:count]
+    assert len(good) == count
+    return Analysis(every.circuit.take(good))
+
+
+def figure(a: Analysis, transistor: str, name: str) -> Array:
+    """Return a derivative of one transistor, (N,)."""
+    return getattr(a.drain, name)[a.wiring.rows[transistor]]
 
 
 def without(process: str, **parameters: float) -> Process:

@@ -9,10 +9,10 @@ from hypothesis import strategies as st
 
 from optisize.process.card import Grid, built_in_names, load_process
 from optisize.stage.analysis import Analysis
+from optisize.stage.assembly import build
 from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.layout import draw_transistors, finger_count, snap_length, snap_resistance, snap_width
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.assembly import build
 
 GRIDS = [load_process(name).grid for name in built_in_names()]
 AWKWARD = GRIDS[0].model_copy(update={"minimum_width": 0.22e-6, "maximum_finger": 0.3e-6, "step": 5e-9})

@@ -8,9 +8,9 @@ import pytest
 from optisize.errors import InputError
 from optisize.process.card import load_process
 from optisize.stage.analysis import Analysis
+from optisize.stage.assembly import build
 from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE, FIGURES, decibels, find
-from optisize.stage.assembly import build
 from tests.stage.stages import KINDS, analysed, by_hand, middle
 
 

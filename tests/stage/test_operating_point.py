@@ -8,10 +8,10 @@ import pytest
 from optisize.process.card import load_process, thermal_voltage
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
+from optisize.stage.assembly import build
 from optisize.stage.bias import settle
 from optisize.stage.circuit import Circuit, Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.assembly import build
 from tests.stage.stages import KINDS, analysed, by_hand, driven_point, middle, pair_currents, random_sizes, without
 
 PROCESSES = ("handbook", "generic-180", "generic-65")

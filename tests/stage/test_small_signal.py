@@ -8,9 +8,9 @@ import pytest
 
 from optisize.process.card import load_process, thermal_voltage
 from optisize.stage.analysis import Analysis
+from optisize.stage.assembly import build
 from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.assembly import build
 from tests.stage.stages import KINDS, analysed, driven_point, middle, random_sizes, without
 
 INPUTS = ("nmos", "pmos")
