@@ -36,13 +36,34 @@ def schema(
     print_json(models[kind].model_json_schema())
 
 
-@app.command(epilog="Example: optisize new my-stage")
+@app.command(epilog="Example: optisize new my-stage --load source --tail cascode")
 @guarded
-def new(name: Annotated[str, typer.Argument(metavar="NAME", help="The file becomes NAME.toml.")]) -> None:
-    """Write a commented problem file to start from."""
+def new(
+    name: Annotated[str, typer.Argument(metavar="NAME", help="The file becomes NAME.toml.")],
+    input: Annotated[str | None, typer.Option("--input", help="nmos or pmos.")] = None,
+    load: Annotated[str | None, typer.Option("--load", help="resistor, diode, mirror or source.")] = None,
+    tail: Annotated[str | None, typer.Option("--tail", help="ideal, resistor, single or cascode.")] = None,
+    output: Annotated[str | None, typer.Option("--output", help="single-ended or differential.")] = None,
+    form: Annotated[str | None, typer.Option("--form", help="simple or telescopic.")] = None,
+) -> None:
+    """Write a commented problem file to start from, with every size that the stage needs."""
     from optisize.files import write_text
     from optisize.problem.template import new_problem
 
+    given = {"input": input, "load": load, "tail": tail, "output": output, "form": form}
+    chosen = {key: value for key, value in given.items() if value is not None}
+    known: dict[str, Mapping[str, object]] = {
+        "input": INPUTS,
+        "load": LOADS,
+        "tail": TAILS,
+        "output": OUTPUTS,
+        "form": FORMS,
+    }
+    for key, value in chosen.items():
+        if value not in known[key]:
+            raise InputError(
+                f'--{key}: found "{value}"; allowed are {", ".join(known[key])}{nearest(value, known[key])}'
+            )
     path = Path(name if name.endswith(".toml") else f"{name}.toml")
     if path.name == ".toml":
         raise InputError(f'NAME: found "{name}"; the name of a file is needed, such as my-stage')
@@ -50,7 +71,7 @@ def new(name: Annotated[str, typer.Argument(metavar="NAME", help="The file becom
         raise InputError(f"{path}: already exists")
     if not path.parent.is_dir():
         raise InputError(f"{path.parent}: there is no such directory")
-    write_text(path, new_problem(path.stem))
+    write_text(path, new_problem(path.stem, **chosen))
     typer.echo(f"{path} is written; edit it, then: optisize search {path}")
 
 

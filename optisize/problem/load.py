@@ -151,7 +151,8 @@ def _ranges(table: Mapping[str, Any], topology: Topology, process: Process) -> t
             raise InputError(f"sizes.{name}: no size of this stage ({kind}); its sizes are {listing(known)}{hint}")
     missing = [name for name in known if name not in given]
     if missing:
-        raise InputError(f"sizes.{missing[0]}: is missing; every size of the stage needs a value or a range")
+        what = "is missing" if len(missing) == 1 else f"is missing, and so are {listing(missing[1:])}"
+        raise InputError(f"sizes.{missing[0]}: {what}; every size of the stage needs a value or a range")
     return tuple(_range(size, given[size.name], topology, process) for size in topology.sizes)
 
 

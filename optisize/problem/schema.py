@@ -12,9 +12,9 @@ from optisize.errors import InputError, listing, nearest, shorten
 from optisize.problem.own_measures import LONGEST_NAME, NAME, parameter_line, with_parameters
 from optisize.process.parameters import Parameters
 from optisize.quantities import In, QuantityError, read
-from optisize.stage.elements import Piece
+from optisize.stage.elements import Form, Piece
 from optisize.stage.measures import Parameter
-from optisize.stage.topology import BULKS, FORMS, INPUTS, LOADS, OUTPUTS, TAILS
+from optisize.stage.topology import FORMS, LOADS, STAGE_WORDS, TAILS
 
 
 @dataclass(frozen=True)
@@ -92,33 +92,29 @@ def _parameter_schema(parameter: Parameter) -> dict[str, Any]:
     return {"type": "array", "items": _QUANTITY, "minItems": 2, "maxItems": 2, "description": description}
 
 
-def _summaries(kinds: Mapping[str, Piece]) -> str:
+def _summaries(kinds: Mapping[str, Piece] | Mapping[str, Form]) -> str:
     return "; ".join(f"{name}: {kind.summary}" for name, kind in kinds.items())
 
 
 class StageTable(Parameters):
     """The circuit: input pair, load, tail and output."""
 
-    input: Annotated[str, OneOf(tuple(INPUTS)), Field(description="channel of the input pair")]
-    load: Annotated[
-        str, OneOf(tuple(LOADS)), Field(description="; ".join(f"{k}: {v.summary}" for k, v in LOADS.items()))
-    ]
-    tail: Annotated[
-        str, OneOf(tuple(TAILS)), Field(description="; ".join(f"{k}: {v.summary}" for k, v in TAILS.items()))
-    ]
+    input: Annotated[str, OneOf(STAGE_WORDS["input"]), Field(description="channel of the input pair")]
+    load: Annotated[str, OneOf(STAGE_WORDS["load"]), Field(description=_summaries(LOADS))]
+    tail: Annotated[str, OneOf(STAGE_WORDS["tail"]), Field(description=_summaries(TAILS))]
     output: Annotated[
         str,
-        OneOf(tuple(OUTPUTS)),
+        OneOf(STAGE_WORDS["output"]),
         Field(description="one drain, or the difference of both"),
     ] = "single-ended"
     form: Annotated[
         str,
-        OneOf(tuple(FORMS)),
-        Field(description="; ".join(f"{name}: {form.summary}" for name, form in FORMS.items())),
+        OneOf(STAGE_WORDS["form"]),
+        Field(description=_summaries(FORMS)),
     ] = "simple"
     bulk: Annotated[
         str,
-        OneOf(BULKS),
+        OneOf(STAGE_WORDS["bulk"]),
         Field(description="bulk of the input pair: at its channel's rail, or tied to the source in a well of its own"),
     ] = "rail"
 

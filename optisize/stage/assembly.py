@@ -175,5 +175,9 @@ def _degenerated(pair: PairKind) -> PairKind:
 
 
 def _once(named: Iterable[tuple[str, Named]]) -> tuple[Named, ...]:
-    """Return what pieces share only once, in the order of its first mention."""
-    return tuple(dict(named).values())
+    """Return what pieces share only once, in the order of its last mention."""
+    kept: dict[str, Named] = {}
+    for name, value in named:
+        kept.pop(name, None)
+        kept[name] = value
+    return tuple(kept.values())

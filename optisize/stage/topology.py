@@ -357,3 +357,11 @@ OUTPUTS: dict[str, tuple[tuple[str, float], ...]] = {
     "differential": (("right", 1.0), ("left", -1.0)),
 }
 BULKS = ("rail", "source")
+STAGE_WORDS: dict[str, tuple[str, ...]] = {
+    "input": tuple(INPUTS),
+    "load": tuple(LOADS),
+    "tail": tuple(TAILS),
+    "output": tuple(OUTPUTS),
+    "form": tuple(FORMS),
+    "bulk": BULKS,
+}

@@ -94,7 +94,7 @@ def random_sizes(topology: Topology, count: int, seed: int, ranges: dict[str, tu
     """Return random sizes over ranges by kind, by default far beyond anything that makes sense."""
     rng = np.random.default_rng(seed)
     sizes = {}
-    for size in topology.sizes:
+    for size in sorted(topology.sizes, key=lambda size: size.name):
         low, high = ranges.get(size.kind, (1.0, 20.0))
         sizes[size.name] = low * (high / low) ** rng.random(count)
     return sizes
@@ -103,13 +103,14 @@ def random_sizes(topology: Topology, count: int, seed: int, ranges: dict[str, tu
 def near_hand(topology: Topology, process: Process, count: int, seed: int, spread: float = 1.6) -> dict[str, Array]:
     """Return random sizes around those by hand, up to a factor each way, scaled to the supply of the process."""
     rng, low = np.random.default_rng(seed), process.nominal.supply < 2.0
+    kinds = {size.name: size.kind for size in topology.sizes}
     sizes = {}
-    for size, value in zip(topology.sizes, by_hand(topology).values(), strict=True):
-        sizes[size.name] = value * spread ** rng.uniform(-1.0, 1.0, count)
+    for name, value in sorted(by_hand(topology).items()):
+        sizes[name] = value * spread ** rng.uniform(-1.0, 1.0, count)
         if low:
-            sizes[size.name] *= LOW_VOLTAGE.get(size.kind, 1.0)
-            if size.name.endswith("cascode.bias.width"):
-                sizes[size.name] *= LOW_VOLTAGE_CASCODE_BIAS
+            sizes[name] *= LOW_VOLTAGE.get(kinds[name], 1.0)
+            if name.endswith("cascode.bias.width"):
+                sizes[name] *= LOW_VOLTAGE_CASCODE_BIAS
     return sizes
 
 

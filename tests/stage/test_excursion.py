@@ -69,7 +69,9 @@ def test_output_swing(process: str, kind: Kind) -> None:
 
 
 @pytest.mark.parametrize(
-    "kind", [k for k in KINDS if k[1] in ("resistor", "mirror") and k[2] in ("ideal", "single") and len(k) < 6], ids=named
+    "kind",
+    [k for k in KINDS if k[1] in ("resistor", "mirror") and k[2] in ("ideal", "single") and len(k) < 6],
+    ids=named,
 )
 def test_output_swing_far_from_the_sizing_by_hand(kind: Kind) -> None:
     """Over decades of every size, for the kinds of which such sizings work."""
@@ -87,7 +89,9 @@ def test_output_swing_far_from_the_sizing_by_hand(kind: Kind) -> None:
     np.testing.assert_allclose(np.array(a.output_excursions)[:, wide], reached[:, wide], atol=5e-3)
 
 
-@pytest.mark.xfail(strict=True, reason="a drive that moves the nodes by less than 10 mV ends at its first, straight step")
+@pytest.mark.xfail(
+    strict=True, reason="a drive that moves the nodes by less than 10 mV ends at its first, straight step"
+)
 @pytest.mark.parametrize("input", ["nmos", "pmos"])
 def test_a_swing_of_millivolts(input: str) -> None:
     """Small load resistors: 98 % of the tail current times the resistance is what full steering can do (standard)."""

@@ -6,31 +6,45 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from optisize.process.card import load_process, thermal_voltage
+from optisize.process.card import load_process
+from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
-from optisize.stage.assembly import build
 from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.measures import CATALOGUE
-from tests.stage.stages import KINDS, analysed, driven_point, middle, random_sizes, without
+from tests.stage.stages import (
+    KINDS,
+    UT,
+    Kind,
+    analysed,
+    driven_point,
+    figure,
+    has_room,
+    kinds_in,
+    middle,
+    named,
+    random_sizes,
+    saturated,
+    stage,
+    under,
+    without,
+)
 
 INPUTS = ("nmos", "pmos")
 PROCESSES = ("handbook", "generic-180", "generic-65")
-SIZES = {"width": (1e-5, 2e-4), "length": (5e-7, 4e-6), "resistance": (3e3, 4e4), "current": (5e-7, 1e-5)}
+TELESCOPIC = ("rail", "telescopic")
 
 
-def figure(a: Analysis, transistor: str, name: str):
-    return getattr(a.drain, name)[a.wiring.rows[transistor]]
+def cascoded(a: Analysis, cascode: str, below: Array | float) -> Array:
+    """Return the resistance [ohm] into the drain of a cascode over a resistance, gates and bulks at rest (standard)."""
+    return below + (1.0 + figure(a, cascode, "gms") * below) / figure(a, cascode, "gds")
 
 
-def saturated(kind: tuple[str, ...], process: str, count: int = 60, bulk: str = "rail") -> tuple[Analysis, np.ndarray]:
-    """Return random sizings, and which of them have every transistor saturated."""
-    p, topology = load_process(process), build(*kind, bulk=bulk)
-    common = middle(kind[0], p.nominal.supply)
-    conditions = Conditions(p.nominal.supply, (common, common), 1e-12)
-    a = Analysis(size_circuit(topology, p, conditions, random_sizes(topology, count, 10, SIZES)))
-    good = a.converged & (a.room_at_rest > 0.02)
-    assert good.sum() > 10
-    return a, good
+def tail_resistance(a: Analysis) -> Array:
+    """Return the resistance [ohm] of a tail."""
+    if a.topology.tail == "resistor":
+        return a.circuit.sizes["tail.resistance"]
+    single = 1.0 / figure(a, "tail", "gds")
+    return single if a.topology.tail == "single" else cascoded(a, "tail.cascode", single)
 
 
 @pytest.mark.parametrize("input", INPUTS)
@@ -47,14 +61,92 @@ def test_resistor_load_half_circuit(input: str) -> None:
 
 
 @pytest.mark.parametrize("process", PROCESSES)
+@pytest.mark.parametrize("tail", ["resistor", "single", "cascode"])
+@pytest.mark.parametrize("load", ["resistor", "diode"])
 @pytest.mark.parametrize("input", INPUTS)
-def test_resistor_load_exactly(input: str, process: str) -> None:
-    """With everything in: Adm = gm R / (1 + gds R), Acm = -gm R / (1 + gds R + 2 gms Rss); derived by hand."""
-    a, good = saturated((input, "resistor", "single", "differential"), process)
+def test_symmetric_loads_exactly(input: str, load: str, tail: str, process: str) -> None:
+    """With everything in: Adm = gm R / (1 + gds R), Acm = -gm R / (1 + gds R + 2 gms Rss); derived by hand. A diode is
+    a resistor of 1 / (gm + gds), a cascoded tail one of its two output resistances and their product times gms."""
+    kind = (input, load, tail, "differential")
+    a = saturated(kind if has_room(kind, process) else (input, load, "single", "differential"), process, 10, 10)
     gm, gds, gms = (figure(a, "input.n", name) for name in ("gm", "gds", "gms"))
-    r, rss = a.circuit.sizes["load.resistance"], 1.0 / figure(a, "tail", "gds")
-    np.testing.assert_allclose(a.adm[good], (gm * r / (1.0 + gds * r))[good], rtol=1e-7)
-    np.testing.assert_allclose(a.acm[good], (-gm * r / (1.0 + gds * r + 2.0 * gms * rss))[good], rtol=1e-7)
+    r = a.circuit.sizes["load.resistance"] if load == "resistor" else 1.0 / (figure(a, "load.n", "gm") + figure(a, "load.n", "gds"))
+    rss = tail_resistance(a)
+    np.testing.assert_allclose(a.adm, gm * r / (1.0 + gds * r), rtol=1e-7)
+    np.testing.assert_allclose(a.acm, -gm * r / (1.0 + gds * r + 2.0 * gms * rss), rtol=1e-6)
+
+
+@pytest.mark.parametrize("input", INPUTS)
+def test_diode_load(input: str) -> None:
+    """Adm = -gm1/gm3 = sqrt of the ratio of their current factors, whatever the current; the common mode is divided by
+    twice the tail resistance, Acm = -1 / (2 gm3 Rss): Gray et al., ch. 3 (derived; gds and body effect left out)."""
+    process = without("handbook", body_effect=0.0, channel_modulation=0.0)
+    a = analysed((input, "diode", "resistor", "differential"), process, tail_resistance=np.array([9e3, 20e3, 60e3]))
+    card = (process.nmos, process.pmos) if input == "nmos" else (process.pmos, process.nmos)
+    ratio = card[0].current_factor * 100.0 / 2.0 / (card[1].current_factor * 60.0 / 4.0)
+    np.testing.assert_allclose(a.adm, np.sqrt(ratio), rtol=1e-9)
+    rss = a.circuit.sizes["tail.resistance"]
+    gm1, gm3 = figure(a, "input.n", "gm"), figure(a, "load.n", "gm")
+    np.testing.assert_allclose(a.acm, -gm1 / gm3 / (1.0 + 2.0 * gm1 * rss), rtol=1e-9)
+
+
+@pytest.mark.parametrize("process", PROCESSES)
+@pytest.mark.parametrize("input", INPUTS)
+def test_source_load(input: str, process: str) -> None:
+    """Adm = gm1 (ro1 parallel ro3), exactly: under the differential drive neither tail nor load gates move (standard).
+    No common mode comes through."""
+    a = saturated((input, "source", "single", "differential"), process, 10, 3)
+    conductance = figure(a, "input.n", "gds") + figure(a, "load.n", "gds")
+    np.testing.assert_allclose(a.adm, figure(a, "input.n", "gm") / conductance, rtol=1e-7)
+    assert (a.acm == 0.0).all()
+    assert (a.common_to_difference == 0.0).all()
+
+
+@pytest.mark.parametrize("process", ["handbook", "generic-180"])
+@pytest.mark.parametrize("input", INPUTS)
+def test_telescopic_half_circuit(input: str, process: str) -> None:
+    """Adm = Gm (R1 parallel R3): the cascoded resistances of both sides, gm ro^2 in short, and nearly all of gm; Gray et
+    al., ch. 4 (derived with everything in). The gate voltages of the cascodes do not move under the drive."""
+    a = saturated((input, "source", "single", "differential", *TELESCOPIC), process, 10, 3)
+    gm, gds = figure(a, "input.n", "gm"), figure(a, "input.n", "gds")
+    down = cascoded(a, "input.cascode.n", 1.0 / gds)
+    up = cascoded(a, "load.cascode.n", 1.0 / figure(a, "load.n", "gds"))
+    # The cascode takes what its own source conductance, beside that of the pair, leaves.
+    taken = (figure(a, "input.cascode.n", "gms") + figure(a, "input.cascode.n", "gds")) / (
+        figure(a, "input.cascode.n", "gms") + figure(a, "input.cascode.n", "gds") + gds
+    )
+    exact = gm * taken / (1.0 / down + 1.0 / up)
+    np.testing.assert_allclose(a.adm, exact, rtol=2e-2)
+    cascode, load = ((f"{x}.cascode.n", f"{x}.n") for x in ("input", "load"))
+    squares = [figure(a, c, "gm") / figure(a, c, "gds") / figure(a, t, "gds") for c, t in (cascode, load)]
+    np.testing.assert_allclose(a.adm, gm / (1.0 / squares[0] + 1.0 / squares[1]), rtol=0.2)
+
+
+@pytest.mark.parametrize("bulk", ["rail", "source"])
+@pytest.mark.parametrize("input", INPUTS)
+def test_degeneration(input: str, bulk: str) -> None:
+    """Gm = gm / (1 + gm R) with the bulk at the source; with the bulk at the rail the body effect counts as well, so
+    gms stands for gm: Gray et al., ch. 3 (derived; gds left out)."""
+    process, resistance = without("handbook", channel_modulation=0.0), np.array([1.0, 300.0, 2e3, 5e3])
+    a = analysed((input, "resistor", "ideal", "differential"), process, bulk, input_degeneration=resistance)
+    assert (a.room_at_rest > 0.0).all()
+    gm, feedback = figure(a, "input.n", "gm"), figure(a, "input.n", "gm" if bulk == "source" else "gms")
+    expected = gm / (1.0 + feedback * resistance) * a.circuit.sizes["load.resistance"]
+    np.testing.assert_allclose(a.adm, expected, rtol=1e-9)
+    plain = analysed((input, "resistor", "ideal", "differential"), process, bulk)
+    if bulk == "source":  # where the threshold does not move with the source
+        np.testing.assert_allclose(figure(a, "input.n", "gm"), figure(plain, "input.n", "gm")[0], rtol=1e-9)
+        np.testing.assert_allclose(a.adm[0], plain.adm[0], rtol=2e-3)
+    assert (np.diff(a.adm) < 0.0).all()
+
+
+@pytest.mark.parametrize("input", INPUTS)
+def test_degeneration_with_output_conductance(input: str) -> None:
+    """Half circuit with everything in: Adm = gm RL / (1 + gds RL + (gms R) + gds R), derived by hand."""
+    a = analysed((input, "resistor", "single", "differential"), input_degeneration=np.array([500.0, 2e3]))
+    gm, gds, gms = (figure(a, "input.n", name) for name in ("gm", "gds", "gms"))
+    r, load = a.circuit.sizes["input.degeneration"], a.circuit.sizes["load.resistance"]
+    np.testing.assert_allclose(a.adm, gm * load / (1.0 + gds * load + gms * r), rtol=1e-9)
 
 
 @pytest.mark.parametrize("process", PROCESSES)
