@@ -52,18 +52,10 @@ def new(
 
     given = {"input": input, "load": load, "tail": tail, "output": output, "form": form}
     chosen = {key: value for key, value in given.items() if value is not None}
-    known: dict[str, Mapping[str, object]] = {
-        "input": INPUTS,
-        "load": LOADS,
-        "tail": TAILS,
-        "output": OUTPUTS,
-        "form": FORMS,
-    }
     for key, value in chosen.items():
-        if value not in known[key]:
-            raise InputError(
-                f'--{key}: found "{value}"; allowed are {", ".join(known[key])}{nearest(value, known[key])}'
-            )
+        if value not in STAGE_WORDS[key]:
+            allowed = f"{', '.join(STAGE_WORDS[key])}{nearest(value, STAGE_WORDS[key])}"
+            raise InputError(f'--{key}: found "{value}"; allowed are {allowed}')
     path = Path(name if name.endswith(".toml") else f"{name}.toml")
     if path.name == ".toml":
         raise InputError(f'NAME: found "{name}"; the name of a file is needed, such as my-stage')
