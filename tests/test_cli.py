@@ -349,3 +349,31 @@ def test_ctrl_c_before_there_is_anything_to_keep_leaves_nothing(cli: Cli, monkey
     result = cli("search", "stage.toml", "--to", "run", "--quiet")
     assert (result.exit_code, result.stdout, result.stderr) == (130, "", "optisize: interrupted\n")
     assert [p.name for p in Path.cwd().iterdir()] == ["stage.toml"]
+
+
+@pytest.mark.parametrize(
+    "words",
+    [
+        "--load source --form telescopic",
+        "--load source --tail cascode",
+        "--input pmos --load diode --tail resistor --output differential",
+        "--load mirror --form telescopic",
+        "--tail ideal",
+    ],
+)
+def test_a_new_problem_has_every_size_of_its_stage(cli: Cli, words: str) -> None:
+    assert cli("new", "kind", *words.split()).exit_code == 0
+    longer = ("--population", "100", "--generations", "40", "--no-figures")
+    assert cli("search", "kind.toml", "--to", "run", *longer).exit_code == 0
+
+
+def test_a_new_problem_of_no_stage_is_refused(cli: Cli) -> None:
+    result = cli("new", "kind", "--load", "sourse")
+    assert result.exit_code == 2
+    assert result.stderr == (
+        'optisize: --load: found "sourse"; allowed are resistor, diode, mirror, source; did you mean "source"?\n'
+    )
+    result = cli("new", "kind", "--load", "mirror", "--output", "differential")
+    assert result.exit_code == 2
+    assert "a mirror has one output" in result.stderr
+    assert not Path("kind.toml").exists()

@@ -49,6 +49,7 @@ def new(
     """Write a commented problem file to start from, with every size that the stage needs."""
     from optisize.files import write_text
     from optisize.problem.template import new_problem
+    from optisize.stage.topology import STAGE_WORDS
 
     given = {"input": input, "load": load, "tail": tail, "output": output, "form": form}
     chosen = {key: value for key, value in given.items() if value is not None}

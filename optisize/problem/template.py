@@ -37,7 +37,7 @@ cmrr_mismatch  = "max"              # cmrr is that of perfectly matched devices
 supply_current = "min"
 
 [limits]                           # {{ min = "..." }}, {{ max = "..." }} or both; without one on headroom, it is >= 0
-headroom  = {{ min = "50 mV" }}
+headroom  = {{ min = "{headroom}" }}
 area      = {{ max = "4000 um^2" }}
 bandwidth = {{ min = "{bandwidth}" }}
 
@@ -96,6 +96,7 @@ def new_problem(title: str, **stage: str) -> str:
         common_mode='["0.9 V", "1.1 V"]' if chosen["input"] == "nmos" else '["0.6 V", "0.8 V"]',
         held=HELD if topology.controls else "",
         sizes="\n".join(lines),
+        headroom="50 mV" if chosen["form"] == "simple" else "20 mV",
         bandwidth="20 kHz" if chosen["form"] == "simple" else "100 Hz",
     )
 

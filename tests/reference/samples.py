@@ -13,6 +13,7 @@ from optisize.stage.circuit import Conditions, size_circuit
 from optisize.stage.topology import FORMS, INPUTS, TAILS
 
 DRAWS = {True: 2000, False: 12_000}  # sizings that are drawn in search of saturated ones, and of others
+BLOCK = 250  # of them are solved at a time, until there are enough
 
 
 @dataclass(frozen=True)
@@ -122,10 +123,16 @@ def sized(kind: Kind, process_name: str, count: int, *, saturated: bool = True, 
     process = load_process(process_name)
     where = conditions(kind, process)
     sizes = draw(kind, process, DRAWS[saturated], seed)
-    a = Analysis(size_circuit(kind.topology, process, where, sizes))
-    room = a.room_at_rest
-    conducting = a.drain.id.min(axis=0) > 1e-8
-    good = a.converged & conducting & (room > 5e-3 if saturated else room < -5e-3)
-    picked = np.flatnonzero(good)[:count]
+    good: list[int] = []
+    for start in range(0, DRAWS[saturated], BLOCK):
+        part = {name: v[start : start + BLOCK] for name, v in sizes.items()}
+        a = Analysis(size_circuit(kind.topology, process, where, part))
+        room = a.room_at_rest
+        conducting = a.drain.id.min(axis=0) > 1e-8
+        usable = a.converged & conducting & (room > 5e-3 if saturated else room < -5e-3)
+        good += (start + np.flatnonzero(usable)).tolist()
+        if len(good) >= count:
+            break
+    picked = np.array(good[:count])
     assert len(picked) == count, f"only {len(picked)} of {DRAWS[saturated]} sizings of {kind} can be used"
     return Analysis(size_circuit(kind.topology, process, where, {name: v[picked] for name, v in sizes.items()}))

@@ -181,10 +181,13 @@ def transistors(circuit: Circuit, k: int, *, own_ground: bool = False) -> list[T
     ]
 
 
-def stage(circuit: Circuit, k: int, device: Device, *, own_ground: bool = False) -> list[str]:
+def stage(
+    circuit: Circuit, k: int, device: Device, *, own_ground: bool = False, controlled: bool = True
+) -> list[str]:
     """Return the elements of stage `k`, its supply and its load, without its inputs.
 
-    With `own_ground` the ground of the stage is the node ``gnd_k``, held by the source ``v_ground_k``.
+    With `own_ground` the ground of the stage is the node ``gnd_k``, held by the source ``v_ground_k``. What is not
+    `controlled` has its controls left out, for `held_outputs`.
     """
     top, process, sizes = circuit.topology, circuit.process, circuit.sizes
 
@@ -213,9 +216,34 @@ def stage(circuit: Circuit, k: int, device: Device, *, own_ground: bool = False)
         held = circuit.conditions.output_common_mode
         assert held is not None
         lines.append(f"v_reference_{k} {at(REFERENCE)} 0 {number(held)}")
-    for c in top.controls:
+    for c in top.controls if controlled else ():
         lines += control(c, k)
     return lines
+
+
+def path(name: str, values: Array) -> list[str]:
+    """Return a source that takes a node through values, one after the other, while ``v_theta`` goes 0, 1, 2 and so on.
+
+    Each stage goes its own way in one sweep: ``dc v_theta 5 9 1`` visits the values 5 to 9.
+    """
+    points = ",".join(f"{step},{number(float(value))}" for step, value in enumerate(values))
+    return [f"b_{name} {name} 0 v=pwl(v(theta),{points})"]
+
+
+def held_outputs(circuit: Circuit, k: int, voltages: Array) -> list[str]:
+    """Return sources ``v_held_<node>_k`` at both sides of stage `k` where these are alike, else at its output.
+
+    What controls the outputs is held too. The current of such a source is what the stage pushes into it.
+
+    Args:
+        circuit: the stages.
+        k: which of them.
+        voltages: of all unknown nodes, (U, N).
+    """
+    top = circuit.topology
+    nodes = ["left", "right"] if top.symmetric else [name for name, _ in top.output]
+    nodes += [c.node for c in top.controls]
+    return [f"v_held_{part(x, k)} {node(x, k)} 0 {number(voltages[top.unknown.index(x), k])}" for x in nodes]
 
 
 def output_terminals(circuit: Circuit, k: int) -> tuple[str, str]:

@@ -105,8 +105,8 @@ def test_source_load(input: str, process: str) -> None:
 @pytest.mark.parametrize("process", ["handbook", "generic-180"])
 @pytest.mark.parametrize("input", INPUTS)
 def test_telescopic_half_circuit(input: str, process: str) -> None:
-    """Adm = Gm (R1 parallel R3): the cascoded resistances of both sides, (gm + gmb) ro^2 in short, and nearly all of gm;
-    Gray et al., ch. 4 (derived with everything in). The gates of the cascodes do not move under the drive."""
+    """Adm = Gm (R1 parallel R3): the cascoded resistances of both sides, (gm + gmb) ro^2 in short, and nearly all of
+    gm; Gray et al., ch. 4 (derived with everything in). The gates of the cascodes do not move under the drive."""
     a = saturated((input, "source", "single", "differential", *TELESCOPIC), process, 10, 3)
     gm, gds = figure(a, "input.n", "gm"), figure(a, "input.n", "gds")
     down = cascoded(a, "input.cascode.n", 1.0 / gds)
