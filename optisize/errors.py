@@ -8,9 +8,15 @@ from collections.abc import Iterable
 
 
 class OptisizeError(Exception):
-    """The work could not be done (a full disk, a missing program)."""
+    """The work could not be done (a full disk, a missing program).
+
+    Attributes:
+        exit_code: of the command line.
+        lines: whether the message has more lines than one.
+    """
 
     exit_code = 1
+    lines = False
 
 
 class InputError(OptisizeError):
@@ -23,6 +29,13 @@ class NothingFeasible(OptisizeError):
     """The search found no design that meets every limit."""
 
     exit_code = 3
+    lines = True
+
+
+class SimulationFailed(OptisizeError):
+    """The circuit simulator gave no result; the message ends with its own last lines."""
+
+    lines = True
 
 
 def nearest(name: str, allowed: Iterable[str]) -> str:

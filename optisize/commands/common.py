@@ -14,7 +14,7 @@ from typing import Annotated, Any, TypeVar
 import typer
 
 import optisize
-from optisize.errors import NothingFeasible, OptisizeError, one_line
+from optisize.errors import OptisizeError, one_line
 
 Command = TypeVar("Command", bound=Callable[..., Any])
 
@@ -52,7 +52,7 @@ def guarded(command: Command) -> Command:
         except OptisizeError as error:
             if _debug:
                 raise
-            text = str(error) if isinstance(error, NothingFeasible) else one_line(str(error))
+            text = str(error) if error.lines else one_line(str(error))
             typer.echo(f"optisize: {text}", err=True)
             raise typer.Exit(error.exit_code) from None
         except OSError as error:

@@ -8,11 +8,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array, Law
+from optisize.stage.active import Active
 from optisize.stage.circuit import Circuit
 from optisize.stage.linear import solve
 from optisize.stage.network import Network
 from optisize.stage.topology import INPUTS
-from optisize.stage.wiring import Indices
 
 ITERATIONS = 40
 BEYOND = 0.5  # V; how far beyond the rails a node may be sought
@@ -120,24 +120,20 @@ def settle(network: Network, start: Array, settled: float = SETTLED) -> Operatin
     """
     v = start.copy()
     converged = np.zeros(network.designs, dtype=bool)
-    active: Indices = np.arange(network.designs)
-    part, moving = network, v.copy()
-    over, pinned = np.zeros(network.designs, dtype=bool), np.zeros(network.designs, dtype=int)
+    active, part, moving = Active(network.designs), network, v.copy()
+    pinned = np.zeros(network.designs, dtype=int)
     for _ in range(ITERATIONS):
-        # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = np.flatnonzero((newton_step(part, moving) < settled) & ~over)
-        done = active[fresh]
+        fresh = active.fresh(newton_step(part, moving) < settled)
+        done = active.designs(fresh)
         v[:, done] = moving.take(fresh, axis=1)
         converged[done] = True
         pinned = np.where(_at_bound(part, moving), pinned + 1, 0)
-        over |= pinned >= PINNED
-        over[fresh] = True
-        if 3 * np.count_nonzero(over) > len(over):
-            left = np.flatnonzero(~over)
-            active = active[left]
-            if not len(active):
+        active.give_up(pinned >= PINNED)
+        left = active.thinned()
+        if left is not None:
+            if not len(left):
                 break
-            part, moving, pinned, over = part.take(left), moving.take(left, axis=1), pinned[left], over[left]
+            part, moving, pinned = part.take(left), moving.take(left, axis=1), pinned[left]
     return OperatingPoint(v, converged)
 
 

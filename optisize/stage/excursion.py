@@ -6,13 +6,14 @@ hand sides, the residual and the drive, and moves the amplitude to where the nea
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple, Self
 
 import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array, Drain, Pick, Saturation
+from optisize.stage.active import Active
 from optisize.stage.bias import regular_solve
 from optisize.stage.network import Equations, Network, Terminals
 
@@ -62,15 +63,17 @@ class Ending:
         saturated: whether the transistors that have to be saturated must stay so.
         steered: whether each input transistor must carry its least share of the pair's current.
         current: the least current of the pair [A], (N,), if any.
+        settled: the step of the amplitude [V] after which it is known, where it is what is wanted.
     """
 
     saturated: bool = True
     steered: bool = True
     current: Array | None = None
+    settled: float = np.inf
 
     def take(self, columns: Pick) -> Self:
         """Return the same for some of the designs."""
-        return self if self.current is None else type(self)(self.saturated, self.steered, self.current[columns])
+        return self if self.current is None else replace(self, current=self.current[columns])
 
 
 @np.errstate(all="ignore")
@@ -98,23 +101,19 @@ def follow(
     """
     v, amplitude = start.copy(), np.zeros(network.designs, dtype=start.dtype)
     found = np.zeros(network.designs, dtype=bool)
-    active: NDArray[np.intp] = np.arange(network.designs)
-    part, pv, pa, ps, ends = network, v.copy(), amplitude.copy(), sign, ending or Ending()
-    over = found.copy()
+    active, part, ends = Active(network.designs), network, ending or Ending()
+    pv, pa, ps = v.copy(), amplitude.copy(), sign
     for iteration in range(ITERATIONS):
         here = rest if iteration == 0 and rest is not None else linearised(part, pv, drive)
-        # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = np.flatnonzero(_step(part, here, pv, pa, drive, ps, ends) & ~over)
-        done = active[fresh]
-        v[:, done], amplitude[done] = pv.take(fresh, axis=1), pa[fresh]
-        found[done] = over[fresh] = True
-        if 3 * np.count_nonzero(over) > len(over):
-            left = np.flatnonzero(~over)
-            active = active[left]
-            if not len(active):
+        # The first step is straight from rest: however small it is, it does not know the curve.
+        fresh = active.fresh(_step(part, here, pv, pa, drive, ps, ends) & (iteration > 0))
+        done = active.designs(fresh)
+        v[:, done], amplitude[done], found[done] = pv.take(fresh, axis=1), pa[fresh], True
+        left = active.thinned()
+        if left is not None:
+            if not len(left):
                 break
-            part, pv, pa, ps, over = part.take(left), pv.take(left, axis=1), pa[left], ps[left], over[left]
-            ends = ends.take(left)
+            part, pv, pa, ps, ends = part.take(left), pv.take(left, axis=1), pa[left], ps[left], ends.take(left)
     return Excursion(v=v, amplitude=amplitude, found=found)
 
 
@@ -144,7 +143,7 @@ def _step(
     v += change
     amplitude += step
     # What the residual asks for and what the drive moves may cancel each other: both have to be small.
-    return np.maximum(moved, np.abs(toward[:unknowns, 0]).max(axis=0)) < SETTLED
+    return (np.maximum(moved, np.abs(toward[:unknowns, 0]).max(axis=0)) < SETTLED) & (np.abs(step) < ending.settled)
 
 
 def _margins(network: Network, here: Linearised, toward: Array, ending: Ending) -> tuple[Array, Array, Array]:

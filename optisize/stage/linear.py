@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array, Pick
+from optisize.stage.active import Active
 
 Pattern = tuple[tuple[bool, ...], ...]
 
@@ -153,31 +154,28 @@ def crossing(transfer: Transfer, level: Array, start: Array) -> Array:
     """
     target = np.log(level)
     result = np.full(len(level), np.nan)
-    active: NDArray[np.intp] = np.arange(len(level))
-    over = np.zeros(len(level), dtype=bool)
-    part, x0 = transfer, np.log(start)
+    active, part, x0 = Active(len(level)), transfer, np.log(start)
     f0 = part.fall(x0) - target
     x1 = x0 - np.clip(0.5 * f0, -3.0, 3.0)
+    every: Pick = slice(None)
     for _ in range(CROSSING_STEPS):
-        f1 = part.fall(x1) - target[active]
+        f1 = part.fall(x1) - target[active.designs(every)]
         slope = (f1 - f0) / (x1 - x0)
         # A slope far from that of one to four poles says that the points are too near or not on the fall.
         slope = np.where((slope > 0.3) & (slope < 12.0), slope, 2.0)
         step = np.clip(-f1 / slope, -2.0, 2.0)
         x0, f0, x1 = x1, f1, x1 + step
-        # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = (np.abs(step) < CROSSING_DONE) & ~over
-        result[active[fresh]] = np.exp(x1[fresh])
-        over |= fresh
-        if 3 * np.count_nonzero(over) > len(over):
-            left = np.flatnonzero(~over)
-            active = active[left]
-            if not len(active):
+        fresh = active.fresh(np.abs(step) < CROSSING_DONE)
+        result[active.designs(fresh)] = np.exp(x1[fresh])
+        left = active.thinned()
+        if left is not None:
+            if not len(left):
                 return result
-            part, x0, x1, f0, over = part.take(left), x0[left], x1[left], f0[left], over[left]
-    left = np.flatnonzero(~over)
-    active = active[left]
-    result[active] = _searched_crossing(part.take(left), target[active], np.log(start[active]))
+            part, x0, x1, f0 = part.take(left), x0[left], x1[left], f0[left]
+    part = part.take(active.rest())
+    missing = active.designs(every)
+    if len(missing):
+        result[missing] = _searched_crossing(part, target[missing], np.log(start[missing]))
     return result
 
 

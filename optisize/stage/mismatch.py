@@ -15,6 +15,7 @@ from dataclasses import dataclass, replace
 from typing import NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
 
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
@@ -165,7 +166,7 @@ class Sampled(Analysis):
         """Mismatch leaves no two sides alike."""
         return False
 
-    def take(self, columns: np.ndarray) -> Sampled:
+    def take(self, columns: NDArray[np.intp]) -> Sampled:
         """Return the analysis of some of the samples."""
         part = object.__new__(Sampled)
         Analysis.__init__(part, self.circuit.take(columns))

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from optisize.process.law import Array
+from optisize.stage.active import Active
 from optisize.stage.bias import SETTLED, STEP_LIMIT, regular_solve
 from optisize.stage.network import Network
 
@@ -40,33 +41,35 @@ def null(network: Network, start: Array, drive: Array, weights: Array, wanted: A
         weights: of the unknown nodes in the output, (U,).
         wanted: output voltage, (N,).
     """
-    unknowns = network.wiring.unknowns
     v, applied = start.copy(), np.zeros(network.designs)
     found = np.zeros(network.designs, dtype=bool)
-    active: NDArray[np.intp] = np.arange(network.designs)
-    part, pv, pa, goal, over = network, v.copy(), applied.copy(), wanted, found.copy()
+    active, part = Active(network.designs), network
+    pv, pa, goal = v.copy(), applied.copy(), wanted
     for _ in range(ITERATIONS):
-        terminals = part.terminals(pv)
-        equations = part.equations(terminals, part.law.drain(*terminals.of_law), drive[:, None])
-        right = np.stack([-equations.residual, -equations.pulls[:, 0]], axis=1)
-        toward = regular_solve(part, equations.matrix, right)
-        step = (goal - weights @ pv[:unknowns] - weights @ toward[:, 0]) / (weights @ toward[:, 1])
-        change = toward[:, 0] + step * toward[:, 1]
-        size = np.abs(change).max(axis=0)
-        damping = np.where(np.isfinite(size), STEP_LIMIT / np.maximum(size, STEP_LIMIT), 0.0)
-        change, step = (np.where(damping > 0.0, x * damping, 0.0) for x in (change, step))
-        pv[:unknowns] += change
-        pv[unknowns:] += step * drive[unknowns:, None]
-        pa += step
-        # Each design is read at its own last step, so that it does not depend on those beside it.
-        fresh = np.flatnonzero((size < SETTLED) & ~over)
-        done = active[fresh]
-        v[:, done], applied[done] = pv.take(fresh, axis=1), pa[fresh]
-        found[done] = over[fresh] = True
-        if 3 * np.count_nonzero(over) > len(over):
-            left = np.flatnonzero(~over)
-            active = active[left]
-            if not len(active):
+        fresh = active.fresh(_step(part, pv, pa, drive, weights, goal) < SETTLED)
+        done = active.designs(fresh)
+        v[:, done], applied[done], found[done] = pv.take(fresh, axis=1), pa[fresh], True
+        left = active.thinned()
+        if left is not None:
+            if not len(left):
                 break
-            part, pv, pa, goal, over = part.take(left), pv.take(left, axis=1), pa[left], goal[left], over[left]
+            part, pv, pa, goal = part.take(left), pv.take(left, axis=1), pa[left], goal[left]
     return Null(v, applied, found)
+
+
+def _step(network: Network, v: Array, applied: Array, drive: Array, weights: Array, wanted: Array) -> Array:
+    """Move node voltages and input in place by one damped step; return the size of the full step, (N,) [V]."""
+    unknowns = network.wiring.unknowns
+    terminals = network.terminals(v)
+    equations = network.equations(terminals, network.law.drain(*terminals.of_law), drive[:, None])
+    right = np.stack([-equations.residual, -equations.pulls[:, 0]], axis=1)
+    toward = regular_solve(network, equations.matrix, right)
+    step = (wanted - weights @ v[:unknowns] - weights @ toward[:, 0]) / (weights @ toward[:, 1])
+    change = toward[:, 0] + step * toward[:, 1]
+    size = np.abs(change).max(axis=0)
+    damping = np.where(np.isfinite(size), STEP_LIMIT / np.maximum(size, STEP_LIMIT), 0.0)
+    change, step = (np.where(damping > 0.0, x * damping, 0.0) for x in (change, step))
+    v[:unknowns] += change
+    v[unknowns:] += step * drive[unknowns:, None]
+    applied += step
+    return size

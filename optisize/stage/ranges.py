@@ -2,21 +2,28 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
+
 import numpy as np
+from numpy.typing import NDArray
 
 from optisize.process.law import Array
+from optisize.stage.active import Active
 from optisize.stage.analysis import Analysis
 from optisize.stage.bias import settle
 from optisize.stage.excursion import Ending, follow
 from optisize.stage.linear import solve
-from optisize.stage.wiring import Moving, held
+from optisize.stage.network import Network
+from optisize.stage.wiring import Moving
+from optisize.stage.wiring import held as held_part
 
 LEAST_CURRENT = 0.5  # of the pair's current in the middle of the range; less is taken as the end of the range
+SETTLED = 3e-3  # V; the step of an amplitude after which the next one would be some 0.1 mV
 BEYOND = 1.0  # V beyond the rails after which an end of the input range counts as none
 HARMONIC_POINTS = (
     8  # of the static curve over half a period: harmonics 13 and 19 are the first to be taken for the third
 )
-DEPARTURE_STEPS = 6
+DEPARTURE_STEPS = 24
 DEPARTURE_DONE = 1e-4  # of the amplitude, relative
 DEPARTURE_SETTLED = 1e-6  # V
 STEEPEST, FLATTEST = 4.0, 0.5  # of the departure over the amplitude, on logarithmic axes: a square in the usual case
@@ -40,7 +47,7 @@ def _input_range(a: Analysis) -> tuple[Array, Array]:
         twice = np.concatenate([columns, columns])
         sign = np.repeat([-1.0, 1.0], len(columns))
         least = LEAST_CURRENT * a.drain.id[a.wiring.pair].sum(axis=0)[twice]
-        ending = Ending(steered=False, current=least.astype(a.coarse))
+        ending = Ending(steered=False, current=least.astype(a.coarse), settled=SETTLED)
         end = follow(
             a.moving[1].take(twice),
             a.point.v[part.nodes].take(twice, axis=1).astype(a.coarse),
@@ -62,7 +69,7 @@ def steering_voltage(a: Analysis) -> Array:
     network = a.circuit.network.part(part)
     network = (network.single if a.coarse is np.float32 else network).take(chosen)
     drive = a.drives[part.nodes, 0].astype(a.coarse)
-    end = follow(network, start, None, drive, sign.astype(a.coarse), Ending(saturated=False))
+    end = follow(network, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=SETTLED))
     return _nearer(a, np.where(end.found, end.amplitude, np.nan).astype(np.float64))
 
 
@@ -77,35 +84,88 @@ def linear_range(a: Analysis, departure: float) -> Array:
         (N,); not a number where it was not found.
     """
     part, chosen, sign = _held(a)
-    network = a.circuit.network.part(part).take(chosen)
-    w, start = part.wiring, a.point.v[part.nodes].take(chosen, axis=1)
-    drive = a.drives[part.nodes, 0]
-    weights = np.zeros(len(w.nodes))
-    for node, weight in a.topology.output:
-        weights[w.index[node]] = weight
-    out = weights @ w.current_stamp
+    weights = _output_weights(a, part)
+    tangent = _tangent(a, part, weights)[chosen]
+    steered = 0.5 * a.drain.id[a.wiring.pair].sum(axis=0)[chosen] / np.abs(tangent)
+    guess = 0.3 * steered * np.sqrt(departure / 0.01) * len(a.topology.output)
+    network, start = a.circuit.network.part(part).take(chosen), a.point.v[part.nodes].take(chosen, axis=1)
+    held = _Held(network, start, a.drives[part.nodes, 0], weights @ part.wiring.current_stamp, sign, tangent, sign)
+    return _nearer(a, _departing(replace(held, rest=held.current(start)), guess, departure))
 
-    def current(v: Array) -> Array:
-        terminals = network.terminals(v)
-        return out @ network.branch_currents(terminals, network.law.drain(*terminals.of_law))
 
-    rest, tangent = current(start), _tangent(a, part, weights)[chosen]
-    reach = 0.5 * a.drain.id[a.wiring.pair].sum(axis=0)[chosen] / np.abs(tangent)
-    amplitude = 0.3 * reach * np.sqrt(departure / 0.01) * len(a.topology.output)
-    v, nodes = start.copy(), slice(w.unknowns, None)
-    log_last = log_far_last = np.full(len(chosen), np.nan)
+@dataclass(frozen=True)
+class _Held:
+    """Designs with held outputs, driven from rest: what their current into the outputs departs from.
+
+    Attributes:
+        network, start: the part with held outputs, and its node voltages at rest, (A, N).
+        drive, out: of the nodes, (A,), and of the branches into the output, (B,).
+        sign, tangent, rest: direction of the drive, slope [S] and current at rest [A], (N,).
+    """
+
+    network: Network
+    start: Array
+    drive: Array
+    out: Array
+    sign: Array
+    tangent: Array
+    rest: Array
+
+    def take(self, columns: NDArray[np.intp]) -> _Held:
+        """Return some of the designs."""
+        start = self.start.take(columns, axis=1)
+        sign, tangent, rest = self.sign[columns], self.tangent[columns], self.rest[columns]
+        return _Held(self.network.take(columns), start, self.drive, self.out, sign, tangent, rest)
+
+    def current(self, v: Array) -> Array:
+        """Return the current into the output at node voltages, (N,)."""
+        terminals = self.network.terminals(v)
+        return self.out @ self.network.branch_currents(terminals, self.network.law.drain(*terminals.of_law))
+
+    def departure(self, v: Array, amplitude: Array) -> tuple[Array, Array]:
+        """Return node voltages at an amplitude, from a guess, and the departure from the tangent there, (N,)."""
+        driven = slice(self.network.wiring.unknowns, None)
+        v[driven] = self.start[driven] + self.drive[driven, None] * (self.sign * amplitude)
+        v = settle(self.network, v, DEPARTURE_SETTLED).v
+        return v, np.abs((self.current(v) - self.rest) / (self.tangent * self.sign * amplitude) - 1.0)
+
+
+def _departing(held: _Held, guess: Array, departure: float) -> Array:
+    """Return the amplitude at which the current departs that far from its tangent, (N,).
+
+    The secant method on logarithms, along which the departure is close to a straight line of slope two, held within
+    what is known to be too little and too much.
+    """
+    result = np.full(len(guess), np.nan)
+    active, v, here = Active(len(guess)), held.start.copy(), np.log(guess)
+    last = far_last = np.full(len(guess), np.nan)
+    low, high = np.full(len(guess), -np.inf), np.full(len(guess), np.inf)
     for _ in range(DEPARTURE_STEPS):
-        v[nodes] = start[nodes] + drive[nodes, None] * (sign * amplitude)
-        v = settle(network, v, DEPARTURE_SETTLED).v
-        gone = np.abs((current(v) - rest) / (tangent * sign * amplitude) - 1.0)
-        log_here, log_far = np.log(amplitude), np.log(np.maximum(gone, 1e-12) / departure)
-        with np.errstate(all="ignore"):
-            slope = (log_far - log_far_last) / (log_here - log_last)
+        v, gone = held.departure(v, np.exp(here))
+        far = np.log(np.maximum(gone, 1e-12) / departure)
+        low, high = np.where(far < 0.0, here, low), np.where(far > 0.0, here, high)
+        slope = (far - far_last) / (here - last)
         slope = np.where((slope > FLATTEST) & (slope < STEEPEST), slope, 2.0)
-        log_last, log_far_last = log_here, log_far
-        step = np.clip(-log_far / slope, -1.5, 1.0)
-        amplitude = np.exp(log_here + step)
-    return _nearer(a, np.where(np.abs(step) < DEPARTURE_DONE, amplitude, np.nan))
+        following = here + np.clip(-far / slope, -1.5, 1.0)
+        following = np.where((following > low) & (following < high), following, 0.5 * (low + high))
+        fresh = active.fresh(np.abs(following - here) < DEPARTURE_DONE)
+        result[active.designs(fresh)] = np.exp(following[fresh])
+        last, far_last, here = here, far, following
+        left = active.thinned()
+        if left is not None:
+            if not len(left):
+                break
+            held, v = held.take(left), v.take(left, axis=1)
+            here, last, far_last, low, high = here[left], last[left], far_last[left], low[left], high[left]
+    return result
+
+
+def _output_weights(a: Analysis, part: Moving) -> Array:
+    """Return the output as a combination of all nodes of a part, (A,)."""
+    weights = np.zeros(len(part.wiring.nodes))
+    for node, weight in a.topology.output:
+        weights[part.wiring.index[node]] = weight
+    return weights
 
 
 def third_harmonic(a: Analysis, amplitude: float) -> Array:
@@ -147,12 +207,12 @@ def _third_harmonic(a: Analysis, amplitude: float) -> Array:
     return np.where(solved, np.abs(third / first), np.nan)
 
 
-def _held(a: Analysis) -> tuple[Moving, np.ndarray, Array]:
+def _held(a: Analysis) -> tuple[Moving, NDArray[np.intp], Array]:
     """Return the part with held outputs, and which designs are driven which way: both ways where the sides differ."""
     every = np.arange(a.circuit.designs)
     if a.alike:
-        return held(a.topology), every, np.ones(len(every))
-    return held(a.topology), np.concatenate([every, every]), np.repeat([-1.0, 1.0], len(every))
+        return held_part(a.topology), every, np.ones(len(every))
+    return held_part(a.topology), np.concatenate([every, every]), np.repeat([-1.0, 1.0], len(every))
 
 
 def _nearer(a: Analysis, amplitude: Array) -> Array:

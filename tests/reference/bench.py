@@ -36,6 +36,10 @@ class Bench:
         """Return the output of every stage, (N, points)."""
         return np.sum([sign * self.voltage(plot, node) for node, sign in self.topology.output], axis=0)
 
+    def mean(self, plot: str) -> np.ndarray:
+        """Return the output of every stage, of a differential one the mean of its sides, (N, points)."""
+        return np.mean([self.voltage(plot, node) for node, _ in self.topology.output], axis=0)
+
     def figure(self, transistor: Transistor, name: str, plot: str = "op") -> np.ndarray:
         """Return a parameter of one transistor of every stage, (N, points)."""
         designs = range(self.a.circuit.designs)
@@ -54,6 +58,12 @@ class Bench:
 def parameter(transistor: str, k: int, name: str) -> str:
     """Return the simulator's name of a parameter of one transistor of stage `k`."""
     return f"@m_{spice.part(transistor, k)}[{name}]"
+
+
+def saving(a: Analysis, figures: Sequence[str]) -> list[str]:
+    """Return the commands that keep figures of every transistor, until a ``delete all``; a sweep of them is slow."""
+    names = [parameter(t.name, k, name) for t in a.topology.transistors for k in range(a.circuit.designs) for name in figures]
+    return [f"save all {' '.join(names[i : i + 50])}" for i in range(0, len(names), 50)]
 
 
 def at_rest(a: Analysis) -> Sources:

@@ -28,7 +28,7 @@ from __future__ import annotations
 
 import subprocess
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -81,10 +81,12 @@ def part(name: str, k: int) -> str:
     return f"{name.replace('.', '_')}_{k}"
 
 
-def level1(t: Transistor, process: Process) -> list[str]:
-    """Return a level-1 transistor with a model of its own, since lambda follows its length; junctions do not leak.
+def level1(t: Transistor, process: Process, leak: float = 1e-30) -> list[str]:
+    """Return a level-1 transistor with a model of its own, since lambda follows its length; junctions hardly leak.
 
-    Its white noise current is 4 k T (2/3 gm) in both regions. It carries no flicker noise; see `with_flicker`.
+    Its white noise current is 4 k T (2/3 gm) in both regions. Its flicker noise current is KF |Id|^AF / (f W L Cox^2):
+    there is no NLEV, the exponent of f is always one, and gm is nowhere in it. With AF = 0 it does not depend on the
+    operating point, and `output_noise` makes it that of a voltage K / (Cox W L f^Af) at the gate.
     """
     card: TransistorParameters = process.nmos if t.channel == "n" else process.pmos
     values = {
@@ -101,8 +103,10 @@ def level1(t: Transistor, process: Process) -> list[str]:
         "cjsw": card.sidewall_capacitance,
         "mj": card.junction_grading,
         "mjsw": card.sidewall_grading,
+        "kf": card.flicker_coefficient * card.oxide_capacitance,
+        "af": 0.0,
         "pb": card.junction_potential,
-        "is": 1e-30,
+        "is": leak,
     }
     model = " ".join(f"{key}={number(value)}" for key, value in values.items())
     shape = {"w": t.width, "l": t.length, "ad": t.drain_area, "as": t.source_area}
@@ -112,30 +116,6 @@ def level1(t: Transistor, process: Process) -> list[str]:
         f"m_{t.name} {t.drain} {t.gate} {t.source} {t.bulk} model_{t.name} {drawn}",
         f".model model_{t.name} {t.channel}mos {model}",
     ]
-
-
-def with_flicker(device: Device) -> Device:
-    """Return the same device with flicker noise: a noise voltage in series with its gate, K / f^Af.
-
-    The level-1 model cannot do it: there is no NLEV, and its flicker current is KF |Id|^AF / (f W L Cox^2), with the
-    exponent of f always one and gm nowhere. A resistor's model has the exponent EF, and with AF = 0 its flicker current
-    KF / f^EF flows without any bias. A kilohm and a gain of 1e-6 leave 1.7e-29 V^2/Hz of its own white noise. At high
-    frequencies it also drives the gate's capacitances, which a current gm K of the channel does not: up to 0.002 % of
-    the whole density at 100 kHz and 0.06 % at 1 MHz.
-    """
-
-    def flickering(t: Transistor, process: Process) -> list[str]:
-        card: TransistorParameters = process.nmos if t.channel == "n" else process.pmos
-        density = card.flicker_coefficient / (card.oxide_capacitance * t.width * t.length)
-        gate = f"gate_{t.name}"
-        return [
-            *device(replace(t, gate=gate), process),
-            f"e_flicker_{t.name} {gate} {t.gate} flicker_{t.name} 0 1e-6",
-            f"r_flicker_{t.name} flicker_{t.name} 0 1k model_flicker_{t.name}",
-            f".model model_flicker_{t.name} r kf={number(density * 1e6)} af=0 ef={number(card.flicker_exponent)}",
-        ]
-
-    return flickering
 
 
 def control(c: Control, k: int) -> list[str]:
@@ -272,6 +252,9 @@ def nulled_input(circuit: Circuit, k: int, wanted: str = "0") -> list[str]:
     ]
 
 
+SUMMED = 1e-3  # gain of the sum of all outputs: whole, its rounding would be above what counts as converged
+
+
 def output_chain(circuit: Circuit) -> tuple[list[str], str]:
     """Return sources that add the outputs of all stages, and the node of the sum.
 
@@ -282,20 +265,30 @@ def output_chain(circuit: Circuit) -> tuple[list[str], str]:
     lines = []
     for k in range(circuit.designs):
         plus, minus = output_terminals(circuit, k)
-        lines.append(f"e_sum_{k} {nodes[k + 1]} {nodes[k]} {plus} {minus} 1")
+        lines.append(f"e_sum_{k} {nodes[k + 1]} {nodes[k]} {plus} {minus} {SUMMED}")
     return lines, nodes[-1]
 
 
-def output_noise(circuit: Circuit, plot: Plot) -> Array:
-    """Return the density of the noise at the output of every stage from such an analysis, (N, points) [V/sqrt(Hz)]."""
-    top = circuit.topology
-    elements = [f"m_{t.name}" for t in top.transistors] + [f"r_{r.name}" for r in top.resistors]
-    elements += [f"r_flicker_{t.name}" for t in top.transistors]
-    rows = []
+def output_noise(circuit: Circuit, plot: Plot, gm: Array) -> tuple[Array, Array]:
+    """Return what white and what flicker noise give at the output of every stage, each (N, points) [V^2/Hz].
+
+    Args:
+        circuit: of level-1 transistors.
+        plot: of such an analysis.
+        gm: the simulator's transconductances, (T, N), which turn a noise voltage at a gate into a current.
+    """
+    top, frequency = circuit.topology, plot["frequency"].real
+    white = np.zeros((circuit.designs, len(frequency)))
+    flicker = np.zeros_like(white)
     for k in range(circuit.designs):
-        names = [f"onoise_{part(element, k)}" for element in elements]
-        rows.append(np.sqrt(sum(plot[name] ** 2 for name in names if name in plot.names)))
-    return np.array(rows)
+        for row, t in enumerate(top.transistors):
+            card = circuit.process.nmos if top.channel(t) == "n" else circuit.process.pmos
+            name = f"onoise_m_{part(t.name, k)}"
+            white[k] += plot[f"{name}_id"] ** 2
+            flicker[k] += (plot[f"{name}_1overf"] * gm[row, k]) ** 2 * frequency ** (1.0 - card.flicker_exponent)
+        for r in top.resistors:
+            white[k] += plot[f"onoise_r_{part(r.name, k)}_thermal"] ** 2
+    return white / SUMMED**2, flicker / SUMMED**2
 
 
 def nodesets(circuit: Circuit, k: int, voltages: Array, digits: int = 1) -> list[str]:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -10,19 +12,117 @@ import numpy as np
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from tests.reference import spice
-from tests.reference.bench import Bench, Sources, parameter
+from tests.reference.bench import Bench, parameter
 
-DIGITS = 3  # of the nodesets [V]; with one the first point of a stage with cascodes takes a hundred times as long
-COARSE = np.array([0.0, 0.15, 0.3, 0.45, 0.6, 0.75, 0.88])  # of the way to an end that is expected
-STAGES_OF = dict[str, Array]
+DIGITS = 3  # of the nodesets [V]; with one digit, stages with cascodes take a hundred times as long to begin
+WITHOUT_JUNCTIONS = partial(spice.level1, leak=1e-100)  # an ideal tail pulls its node some volts beyond the rails
+COARSE = np.array([0.0, 0.15, 0.3, 0.45, 0.6, 0.75, 0.88, 0.96])  # of the way to where an end is expected
 
 
-def stretches(parts: Mapping[str, Array]) -> tuple[Array, dict[str, Sequence[str]]]:
-    """Join stretches of ways, each (N, points), to one; return it and the sweep of each stretch by name."""
-    analyses: dict[str, Sequence[str]] = {}
-    begin = 0
-    for name, part in parts.items():
-        end = begin + part.shape[1] - 1
-        analyses[name] = [f"dc v_theta {begin} {end} 1"]
-        begin = end + 1
-    return np.concatenate(list(parts.values()), axis=1), analyses
+@dataclass
+class Ways:
+    """The common-mode and the differential input voltage of every stage, stretch after stretch.
+
+    Attributes:
+        a: the stages.
+        common, differential: of each stretch, (N, points) [V].
+        analyses: the sweep of each stretch by its name.
+    """
+
+    a: Analysis
+    common: list[Array] = field(default_factory=list)
+    differential: list[Array] = field(default_factory=list)
+    analyses: dict[str, Sequence[str]] = field(default_factory=dict)
+
+    def add(self, name: str, *, common: Array | None = None, differential: Array | None = None) -> None:
+        """Add a stretch; the common mode stays in the middle of its range, the differential input at zero."""
+        given = common if common is not None else differential
+        assert given is not None
+        begin = sum(part.shape[1] for part in self.common)
+        middle = np.full(given.shape, self.a.circuit.conditions.middle)
+        self.common.append(middle if common is None else common)
+        self.differential.append(np.zeros(given.shape) if differential is None else differential)
+        self.analyses[name] = [f"dc v_theta {begin} {begin + given.shape[1] - 1} 1"]
+
+    def sources(self, k: int) -> list[str]:
+        """Return the sources of the inputs of stage `k`."""
+        lines = ["v_theta theta 0 0"] if k == 0 else []
+        for name, parts in (("cm", self.common), ("way", self.differential)):
+            lines += spice.path(f"{name}_{k}", np.concatenate([part[k] for part in parts]))
+        return [
+            *lines,
+            f"v_d_{k} d_{k} way_{k} 0 ac 1",
+            f"e_inp_{k} inp_{k} cm_{k} d_{k} 0 0.5",
+            f"e_inn_{k} inn_{k} cm_{k} d_{k} 0 -0.5",
+        ]
+
+    def run(
+        self,
+        ngspice: str,
+        folder: Path,
+        figures: Sequence[str],
+        *,
+        held: bool = False,
+        before: dict[str, Sequence[str]] | None = None,
+    ) -> Bench:
+        """Run all stretches in one process of the simulator.
+
+        Args:
+            ngspice: path of the simulator.
+            folder: where the files go.
+            figures: of every transistor that are kept, such as ``id``.
+            held: whether the outputs are held at rest by `spice.held_outputs`.
+            before: other analyses, with the inputs as at the beginning of the first stretch.
+        """
+        circuit, v = self.a.circuit, self.a.point.v
+        lines = [".options itl2=500"]
+        for k in range(circuit.designs):
+            lines += spice.stage(circuit, k, WITHOUT_JUNCTIONS, controlled=not held) + self.sources(k)
+            lines += spice.held_outputs(circuit, k, v) if held else []
+            lines += spice.nodesets(circuit, k, v, DIGITS)
+        designs = range(circuit.designs)
+        saves = [parameter(t.name, k, name) for t in self.a.topology.transistors for k in designs for name in figures]
+        return Bench(self.a, spice.simulate(ngspice, folder, lines, {**(before or {}), **self.analyses}, saves))
+
+
+def to_end(reach: Array, around: Array) -> Array:
+    """Return ways (N, points) from zero to an end that is expected, in coarse steps, and through it in fine ones.
+
+    Args:
+        reach: the end, (N,).
+        around: the fine steps from a little before it to a little beyond, (F,) or (N, F).
+    """
+    fine = np.maximum(reach[:, None] + around, 0.0)
+    return np.concatenate([COARSE * fine[:, :1], fine], axis=1)
+
+
+def margins(bench: Bench, plot: str) -> Array:
+    """Return vds - vdsat of every transistor that has to be saturated, by the simulator, (K, N, points)."""
+    result = []
+    for t in bench.topology.transistors:
+        if t.saturates:
+            sign = 1.0 if bench.topology.channel(t) == "n" else -1.0
+            ends = [0.0 if n == "ground" else bench.voltage(plot, n) for n in (t.drain, t.source)]
+            result.append(sign * (ends[0] - ends[1]) - np.abs(bench.figure(t, "vdsat", plot)))
+    return np.array(result)
+
+
+def pair(bench: Bench, plot: str) -> Array:
+    """Return the currents of both input transistors, by the simulator, (2, N, points)."""
+    rows = [t for t in bench.topology.transistors if t.group == "input"]
+    return np.array([np.abs(bench.figure(t, "id", plot)) for t in rows])
+
+
+def first_end(margin: Array, along: Array) -> Array:
+    """Return where the first margin (K, N, points) vanishes, as read from another quantity (N, points), (N,).
+
+    Infinite where none does.
+    """
+    smallest = margin.min(axis=0)
+    assert (smallest[:, 0] > 0.0).all()
+    beyond = (smallest < 0.0).argmax(axis=1)
+    k = np.flatnonzero(beyond)
+    i, result = beyond[k], np.full(len(along), np.inf)
+    part = smallest[k, i - 1] / (smallest[k, i - 1] - smallest[k, i])
+    result[k] = along[k, i - 1] + part * (along[k, i] - along[k, i - 1])
+    return result

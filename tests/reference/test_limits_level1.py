@@ -1,4 +1,5 @@
-"""How far a stage can go, against sweeps of the circuit simulator's level-1 model: headroom, swing, slewing, refusal.
+"""How far a stage can go, against sweeps of the circuit simulator's level-1 model: headroom, input range, swing, slewing,
+refusal.
 
 The saturation voltages and currents are the simulator's own, at every point of its sweep; the definitions are those of
 the catalogue of measures (common practice, no source). Law: Shichman and Hodges, IEEE JSSC 3, 1968.
@@ -6,6 +7,7 @@ the catalogue of measures (common practice, no source). Law: Shichman and Hodges
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -15,107 +17,104 @@ from optisize.process.card import load_process
 from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from optisize.stage.circuit import size_circuit
+from optisize.stage.excursion import follow
 from optisize.stage.measures import CATALOGUE
 from tests.reference import spice
-from tests.reference.bench import Bench, Sources, assert_same, at_rest, simulated
-from tests.reference.samples import EVERY_KIND, SOURCE_TIED, Kind, conditions, draw, sized
+from tests.reference.bench import Bench, assert_same, at_rest, simulated
+from tests.reference.samples import DEGENERATED, EVERY_KIND, SOURCE_TIED, Kind, conditions, draw, sized
+from tests.reference.sweeps import Ways, first_end, margins, pair, to_end
 
 SIZINGS = 40
-KINDS = EVERY_KIND + SOURCE_TIED
+KINDS = EVERY_KIND + SOURCE_TIED + DEGENERATED
 VOLTAGE = 1e-4  # V, for a margin at a given point
-SWING = 5e-3  # V, for an end that is interpolated between the points of a sweep
-POINTS, RATIO = 320, 3000.0  # of a differential sweep, and of its largest step over its smallest
-STEERED = 0.01  # the catalogue's bound on the current of an input transistor, of the pair's
+END = 5e-3  # V, for an end that is interpolated between the points of a sweep
+RANGE_POINTS = 7
+BEYOND = 1.0  # V beyond the rails; what ends the input range there only does not end it
+STEERED, LEAST = 0.01, 0.5  # the catalogue's bounds on one input transistor, of the pair, and on the pair, of its rest
+AROUND = np.array([-0.02, -0.005, -0.0015, 0.0015, 0.005, 0.02])  # V, about the end of an input range
+SHARES = np.array([-0.03, -0.01, -0.003, 0.003, 0.01, 0.03])  # of the drive, about the end of a swing
 
 
-def margins(bench: Bench, plot: str) -> Array:
-    """Return vds - vdsat of every transistor that has to be saturated, by the simulator, (K, N, points)."""
-    result = []
-    for t in bench.topology.transistors:
-        if t.saturates:
-            sign = 1.0 if bench.topology.channel(t) == "n" else -1.0
-            ends = [0.0 if n == "ground" else bench.voltage(plot, n) for n in (t.drain, t.source)]
-            result.append(sign * (ends[0] - ends[1]) - np.abs(bench.figure(t, "vdsat", plot)))
-    return np.array(result)
+@dataclass(frozen=True)
+class Swept:
+    """A population, and what the simulator says of it: margins and outputs along five sweeps."""
+
+    bench: Bench
+
+    @property
+    def a(self) -> Analysis:
+        return self.bench.a
+
+    def range_end(self, plot: str) -> Array:
+        """Return the common mode at which saturation or half of the pair's current is lost, (N,)."""
+        current = pair(self.bench, plot).sum(axis=0)
+        left = current / (LEAST * current[:, :1]) - 1.0
+        return first_end(np.concatenate([margins(self.bench, plot), left[None]]), self.bench.voltage(plot, "cm"))
+
+    def excursion(self, plot: str) -> Array:
+        """Return how far the output goes until saturation or the last hundredth of a current is lost, (N,)."""
+        current, output = pair(self.bench, plot), self.bench.output(plot)
+        left = current / current.sum(axis=0) - STEERED
+        return first_end(np.concatenate([margins(self.bench, plot), left]), np.abs(output - output[:, :1]))
 
 
-def steering(bench: Bench, plot: str) -> Array:
-    """Return the share of each input transistor in the pair's current, by the simulator, (2, N, points)."""
-    pair = [t for t in bench.topology.transistors if t.group == "input"]
-    current = np.array([np.abs(bench.figure(t, "id", plot)) for t in pair])
-    return current / current.sum(axis=0)
+def to_range_end(a: Analysis, end: Array, rail: float) -> Array:
+    """Return the ways of the common mode to an end of the input range, or to a volt beyond the rail, (N, points)."""
+    middle = a.circuit.conditions.middle
+    limited = np.isfinite(end)
+    sign = np.sign(rail - middle)
+    reach = np.where(limited, np.abs(end - middle), np.abs(rail - middle) + BEYOND)
+    fine = to_end(reach, AROUND)
+    unlimited = reach[:, None] * np.linspace(0.0, 1.0, fine.shape[1])
+    return middle + sign * np.where(limited[:, None], fine, unlimited)
 
 
-def common_sweep(k: int) -> list[str]:
-    """Return inputs that both follow one swept source."""
-    source = ["v_common common 0 0"] if k == 0 else []
-    return source + [f"e_{side}_{k} {side}_{k} 0 common 0 1" for side in ("inp", "inn")]
+def amplitudes(a: Analysis, sign: float) -> Array:
+    """Return the differential drive at which the kernel expects the end of the swing, (N,); it only places points."""
+    end = follow(a.circuit.network, a.point.v, None, a.drives[:, 0], np.full(a.circuit.designs, sign))
+    assert end.found.all()
+    return end.amplitude
 
 
-@pytest.mark.parametrize("kind", KINDS, ids=str)
-def test_headroom(kind: Kind, ngspice: str, tmp_path: Path) -> None:
-    """The smallest margin over the range; that it lies at an end is what the kernel relies on."""
-    a = sized(kind, "handbook", SIZINGS)
+@pytest.fixture(scope="module", params=KINDS, ids=str)
+def swept(request: pytest.FixtureRequest, ngspice: str, tmp_path_factory: pytest.TempPathFactory) -> Swept:
+    a = sized(request.param, "handbook", SIZINGS)
     low, high = a.circuit.conditions.common_mode
-    sweep = [f"dc v_common {low!r} {high + 1e-9!r} {(high - low) / 10!r}"]
-    bench = simulated(ngspice, tmp_path, a, spice.level1, common_sweep, {"sweep": sweep}, ("vdsat",))
-    smallest = margins(bench, "sweep").min(axis=0)
-    assert smallest.shape == (SIZINGS, 11)
-    assert_same(CATALOGUE["headroom"].function(a), smallest[:, [0, -1]].min(axis=1), absolute=VOLTAGE)
-    assert_same(CATALOGUE["headroom"].function(a), smallest.min(axis=1), absolute=VOLTAGE)
-    assert_same(a.room_at_rest, smallest[:, 5], absolute=VOLTAGE)
+    ways = Ways(a)
+    ways.add("range", common=np.tile(np.linspace(low, high, RANGE_POINTS), (SIZINGS, 1)))
+    ways.add("low", common=to_range_end(a, CATALOGUE["input_range_low"].of(a), 0.0))
+    ways.add("high", common=to_range_end(a, CATALOGUE["input_range_high"].of(a), a.circuit.conditions.supply))
+    for name, sign in (("down", -1.0), ("up", 1.0)):
+        reach = amplitudes(a, sign)
+        ways.add(name, differential=sign * to_end(reach, reach[:, None] * SHARES))
+    return Swept(ways.run(ngspice, tmp_path_factory.mktemp("limits"), ("id", "vdsat")))
 
 
-def differential_sweep(middle: float, amplitudes: Array) -> Sources:
-    """Return inputs that go apart with one swept source, each stage up to its own amplitude.
-
-    The drive grows exponentially with the source, so that a gain of a hundred is as finely resolved as one of two.
-    """
-
-    def sources(k: int) -> list[str]:
-        half = spice.number(0.5 * amplitudes[k] / (RATIO - 1.0))
-        return [
-            *(["v_sweep sweep 0 0"] if k == 0 else []),
-            f"v_middle_{k} middle_{k} 0 {spice.number(middle)}",
-            f"b_half_{k} half_{k} 0 v={half}*(exp({spice.number(np.log(RATIO))}*v(sweep))-1)",
-            f"e_inp_{k} inp_{k} middle_{k} half_{k} 0 1",
-            f"e_inn_{k} inn_{k} middle_{k} half_{k} 0 -1",
-        ]
-
-    return sources
+def test_headroom(swept: Swept) -> None:
+    """The smallest margin over the range; that it lies at an end is what the kernel relies on."""
+    smallest = margins(swept.bench, "range").min(axis=0)
+    assert smallest.shape == (SIZINGS, RANGE_POINTS)
+    found = CATALOGUE["headroom"].of(swept.a)
+    assert_same(found, smallest[:, [0, -1]].min(axis=1), absolute=VOLTAGE)
+    assert_same(found, smallest.min(axis=1), absolute=VOLTAGE)
+    assert_same(swept.a.room_at_rest, smallest[:, RANGE_POINTS // 2], absolute=VOLTAGE)
 
 
-def first_end(margin: Array, output: Array) -> Array:
-    """Return how far the output is from its rest where the first margin (K, N, points) vanishes, (N,)."""
-    smallest = margin.min(axis=0)
-    result = np.full(len(output), np.nan)
-    for k in range(len(output)):
-        beyond = np.flatnonzero(smallest[k] < 0.0)
-        if len(beyond) and beyond[0] > 0:
-            i = beyond[0]
-            part = smallest[k, i - 1] / (smallest[k, i - 1] - smallest[k, i])
-            end = output[k, i - 1] + part * (output[k, i] - output[k, i - 1])
-            result[k] = abs(end - output[k, 0])
-    return result
+@pytest.mark.parametrize("side", ["low", "high"])
+def test_input_range(swept: Swept, side: str) -> None:
+    """Up to the first transistor out of saturation or half of the pair's current; unlimited a volt beyond the rails."""
+    found, reference = CATALOGUE[f"input_range_{side}"].of(swept.a), swept.range_end(side)
+    limited = np.isfinite(reference)
+    assert (np.isfinite(found) == limited).all()
+    assert (found[~limited] == (-np.inf if side == "low" else np.inf)).all()
+    assert_same(found[limited], reference[limited], absolute=END)
 
 
-@pytest.mark.parametrize("kind", KINDS, ids=str)
-def test_output_swing(kind: Kind, ngspice: str, tmp_path: Path) -> None:
-    """Both directions, up to the first transistor out of saturation or the pair steered to 99 %.
-
-    The sweep begins at rest and goes beyond full steering, which a square-law pair reaches at sqrt(2) overdrives.
-    """
-    a = sized(kind, "handbook", SIZINGS)
-    twice = Analysis(a.circuit.take(np.tile(np.arange(a.circuit.designs), 2)))
-    sign = np.repeat([-1.0, 1.0], SIZINGS)
-    amplitude = 1.6 * twice.saturation.vdsat[twice.wiring.rows["input.p"]] + 0.1
-    sources = differential_sweep(a.circuit.conditions.middle, sign * amplitude)
-    sweep = [f"dc v_sweep 0 1 {1 / POINTS}"]
-    bench = simulated(ngspice, tmp_path, twice, spice.level1, sources, {"sweep": sweep}, ("id", "vdsat"))
-    margin = np.concatenate([margins(bench, "sweep"), steering(bench, "sweep") - STEERED])
-    reached = first_end(margin, bench.output("sweep")).reshape(2, SIZINGS)
-    assert_same(np.array(a.output_excursions), reached, absolute=SWING)
-    assert_same(CATALOGUE["output_swing"].function(a), 2.0 * reached.min(axis=0), absolute=SWING)
+def test_output_swing(swept: Swept) -> None:
+    """Both directions, up to the first transistor out of saturation or the pair steered to 99 %."""
+    reached = np.array([swept.excursion(plot) for plot in ("down", "up")])
+    assert_same(np.array(swept.a.output_excursions), reached, absolute=END)
+    assert_same(CATALOGUE["output_swing"].of(swept.a), 2.0 * reached.min(axis=0), absolute=2.0 * END)
 
 
 SLEWING = 1e-10  # F; a load that outweighs every capacitance of the transistors
