@@ -28,6 +28,7 @@ CATALOGUE: dict[str, Measure] = {}
 _HANDBOOK = "Gray, Hurst, Lewis and Meyer, Analysis and Design of Analog Integrated Circuits, ch. 3 (from memory)"
 
 
+_NOISE = "Gray, Hurst, Lewis and Meyer, Analysis and Design of Analog Integrated Circuits, ch. 11 (from memory)"
 _MATCHING = "Pelgrom, Duinmaijer and Welbers, IEEE JSSC 24, 1989 (from memory)"
 
 _FROM_DC = Parameter("frequency", "Hz", "where it is taken; 0 for DC", 0.0, 0.0, 1e13)
@@ -134,14 +135,14 @@ def offset(a: Analysis, sigmas: float = 3.0) -> Array:
     return np.abs(a.offset) + sigmas * mismatch.offset_sigma(a)
 
 
-@_measure("V/Hz^0.5", "min", source=_HANDBOOK, parameters=(_FREQUENCY,))
+@_measure("V/Hz^0.5", "min", source=_NOISE, parameters=(_FREQUENCY,))
 def input_noise(a: Analysis, frequency: float = 1e3) -> Array:
     """Noise density at a frequency, referred to the differential input: thermal and flicker noise of all transistors,
     thermal noise of all resistors. The bias currents themselves are taken as noiseless."""
     return np.sqrt(noise.input_density(response(a, frequency)))
 
 
-@_measure("V", "min", source=_HANDBOOK, parameters=(_BAND,))
+@_measure("V", "min", source=_NOISE, parameters=(_BAND,))
 def input_noise_total(a: Analysis, band: tuple[float, float] = (1.0, 1e5)) -> Array:
     """Effective value of the noise referred to the differential input, integrated over a band."""
     return np.sqrt(noise.integrated(a, band))

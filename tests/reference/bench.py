@@ -62,7 +62,9 @@ def parameter(transistor: str, k: int, name: str) -> str:
 
 def saving(a: Analysis, figures: Sequence[str]) -> list[str]:
     """Return the commands that keep figures of every transistor, until a ``delete all``; a sweep of them is slow."""
-    names = [parameter(t.name, k, name) for t in a.topology.transistors for k in range(a.circuit.designs) for name in figures]
+    names = [
+        parameter(t.name, k, name) for t in a.topology.transistors for k in range(a.circuit.designs) for name in figures
+    ]
     return [f"save all {' '.join(names[i : i + 50])}" for i in range(0, len(names), 50)]
 
 

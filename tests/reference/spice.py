@@ -161,9 +161,7 @@ def transistors(circuit: Circuit, k: int, *, own_ground: bool = False) -> list[T
     ]
 
 
-def stage(
-    circuit: Circuit, k: int, device: Device, *, own_ground: bool = False, controlled: bool = True
-) -> list[str]:
+def stage(circuit: Circuit, k: int, device: Device, *, own_ground: bool = False, controlled: bool = True) -> list[str]:
     """Return the elements of stage `k`, its supply and its load, without its inputs.
 
     With `own_ground` the ground of the stage is the node ``gnd_k``, held by the source ``v_ground_k``. What is not

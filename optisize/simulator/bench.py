@@ -1,0 +1,354 @@
+"""How the circuit simulator gives each measure: a table from the catalogue's name to analysis and evaluation.
+
+A bench is a few commands that leave the figure in the vector ``result`` or in a variable. The inputs are
+driven by the sources ``vd`` (differential, with an AC value of one) and ``vcm``. Every bench begins in an empty plot
+and leaves the sources as it found them, so that none depends on another. A new measure is one more function here, its
+docstring what the deck says of it.
+"""
+
+from __future__ import annotations
+
+import inspect
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from optisize.problem.own_measures import origin
+from optisize.simulator.netlist import Device, number, part
+from optisize.simulator.site import DC, POINTS, Answer, Site, at, driven, nearer, swept, ways
+from optisize.stage.analysis import Analysis
+from optisize.stage.excursion import STEERED, follow
+from optisize.stage.measures import CATALOGUE, Measure
+from optisize.stage.ranges import BEYOND, LEAST_CURRENT
+
+PER_DECADE = 50
+LOWEST, HIGHEST = "1m", "1t"  # Hz, of the frequency response
+RANGE_POINTS = 10
+CURVE = 16  # points of the static curve over half a period
+OPEN, CLOSED = "1e15", "1"  # ohm, of what holds the outputs
+
+
+@dataclass(frozen=True)
+class Bench:
+    """How one measure is had from the simulator.
+
+    Attributes:
+        commands: from the site and the parameters of the measure.
+        how: in words.
+        needs: parts of the bench beside the stage: ``held``, ``curve``, ``null``, ``current``, ``noise``.
+    """
+
+    commands: Callable[..., Answer]
+    how: str = ""
+    needs: tuple[str, ...] = ()
+
+
+BENCHES: dict[str, Bench] = {}
+_MISMATCH = "a figure of mismatch; `optisize spread` samples it"
+NOT_SIMULATED: dict[str, str] = {
+    "cmrr_mismatch": _MISMATCH,
+    "common_mode_gain_sigma": _MISMATCH,
+    "offset_sigma": _MISMATCH,
+    "offset": _MISMATCH,
+    "area": "a figure of the layout",
+    "slew_rate": "a current over a capacitance by its definition, so computed",
+}
+
+
+def _bench(*needs: str) -> Callable[[Callable[..., Answer]], Callable[..., Answer]]:
+    """Enter a function into the table under its name."""
+
+    def enter(function: Callable[..., Answer]) -> Callable[..., Answer]:
+        BENCHES[function.__name__] = Bench(function, inspect.getdoc(function) or "", needs)
+        return function
+
+    return enter
+
+
+@_bench()
+def gain(s: Site) -> Answer:
+    """Differential gain at DC."""
+    return Answer([DC, f"let result = db({s.output})"])
+
+
+@_bench()
+def common_mode_gain(s: Site) -> Answer:
+    """Gain from both inputs together, at DC."""
+    return Answer(driven("vcm", DC, [f"let result = real({s.mean})"]))
+
+
+def _rejection(s: Site, source: str, frequency: float) -> Answer:
+    """Return the differential gain over the gain from another source to the mean of the outputs."""
+    analysis = at(frequency)
+    first = [analysis, f"let wanted = abs({s.output})", "set wanted = $&wanted"]
+    return Answer([*first, *driven(source, analysis, [f"let result = db($wanted/({s.mean}))"])])
+
+
+@_bench()
+def cmrr(s: Site, frequency: float) -> Answer:
+    """Differential gain over the gain from both inputs together."""
+    return _rejection(s, "vcm", frequency)
+
+
+@_bench()
+def supply_rejection(s: Site, frequency: float) -> Answer:
+    """Differential gain over the gain from the supply."""
+    return _rejection(s, "vsupply", frequency)
+
+
+@_bench()
+def ground_rejection(s: Site, frequency: float) -> Answer:
+    """Differential gain over the gain from the ground."""
+    return _rejection(s, "vground", frequency)
+
+
+@_bench("null")
+def offset_systematic(s: Site) -> Answer:
+    """Differential input at which a loop holds the output where it is wanted."""
+    return Answer(["alter vclose dc = 1", "op", "let result = v(null)", "alter vclose dc = 0"])
+
+
+@_bench("noise")
+def input_noise(s: Site, frequency: float) -> Answer:
+    """Noise density at the differential input."""
+    f = number(frequency)
+    return Answer([f"noise {s.noise_output} vd lin 1 {f} {f}", "let result = inoise_spectrum"])
+
+
+@_bench("noise")
+def input_noise_total(s: Site, band: tuple[float, float]) -> Answer:
+    """Noise at the differential input over the band."""
+    low, high = band
+    points = _points_a_decade(np.log10(high / low))
+    sweep = f"noise {s.noise_output} vd dec {points} {number(low)} {number(high)}"
+    return Answer([sweep, "let result = inoise_total"])
+
+
+def _points_a_decade(decades: float, least: int = 20, most: int = 220) -> int:
+    """Return how many points a decade end a sweep where a band ends, as near as can be."""
+    counts = np.arange(least, most)
+    lost = np.mod(counts * decades + 1e-6, 1.0) / counts
+    return int(counts[np.argmax(lost < 1e-3 if (lost < 1e-3).any() else lost == lost.min())])
+
+
+@_bench()
+def supply_current(s: Site) -> Answer:
+    """Current from the supply at rest."""
+    return Answer(["op", "let result = -i(vsupply)"])
+
+
+@_bench()
+def power(s: Site) -> Answer:
+    """Supply voltage times that current."""
+    return Answer(["op", f"let result = -i(vsupply)*{number(s.a.circuit.conditions.supply)}"])
+
+
+@_bench()
+def headroom(s: Site) -> Answer:
+    """Least vds - vdsat over the common-mode range."""
+    low, high = s.a.circuit.conditions.common_mode
+    step = (high - low) / RANGE_POINTS
+    sweep = f"dc vcm {number(low)} {number(high + 1e-3 * step)} {number(step)}" if step else "op"
+    return Answer([sweep, *s.room(), "let result = vecmin(room)"])
+
+
+def _input_range(s: Site, side: float, measure: str) -> Answer:
+    conditions = s.a.circuit.conditions
+    rail, middle = (conditions.supply if side > 0.0 else 0.0), conditions.middle
+    most = abs(rail - middle) + BEYOND
+    expected = float(CATALOGUE[measure].of(s.a)[0]) - middle
+    half = ["op", *s.pair(), f"let half = {LEAST_CURRENT}*(positive+negative)", "set half = $&half"]
+    room = [*s.room(), *s.pair(), "let room = least(room,(positive+negative)/$half-1)"]
+    ends = swept("vcm", middle, ways(expected, side, most), room, "v(cm)")
+    # Without room in the middle, the range ends there.
+    words = [
+        "if $reading eq 0",
+        f"  set reading = {number(middle)}",
+        "end",
+        "if $reading gt 1e98",
+        f"  set reading = {'unlimited' if side > 0.0 else '-unlimited'}",
+        "end",
+    ]
+    return Answer([*half, *ends, *words], "$reading")
+
+
+@_bench()
+def input_range_low(s: Site) -> Answer:
+    """Common mode at which saturation or half of the pair's current is lost, downwards."""
+    return _input_range(s, -1.0, "input_range_low")
+
+
+@_bench()
+def input_range_high(s: Site) -> Answer:
+    """Common mode at which saturation or half of the pair's current is lost, upwards."""
+    return _input_range(s, 1.0, "input_range_high")
+
+
+@_bench()
+def output_swing(s: Site) -> Answer:
+    """Twice the way of the output to where saturation is lost or the pair is steered, the shorter one."""
+    a = s.a
+    room = [
+        *s.room(),
+        *s.pair(),
+        f"let room = least(room,least(positive,negative)/(positive+negative)-{STEERED})",
+    ]
+
+    def sweep(sign: float) -> list[str]:
+        end = follow(a.circuit.network, a.point.v, None, a.drives[:, 0], np.array([sign]))
+        expected = float(end.amplitude[0]) if end.found[0] else np.nan
+        return swept("vd", 0.0, ways(expected, sign), room, f"2*abs({s.output}-$rest)")
+
+    return nearer(s, sweep, both=True, before=["op", f"let rest = {s.output}", "set rest = $&rest"])
+
+
+def _holding(s: Site, closed: bool) -> list[str]:
+    """Return the commands that hold the outputs where they are, or let go of them."""
+    if not closed:
+        return [f"alter rhold_{_plain(x)} = {OPEN}" for x in s.held()]
+    held = [f"alter vhold_{_plain(x)} dc = v({x})" for x in s.held()]
+    return ["op", *held, *(f"alter rhold_{_plain(x)} = {CLOSED}" for x in s.held())]
+
+
+def _plain(node: str) -> str:
+    return node.replace(".", "_")
+
+
+@_bench("held")
+def linear_range(s: Site, departure: float) -> Answer:
+    """Differential input at which the current into the held output departs from its tangent."""
+    expected = float(CATALOGUE["linear_range"].function(s.a, departure)[0])
+    current = "-".join(f"i(vhold_{x})" for x in s.ends)
+    tangent = [DC, f"let tangent = real({current})", "set tangent = $&tangent"]
+    room = [f"let room = {number(departure)}-abs(({current})/(($tangent)*v(d))-1)"]
+
+    def sweep(sign: float) -> list[str]:
+        reach = ways(expected, sign)
+        return swept("vd", reach[0] / POINTS, reach, room, "abs(v(d))")
+
+    return nearer(s, sweep, before=[*_holding(s, True), *tangent], after=_holding(s, False))
+
+
+@_bench("held")
+def steering_voltage(s: Site) -> Answer:
+    """Differential input that leaves one input transistor with 1 % of the pair's current, output held."""
+    expected = float(CATALOGUE["steering_voltage"].of(s.a)[0])
+    room = [*s.pair(), f"let room = least(positive,negative)/(positive+negative)-{STEERED}"]
+
+    def sweep(sign: float) -> list[str]:
+        return swept("vd", 0.0, ways(expected, sign), room, "abs(v(d))")
+
+    return nearer(s, sweep, before=_holding(s, True), after=_holding(s, False))
+
+
+@_bench("curve")
+def distortion(s: Site, amplitude: float) -> Answer:
+    """Third harmonic over the fundamental, of the static curve over half a period of the sine."""
+    lines = [
+        "option reltol=1e-10 vntol=1e-12",
+        f"alter vamplitude dc = {number(amplitude)}",
+        f"dc vstep 0 {CURVE}.001 1",
+        "alter vamplitude dc = 0",
+        "option reltol=1e-7 vntol=1e-10",
+        f"let angle = pi*v(step)/{CURVE}",
+        f"let curve = ({s.output})*(1-((v(step) lt 0.5)+(v(step) gt {CURVE}-0.5))/2)",
+        "let result = db(mean(curve*cos(3*angle))/mean(curve*cos(angle)))",
+    ]
+    return Answer(lines)
+
+
+def _crossing(s: Site, level: str) -> list[str]:
+    """Return the commands that set ``crossing`` to where the gain has fallen to a level, else to ``undefined``."""
+    return [
+        f"ac dec {PER_DECADE} {LOWEST} {HIGHEST}",
+        f"let gain = abs({s.output})",
+        f"let level = {level}",
+        "set crossing = undefined",
+        "if vecmin(gain) lt level and gain[0] gt level",
+        "  meas ac falls when gain=level fall=1",
+        "  set crossing = $&falls",
+        "end",
+    ]
+
+
+@_bench()
+def bandwidth(s: Site) -> Answer:
+    """Frequency at which the gain has fallen by 3 dB."""
+    return Answer(_crossing(s, "gain[0]/sqrt(2)"), "$crossing")
+
+
+@_bench()
+def unity_gain_frequency(s: Site) -> Answer:
+    """Frequency at which the gain has fallen to one."""
+    return Answer([*_crossing(s, "1"), "if gain[0] le 1", "  set crossing = 0", "end"], "$crossing")
+
+
+@_bench()
+def phase(s: Site) -> Answer:
+    """Phase of the gain there, against DC."""
+    lines = [
+        *_crossing(s, "1"),
+        f"let rest = real(({s.output})[0])",
+        "set rest = $&rest",
+        "set turned = undefined",
+        "if vecmin(gain) lt level and gain[0] gt level",
+        "  ac lin 1 $crossing $crossing",
+        f"  let turned = ph(({s.output})/($rest))*180/pi",
+        "  if turned gt 90",
+        "    let turned = turned-360",
+        "  end",
+        "  set turned = $&turned",
+        "end",
+    ]
+    return Answer(lines, "$turned")
+
+
+@_bench("current")
+def output_resistance(s: Site) -> Answer:
+    """Voltage at the output under a current of one ampere into it, small signal."""
+    return Answer(driven("iout", DC, [f"let result = real({s.output})"]))
+
+
+@_bench()
+def input_capacitance(s: Site, frequency: float) -> Answer:
+    """Charge of an input over its voltage under the differential drive, of the heavier one."""
+    # The source of each input has half of the drive; its current runs into its first node.
+    f = number(frequency or 1.0)
+    charge = f"/(2*pi*{f}*0.5)"
+    positive, negative = f"-imag(i(einp)){charge}", f"imag(i(einn)){charge}"
+    return Answer([at(frequency or 1.0), f"let result = -least(-({positive}),-({negative}))"])
+
+
+def no_bench(measure: Measure, a: Analysis) -> str:
+    """Return why a measure of a stage is not simulated; empty where it is."""
+    name = origin(measure)
+    if name == "offset_systematic":
+        single = len(a.topology.output) == 1 and a.circuit.conditions.output_common_mode is not None
+        return "" if single else "zero by its definition, of this output"
+    if name in BENCHES or name.rpartition(".")[2] in FIGURES:
+        return ""
+    return NOT_SIMULATED.get(name, "has no bench")
+
+
+# Of one transistor: from the site and the transistor to an expression.
+FIGURES: dict[str, Callable[[Site, Device], str]] = {
+    "id": lambda s, d: s.devices.figure(d, "id"),
+    "vdsat": lambda s, d: s.devices.figure(d, "vdsat"),
+    "vds": lambda s, d: s.across(d),
+    "vgs": lambda s, d: s.control(d),
+}
+
+
+def bench_of(measure: Measure) -> Bench:
+    """Return the bench of a measure that has one."""
+    name = origin(measure)
+    if name in BENCHES:
+        return BENCHES[name]
+    transistor, _, figure = name.rpartition(".")
+
+    def commands(s: Site) -> Answer:
+        device = next(d for d in s.transistors if d.name == part(transistor))
+        return Answer(["op", f"let result = {FIGURES[figure](s, device)}"])
+
+    return Bench(commands, "Of the transistor at rest.")
