@@ -15,7 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from optisize.problem.own_measures import origin
-from optisize.simulator.netlist import Device, number, part
+from optisize.simulator.netlist import HELD, Device, number, part
 from optisize.simulator.site import DC, POINTS, Answer, Site, at, driven, nearer, swept, ways
 from optisize.stage.analysis import Analysis
 from optisize.stage.excursion import STEERED, follow
@@ -26,7 +26,6 @@ PER_DECADE = 50
 LOWEST, HIGHEST = "1m", "1t"  # Hz, of the frequency response
 RANGE_POINTS = 10
 CURVE = 16  # points of the static curve over half a period
-OPEN, CLOSED = "1e15", "1"  # ohm, of what holds the outputs
 
 
 @dataclass(frozen=True)
@@ -82,7 +81,15 @@ def _rejection(s: Site, source: str, frequency: float) -> Answer:
     """Return the differential gain over the gain from another source to the mean of the outputs."""
     analysis = at(frequency)
     first = [analysis, f"let wanted = abs({s.output})", "set wanted = $&wanted"]
-    return Answer([*first, *driven(source, analysis, [f"let result = db($wanted/({s.mean}))"])])
+    last = [
+        f"let unwanted = abs({s.mean})",
+        "set rejection = unlimited",
+        "if unwanted gt 0",
+        "  let rejection = db($wanted/unwanted)",
+        "  set rejection = $&rejection",
+        "end",
+    ]
+    return Answer([*first, *driven(source, analysis, last)], "$rejection")
 
 
 @_bench()
@@ -147,10 +154,15 @@ def power(s: Site) -> Answer:
 @_bench()
 def headroom(s: Site) -> Answer:
     """Least vds - vdsat over the common-mode range."""
-    low, high = s.a.circuit.conditions.common_mode
-    step = (high - low) / RANGE_POINTS
-    sweep = f"dc vcm {number(low)} {number(high + 1e-3 * step)} {number(step)}" if step else "op"
-    return Answer([sweep, *s.room(), "let result = vecmin(room)"])
+    conditions = s.a.circuit.conditions
+    lines = ["set room = 1e99"]
+    for end in dict.fromkeys(conditions.common_mode):
+        step = (end - conditions.middle) / RANGE_POINTS
+        sweep = f"dc vcm {number(conditions.middle)} {number(end + 1e-3 * step)} {number(step)}" if step else "op"
+        lines.append(sweep)
+        for expression in s.room().values():
+            lines += [f"let room = vecmin({expression})", "if room lt $room", "  set room = $&room", "end"]
+    return Answer(lines, "$room")
 
 
 def _input_range(s: Site, side: float, measure: str) -> Answer:
@@ -159,18 +171,19 @@ def _input_range(s: Site, side: float, measure: str) -> Answer:
     most = abs(rail - middle) + BEYOND
     expected = float(CATALOGUE[measure].of(s.a)[0]) - middle
     half = ["op", *s.pair(), f"let half = {LEAST_CURRENT}*(positive+negative)", "set half = $&half"]
-    room = [*s.room(), *s.pair(), "let room = least(room,(positive+negative)/$half-1)"]
-    ends = swept("vcm", middle, ways(expected, side, most), room, "v(cm)")
-    # Without room in the middle, the range ends there.
+    margins = {**s.room(), "current": "(positive+negative)/($half)-1"}
+    reach = swept("vcm", middle, ways(expected, side, most), margins, f"abs(v(cm)-{number(middle)})", s.pair())
+    end = f"{number(middle)}{'+' if side > 0.0 else '-'}$reading"
     words = [
-        "if $reading eq 0",
-        f"  set reading = {number(middle)}",
-        "end",
-        "if $reading gt 1e98",
+        "if $reading lt 1e98",
+        f"  let reading = {end}",
+        "  set reading = $&reading",
+        "else",
         f"  set reading = {'unlimited' if side > 0.0 else '-unlimited'}",
         "end",
     ]
-    return Answer([*half, *ends, *words], "$reading")
+    # Beyond the ends, where everything is off, a leak at each junction keeps the matrix regular.
+    return Answer(["option gmin=1e-12", *half, *reach, "option gmin=1e-16", *words], "$reading")
 
 
 @_bench()
@@ -189,26 +202,20 @@ def input_range_high(s: Site) -> Answer:
 def output_swing(s: Site) -> Answer:
     """Twice the way of the output to where saturation is lost or the pair is steered, the shorter one."""
     a = s.a
-    room = [
-        *s.room(),
-        *s.pair(),
-        f"let room = least(room,least(positive,negative)/(positive+negative)-{STEERED})",
-    ]
+    margins = s.room() | {x: f"{x}/(positive+negative)-{STEERED}" for x in ("positive", "negative")}
+    margins = {f"{name}_left" if name in ("positive", "negative") else name: m for name, m in margins.items()}
 
     def sweep(sign: float) -> list[str]:
         end = follow(a.circuit.network, a.point.v, None, a.drives[:, 0], np.array([sign]))
         expected = float(end.amplitude[0]) if end.found[0] else np.nan
-        return swept("vd", 0.0, ways(expected, sign), room, f"2*abs({s.output}-$rest)")
+        return swept("vd", 0.0, ways(expected, sign), margins, f"2*abs({s.output}-($rest))", s.pair())
 
     return nearer(s, sweep, both=True, before=["op", f"let rest = {s.output}", "set rest = $&rest"])
 
 
-def _holding(s: Site, closed: bool) -> list[str]:
-    """Return the commands that hold the outputs where they are, or let go of them."""
-    if not closed:
-        return [f"alter rhold_{_plain(x)} = {OPEN}" for x in s.held()]
-    held = [f"alter vhold_{_plain(x)} dc = v({x})" for x in s.held()]
-    return ["op", *held, *(f"alter rhold_{_plain(x)} = {CLOSED}" for x in s.held())]
+def _holding(s: Site) -> list[str]:
+    """Return the commands that put what is held to where it is at rest."""
+    return ["op", *(f"alter v{_plain(held)} dc = v({node})" for node, held in s.held().items())]
 
 
 def _plain(node: str) -> str:
@@ -219,43 +226,50 @@ def _plain(node: str) -> str:
 def linear_range(s: Site, departure: float) -> Answer:
     """Differential input at which the current into the held output departs from its tangent."""
     expected = float(CATALOGUE["linear_range"].function(s.a, departure)[0])
-    current = "-".join(f"i(vhold_{x})" for x in s.ends)
-    tangent = [DC, f"let tangent = real({current})", "set tangent = $&tangent"]
-    room = [f"let room = {number(departure)}-abs(({current})/(($tangent)*v(d))-1)"]
+    current = "-".join(f"i(v{_plain(held)})" for held in list(s.held().values())[: len(s.ends)])
+    tangent = driven(f"v{HELD}_d", DC, [f"let tangent = real({current})", "set tangent = $&tangent"])
+    inside = {"inside": f"{number(departure)}-abs(({current})/(($tangent)*v({HELD}_d))-1)"}
 
     def sweep(sign: float) -> list[str]:
         reach = ways(expected, sign)
-        return swept("vd", reach[0] / POINTS, reach, room, "abs(v(d))")
+        return swept(f"v{HELD}_d", reach[0] / POINTS, reach, inside, f"abs(v({HELD}_d))")
 
-    return nearer(s, sweep, before=[*_holding(s, True), *tangent], after=_holding(s, False))
+    return nearer(s, sweep, before=[*_holding(s), *tangent])
 
 
 @_bench("held")
 def steering_voltage(s: Site) -> Answer:
     """Differential input that leaves one input transistor with 1 % of the pair's current, output held."""
     expected = float(CATALOGUE["steering_voltage"].of(s.a)[0])
-    room = [*s.pair(), f"let room = least(positive,negative)/(positive+negative)-{STEERED}"]
+    left = {f"{x}_left": f"{x}/(positive+negative)-{STEERED}" for x in ("positive", "negative")}
 
     def sweep(sign: float) -> list[str]:
-        return swept("vd", 0.0, ways(expected, sign), room, "abs(v(d))")
+        return swept(f"v{HELD}_d", 0.0, ways(expected, sign), left, f"abs(v({HELD}_d))", s.pair(HELD))
 
-    return nearer(s, sweep, before=_holding(s, True), after=_holding(s, False))
+    return nearer(s, sweep, before=_holding(s))
 
 
 @_bench("curve")
 def distortion(s: Site, amplitude: float) -> Answer:
     """Third harmonic over the fundamental, of the static curve over half a period of the sine."""
+    supply = number(s.a.circuit.conditions.supply)
     lines = [
-        "option reltol=1e-10 vntol=1e-12",
-        f"alter vamplitude dc = {number(amplitude)}",
-        f"dc vstep 0 {CURVE}.001 1",
-        "alter vamplitude dc = 0",
-        "option reltol=1e-7 vntol=1e-10",
-        f"let angle = pi*v(step)/{CURVE}",
-        f"let curve = ({s.output})*(1-((v(step) lt 0.5)+(v(step) gt {CURVE}-0.5))/2)",
-        "let result = db(mean(curve*cos(3*angle))/mean(curve*cos(angle)))",
+        DC,
+        f"let asked = {number(amplitude)}*abs({s.output})",
+        "set harmonic = undefined",
+        f"if asked lt {supply}",
+        "  option reltol=1e-10 vntol=1e-12",
+        f"  alter vamplitude dc = {number(amplitude)}",
+        f"  dc vstep 0 {CURVE}.001 1",
+        "  alter vamplitude dc = 0",
+        "  option reltol=1e-7 vntol=1e-10",
+        f"  let angle = pi*v(step)/{CURVE}",
+        f"  let curve = ({s.output})*(1-((v(step) lt 0.5)+(v(step) gt {CURVE}-0.5))/2)",
+        "  let harmonic = db(abs(mean(curve*cos(3*angle))/mean(curve*cos(angle))))",
+        "  set harmonic = $&harmonic",
+        "end",
     ]
-    return Answer(lines)
+    return Answer(lines, "$harmonic")
 
 
 def _crossing(s: Site, level: str) -> list[str]:
@@ -314,10 +328,17 @@ def output_resistance(s: Site) -> Answer:
 def input_capacitance(s: Site, frequency: float) -> Answer:
     """Charge of an input over its voltage under the differential drive, of the heavier one."""
     # The source of each input has half of the drive; its current runs into its first node.
-    f = number(frequency or 1.0)
-    charge = f"/(2*pi*{f}*0.5)"
-    positive, negative = f"-imag(i(einp)){charge}", f"imag(i(einn)){charge}"
-    return Answer([at(frequency or 1.0), f"let result = -least(-({positive}),-({negative}))"])
+    f = frequency or 1.0
+    charge = f"/(2*pi*{number(f)}*0.5)"
+    lines = [
+        at(f),
+        f"let result = -imag(i(einp)){charge}",
+        f"let other = imag(i(einn)){charge}",
+        "if other gt result",
+        "  let result = other",
+        "end",
+    ]
+    return Answer(lines)
 
 
 def no_bench(measure: Measure, a: Analysis) -> str:

@@ -17,9 +17,9 @@ from optisize.problem.evaluate import Problem, measured
 from optisize.problem.own_measures import label, taken_at
 from optisize.process.law import Array
 from optisize.quantities import ZERO_CELSIUS, write, written
-from optisize.simulator.bench import CURVE, OPEN, Bench, bench_of, no_bench
+from optisize.simulator.bench import CURVE, Bench, bench_of, no_bench
 from optisize.simulator.devices import DEVICES, Devices
-from optisize.simulator.netlist import LOOP, STAGE, Netlist, comment, joined, number
+from optisize.simulator.netlist import HELD, LOOP, STAGE, Netlist, comment, joined, number
 from optisize.simulator.ngspice import last_lines
 from optisize.simulator.site import Site
 from optisize.stage.analysis import Analysis
@@ -57,8 +57,8 @@ class Deck:
         """
         found: dict[str, float] = {}
         for m in self.measures:
-            unit = re.escape(_unit(m))
-            lines = re.findall(rf"^{re.escape(m.name)} = (\S+){' ' * bool(unit)}{unit}$", said, re.MULTILINE)
+            unit = f" {re.escape(m.unit)}" if m.unit else ""
+            lines = re.findall(rf"^{re.escape(m.name)} = (\S+){unit}$", said, re.MULTILINE)
             if not lines or not _is_figure(lines[-1]):
                 raise SimulationFailed(f"the simulator gave no {m.name}{last_lines(said)}")
             found[m.name] = _WORDS[lines[-1]] if lines[-1] in _WORDS else float(lines[-1])
@@ -70,11 +70,6 @@ def _is_figure(text: str) -> bool:
         return text in _WORDS or bool(np.isfinite(float(text)))
     except ValueError:
         return False
-
-
-def _unit(measure: Measure) -> str:
-    """Return the unit as a deck prints it, in plain letters."""
-    return measure.unit
 
 
 def benched(problem: Problem, names: Iterable[str] | None = None) -> list[Measure]:
@@ -173,14 +168,27 @@ def _test_bench(problem: Problem, s: Site, needs: frozenset[str]) -> list[str]:
         plus, minus = (*s.ends, "0")[:2]
         lines += [*comment("a current into the output"), f"Iout {minus} {plus} dc 0 ac 0"]
     if "held" in needs:
-        lines += comment(f"what holds the outputs where they are, once its {OPEN} ohm are made one")
-        for x in s.held():
-            name = x.replace(".", "_")
-            lines += [f"Vhold_{name} hold_{name} 0 dc 0", f"Rhold_{name} hold_{name} {x} {OPEN}"]
+        lines += _held(s)
     return [
         *lines,
         f".options {TOLERANCES} temp={celsius} tnom={celsius}",
-        *netlist.nodesets(s.a.point.v[: s.a.wiring.unknowns, 0]),
+        *netlist.nodesets(s.a.point.v[: s.a.wiring.unknowns, 0], "held" in needs),
+    ]
+
+
+def _held(s: Site) -> list[str]:
+    """Return the same stage once more, with what is held where it is at rest."""
+    c, names = s.a.circuit.conditions, {"vdd": f"{HELD}_vdd", "vss": "0"}
+    ports = [names.get(port, f"{HELD}_{port}") for port in s.netlist.ports]
+    rest = dict(zip(map(s.netlist.outside, s.a.topology.unknown), s.a.point.v[:, 0], strict=False))
+    return [
+        *comment("the same stage once more, its outputs held where they are at rest"),
+        f"X{HELD} {' '.join(ports)} {STAGE}",
+        f"V{HELD}_vdd {HELD}_vdd 0 dc {number(c.supply)}",
+        f"V{HELD}_d {HELD}_d 0 dc 0 ac 0",
+        f"E{HELD}_inp {HELD}_inp cm {HELD}_d 0 0.5",
+        f"E{HELD}_inn {HELD}_inn cm {HELD}_d 0 -0.5",
+        *(f"V{held.replace('.', '_')} {held} 0 dc {rest[node]:.9f}" for node, held in s.held().items()),
     ]
 
 
@@ -209,14 +217,14 @@ def _differential_source(s: Site, needs: frozenset[str]) -> list[str]:
 
 
 def _control(s: Site, benches: Sequence[tuple[Measure, Bench]], predicted: Mapping[str, float]) -> list[str]:
-    saved = sorted({vector for d in s.transistors for vector in s.devices.saved(d)})
+    stages = (STAGE, HELD) if any("held" in bench.needs for _, bench in benches) else (STAGE,)
+    saved = sorted({vector for d in s.transistors for stage in stages for vector in s.devices.saved(d, stage)})
     lines = [".control", "save all"]
     lines += [f"save {' '.join(saved[i : i + 4])}" for i in range(0, len(saved), 4)]
-    lines += ["define least(a,b) (a+b-abs(a-b))/2"]
     for m, bench in benches:
         answer = bench.commands(s, **m.taken_at)
         lines += ["", *comment(f"{label(m)}: predicted {write(predicted[m.name], m.unit)}. {bench.how}")]
-        lines += ["setplot new", *answer.lines, f'echo "{m.name} = {answer.figure} {_unit(m)}"'.replace(' "', '"')]
+        lines += ["setplot new", *answer.lines, f'echo "{m.name} = {answer.figure}{" " * bool(m.unit)}{m.unit}"']
     return [*lines, "quit", ".endc"]
 
 

@@ -33,12 +33,16 @@ class Devices(Protocol):
     def lines(self, device: Device) -> list[str]:
         """Return the lines of one transistor."""
 
-    def figure(self, device: Device, figure: str) -> str:
-        """Return the simulator's expression of ``id`` or ``vdsat`` of a transistor of the stage in the bench; positive
-        for either channel.
+    def figure(self, device: Device, figure: str, stage: str = STAGE) -> str:
+        """Return the simulator's expression of ``id`` or ``vdsat``, positive for either channel.
+
+        Args:
+            device: the transistor.
+            figure: which of the two.
+            stage: the instance of the stage in the bench.
         """
 
-    def saved(self, device: Device) -> list[str]:
+    def saved(self, device: Device, stage: str = STAGE) -> list[str]:
         """Return what has to be saved for these expressions."""
 
 
@@ -126,7 +130,7 @@ class SquareDevices(_OfProcess):
             f".subckt flicker_{device.channel} gate in area=1p",
             "Enoise gate in drop 0 1u",
             "Rnoise drop 0 1k flicker",
-            f".model flicker r kf={{{number(strength)}*1e12/area}} af=0 ef={exponent}",
+            f".model flicker r kf={{{number(strength)}*1e6/area}} af=0 ef={exponent}",
             ".ends",
         ]
 
@@ -140,13 +144,13 @@ class SquareDevices(_OfProcess):
             lines = [f"Xflicker_{device.name} {gate} {device.gate} flicker_{device.channel} area={area}"]
         return [*wrapped(f"M{device.name} {ends} {_model(device)} {_shape(device, 'm')}"), *lines]
 
-    def figure(self, device: Device, figure: str) -> str:
+    def figure(self, device: Device, figure: str, stage: str = STAGE) -> str:
         """Return the simulator's own figure."""
-        return f"abs(@m.x{STAGE}.m{device.name}[{figure}])"
+        return f"abs(@m.x{stage}.m{device.name}[{figure}])"
 
-    def saved(self, device: Device) -> list[str]:
+    def saved(self, device: Device, stage: str = STAGE) -> list[str]:
         """Return the figures that are read."""
-        return [f"@m.x{STAGE}.m{device.name}[{figure}]" for figure in ("id", "vdsat")]
+        return [f"@m.x{stage}.m{device.name}[{figure}]" for figure in ("id", "vdsat")]
 
 
 def _model(device: Device) -> str:
@@ -200,7 +204,7 @@ Bgms gms 0 v=max(v(end)*v(gap)+{current}*v(lift),1e-30)
 Rwhite white 0 1
 Eflicker gate g drop 0 1u
 Rflicker drop 0 1k flicker
-.model flicker r kf={{{strength}*1e12/(w*l*units)}} af=0 ef={exponent}
+.model flicker r kf={{{strength}*1e6/(w*l*units)}} af=0 ef={exponent}
 """
 
 
@@ -276,15 +280,15 @@ class ChargeDevices(_OfProcess):
         """Return a call of the subcircuit."""
         return wrapped(f"X{device.name} {device.ends} charge_{device.channel} {_shape(device, 'units')}")
 
-    def figure(self, device: Device, figure: str) -> str:
+    def figure(self, device: Device, figure: str, stage: str = STAGE) -> str:
         """Return the current of the channel, or the node of the saturation voltage."""
         if figure == "vdsat":
-            return f"v(x{STAGE}.x{device.name}.vdsat)"
-        return f"abs(@b.x{STAGE}.x{device.name}.bchannel[i])"
+            return f"v(x{stage}.x{device.name}.vdsat)"
+        return f"abs(@b.x{stage}.x{device.name}.bchannel[i])"
 
-    def saved(self, device: Device) -> list[str]:
+    def saved(self, device: Device, stage: str = STAGE) -> list[str]:
         """Return the current of the channel."""
-        return [f"@b.x{STAGE}.x{device.name}.bchannel[i]"]
+        return [f"@b.x{stage}.x{device.name}.bchannel[i]"]
 
 
 DEVICES: dict[str, type[Devices]] = {"square": SquareDevices, "charge": ChargeDevices}

@@ -11,13 +11,14 @@ from optisize.process.law import Array
 from optisize.stage.circuit import Circuit
 from optisize.stage.elements import REFERENCE, Channel
 
-STAGE = "stage"  # the subcircuit; its instance in the bench is Xstage
+STAGE, HELD = "stage", "held"  # the subcircuit and its instance in the bench; the instance whose outputs are held
 DIGITS = 12
 LOOP = 1e-6  # A/V, of ideal loops; a thousand times more and they often do not converge
 HALF = 0.5
 _PREFIXES = {12: "t", 9: "g", 6: "meg", 3: "k", 0: "", -3: "m", -6: "u", -9: "n", -12: "p", -15: "f"}
 _RAILS = {"supply": "vdd", "ground": "vss", "in+": "inp", "in-": "inn"}
-_UNSAFE = re.compile(r"[^A-Za-z0-9 _.,:;()+/%=-]")
+_UNSAFE = re.compile(r"[^A-Za-z0-9 _.,:;()+/%='-]")
+_PLAIN = {"√Hz": "sqrt(Hz)", "µ": "u", "μ": "u", "Ω": "ohm"}
 _LINE = 118  # letters
 
 
@@ -29,12 +30,16 @@ def number(value: float) -> str:
     exponent = 3 * (digits.adjusted() // 3)
     if exponent not in _PREFIXES:
         return f"{value:.{DIGITS}g}"
+    if exponent == -3 and abs(digits) >= Decimal("0.1"):
+        exponent = 0
     return f"{digits.scaleb(-exponent).normalize():f}{_PREFIXES[exponent]}"
 
 
 def clean(text: str) -> str:
     """Return a text as a comment may hold it: one line of plain letters, with nothing that a simulator acts upon."""
-    return " ".join(_UNSAFE.sub("?", " ".join(text.split())).split())
+    for letter, plain in _PLAIN.items():
+        text = text.replace(letter, plain)
+    return _UNSAFE.sub("?", " ".join(text.split()))
 
 
 def comment(text: str) -> list[str]:
@@ -191,11 +196,17 @@ class Netlist:
         """Return the node that a controlled one follows."""
         return f"{node}_control"
 
-    def nodesets(self, voltages: Array) -> list[str]:
-        """Return where the simulator shall begin: voltages (U,) of the unknown nodes to a millivolt."""
+    def nodesets(self, voltages: Array, held: bool = False) -> list[str]:
+        """Return where the simulator shall begin.
+
+        Args:
+            voltages: of the unknown nodes, (U,), which are written to a millivolt.
+            held: whether the bench has the instance whose outputs are held.
+        """
         top = self.circuit.topology
         names = [self.control_node(n) if n in self.controlled else self.outside(n) for n in top.unknown]
-        parts = [f"v({name})={v:.3f}" for name, v in zip(names, voltages, strict=True)]
+        parts = [f"v({name})={v:.9f}" for name, v in zip(names, voltages, strict=True)]
+        parts += [x.replace(f"v(x{STAGE}.", f"v(x{HELD}.") for x in parts if held and f"v(x{STAGE}." in x]
         return [f".nodeset {' '.join(parts[i : i + 4])}" for i in range(0, len(parts), 4)]
 
 

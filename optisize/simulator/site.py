@@ -7,7 +7,7 @@ looked for by ``meas`` has to exist, or there is a message.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import NamedTuple
@@ -15,13 +15,12 @@ from typing import NamedTuple
 import numpy as np
 
 from optisize.simulator.devices import Devices
-from optisize.simulator.netlist import Device, Netlist, number
+from optisize.simulator.netlist import HELD, STAGE, Device, Netlist, number
 from optisize.stage.analysis import Analysis
 
 DC = "ac lin 1 1m 1m"
 POINTS = 30  # of a sweep to where an end is expected
-REACH = 1.5  # of that way, as far as a sweep goes; eight times that and eight times that again where there is no end
-FINE = 10  # points to each point of the coarse sweep, about the end
+REACHES = (1.15, 3.0, 20.0)  # of the way to where an end is expected, as far as a sweep goes
 
 
 class Answer(NamedTuple):
@@ -57,7 +56,7 @@ class Site:
     @property
     def mean(self) -> str:
         """The output, or the mean of its sides."""
-        return f"({'+'.join(f'v({x})' for x in self.ends)})/{len(self.ends)}"
+        return self.output if len(self.ends) == 1 else f"({'+'.join(f'v({x})' for x in self.ends)})/2"
 
     @property
     def noise_output(self) -> str:
@@ -86,27 +85,27 @@ class Site:
         gate, source = self.netlist.outside(t.gate), self.netlist.outside(t.source)
         return f"v({gate})-v({source})" if device.channel == "n" else f"v({source})-v({gate})"
 
-    def room(self) -> list[str]:
-        """Return the commands that make ``room``, the least vds - vdsat of what has to be saturated."""
-        terms = []
-        for d, t in zip(self.transistors, self.a.topology.transistors, strict=True):
-            if t.saturates:
-                terms.append(f"{self.across(d)}-{self.devices.figure(d, 'vdsat')}")
-        first, *rest = terms
-        return [f"let room = {first}", *(f"let room = least(room, {term})" for term in rest)]
+    def room(self) -> dict[str, str]:
+        """Return vds - vdsat of everything that has to be saturated, by names for vectors."""
+        rows = [t.saturates for t in self.a.topology.transistors]
+        devices = [d for d, saturates in zip(self.transistors, rows, strict=True) if saturates]
+        return {f"room_{d.name}": f"{self.across(d)}-{self.devices.figure(d, 'vdsat')}" for d in devices}
 
-    def pair(self) -> list[str]:
+    def pair(self, stage: str = STAGE) -> list[str]:
         """Return the commands that make ``positive`` and ``negative``, the currents of the pair."""
         named = {d.name: d for d in self.transistors}
         return [
-            f"let positive = {self.devices.figure(named['input_p'], 'id')}",
-            f"let negative = {self.devices.figure(named['input_n'], 'id')}",
+            f"let {side} = {self.devices.figure(named[name], 'id', stage)}"
+            for side, name in (("positive", "input_p"), ("negative", "input_n"))
         ]
 
-    def held(self) -> list[str]:
-        """Return the nodes that are held where the output is said to be at rest, those of the output first."""
+    def held(self) -> dict[str, str]:
+        """Return what is held where the output is said to be at rest: its name in the held instance by that of the
+        node in the other one, those of the output first.
+        """
         sides = [self.netlist.outside(x) for x in ("right", "left")] if self.a.topology.symmetric else []
-        return [*dict.fromkeys([*self.ends, *sides]), *(self.netlist.control_node(c) for c in self.netlist.controlled)]
+        nodes = dict.fromkeys([*self.ends, *sides, *self.netlist.controlled])
+        return {n: f"{HELD}_{n}" if n in self.netlist.ports else n.replace(f"x{STAGE}.", f"x{HELD}.") for n in nodes}
 
 
 def at(frequency: float) -> str:
@@ -120,45 +119,44 @@ def driven(source: str, analysis: str, lines: Sequence[str]) -> list[str]:
     return [*before, analysis, *lines, f"alter @{source}[acmag]=0", "alter @vd[acmag]=1"]
 
 
-def swept(source: str, begin: float, ways: Sequence[float], room: Sequence[str], read: str) -> list[str]:
-    """Return the commands that sweep a source from a value to where ``room`` vanishes, and read something there.
+def swept(
+    source: str, begin: float, ways: Sequence[float], margins: Mapping[str, str], read: str, first: Sequence[str] = ()
+) -> list[str]:
+    """Return the commands that sweep a source from a value to where the first margin vanishes, and what is read there.
 
-    The sweep goes in steps as far as the first of the ways that reaches an end, then in finer ones about that end. The
-    variable ``reading`` holds what is read, 0 where there is no room at the beginning, and 1e99 where no way ends.
+    The sweep goes as far as the first of the ways along which a margin vanishes. The variable ``reading`` holds what is
+    read there, 0 where a margin is gone at the beginning, and 1e99 where none vanishes.
 
     Args:
         source: the source.
         begin: its value at rest.
         ways: how far it goes from there, with the sign, the shortest first.
-        room: the commands that make it.
-        read: an expression.
+        margins: expressions by names for vectors. Each is straight enough between the points, their least is not.
+        read: an expression that grows along the way.
+        first: commands before the margins are taken.
     """
     start = number(begin)
     return [
         "set reading = 1e99",
-        "set open = 1",
         f"foreach way {' '.join(number(w) for w in ways)}",
-        "  if $open",
+        "  if $reading gt 1e98",
         f"    let stop = {start}+($way)*1.001",
         f"    let step = ($way)/{POINTS}",
-        "    set step = $&step",
-        f"    dc {source} {start} $&stop $step",
-        *(f"    {line}" for line in room),
-        "    if room[0] le 0",
-        "      set open = 0",
-        "      set reading = 0",
-        "    end",
-        "    if $open and vecmin(room) lt 0",
-        "      set open = 0",
-        "      meas dc near when room=0 fall=1",
-        "      let from = near-($step)",
-        "      let stop = near+($step)*1.001",
-        f"      let step = ($step)/{FINE}",
-        f"      dc {source} $&from $&stop $&step",
-        *(f"      {line}" for line in room),
-        f"      let read = {read}",
-        "      meas dc end find read when room=0 fall=1",
-        "      set reading = $&end",
+        f"    dc {source} {start} $&stop $&step",
+        *(f"    {line}" for line in first),
+        *(f"    let {name} = {margin}" for name, margin in margins.items()),
+        f"    let along = {read}",
+        f"    foreach margin {' '.join(margins)}",
+        "      let left = $margin",
+        "      if left[0] le 0",
+        "        set reading = 0",
+        "      end",
+        "      if left[0] gt 0 and vecmin(left) lt 0",
+        "        meas dc end find along when left=0 fall=1",
+        "        if end lt $reading",
+        "          set reading = $&end",
+        "        end",
+        "      end",
         "    end",
         "  end",
         "end",
@@ -166,9 +164,9 @@ def swept(source: str, begin: float, ways: Sequence[float], room: Sequence[str],
 
 
 def ways(expected: float, sign: float, most: float = np.inf) -> list[float]:
-    """Return the ways of a sweep to where an end is expected: a little beyond, eight times and 64 times as far."""
+    """Return the ways of a sweep: a little beyond the end that is expected, then further."""
     far = abs(expected) if np.isfinite(expected) and expected else min(most, 0.1)
-    lengths = [w for w in (REACH * far * 8.0**k for k in range(3)) if w < most]
+    lengths = [w for w in (far * reach for reach in REACHES) if w < most]
     return [sign * w for w in (*lengths, *([most] if np.isfinite(most) else []))]
 
 

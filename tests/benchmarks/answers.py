@@ -48,12 +48,10 @@ BOUNDS: dict[str, Bound] = {
     "output_swing": VOLTS,
     "bandwidth": CROSSING,
     "unity_gain_frequency": CROSSING,
-    "phase": Bound(1.0),
+    "phase": Bound(2.0),
     "output_resistance": CROSSING,
     "input_capacitance": CROSSING,
 }
-
-NONE_IS_ZERO = ("unity_gain_frequency",)
 
 
 @dataclass(frozen=True)
@@ -172,7 +170,7 @@ def answered(ngspice: str, script: Answering, count: int) -> dict[str, tuple[Arr
         control = ["set filetype=binary", *script.commands(count, keep=True), "quit"]
         text = "\n".join([*script.deck, ".control", *control, ".endc", ".end"])
         (folder / "deck.sp").write_text(text + "\n", encoding="ascii")
-        subprocess.run([ngspice, "-b", "-n", "deck.sp"], cwd=folder, capture_output=True, check=False)
+        subprocess.run([ngspice, "-b", "-n", "deck.sp"], cwd=folder, capture_output=True, check=False, timeout=300)
         found = []
         for k in range(count):
             files = folder.glob(f"*_{k}.raw")
@@ -186,11 +184,12 @@ def checked(ngspice: str, script: Answering, count: int) -> dict[str, dict[str, 
     """Return how right the simulator's answers are, by measure.
 
     Of each: the deviation from the kernel that 19 designs in 20 keep, its bound, and the share of designs within it.
-    Where the kernel has no finite figure (rejection without limit, no crossing) nothing is held against the simulator.
+    Where the kernel has no figure (rejection without limit, zero common-mode gain, no crossing) nothing is held against
+    the simulator.
     """
     rows = {}
     for name, (found, expected) in answered(ngspice, script, count).items():
-        known, bound = np.isfinite(expected) & ~((expected == 0.0) & (name in NONE_IS_ZERO)), script.bounds[name]
+        known, bound = np.isfinite(expected) & (expected != 0.0), script.bounds[name]
         if not known.any():
             continue
         missed = np.abs(found - expected)[known] / (np.abs(expected)[known] if bound.relative else 1.0)

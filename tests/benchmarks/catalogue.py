@@ -17,19 +17,18 @@ from optisize.process.law import Array
 from optisize.process.parameters import TransistorParameters
 from optisize.stage.analysis import Analysis
 from optisize.stage.measures import CATALOGUE
-from optisize.stage.wiring import held
 from tests.benchmarks.answers import BOUNDS, Bound, Plots, Reader, at, first_zero
-from tests.benchmarks.scripts import DC, OPTIONS, Script, decibels, moved
+from tests.benchmarks.scripts import DC, OPTIONS, PER_DECADE, Script, decibels, moved
 from tests.reference import spice
 
 HIGH = "1e6"  # Hz, of the rejections that are also taken there
-RANGE, PAST = 12, 0.005  # points of the input range, and how far beyond its ends the sweep goes [V]
+RANGE, PAST = 16, 0.002  # points of the input range, and how far beyond its ends the sweep goes [V]
 HELD = 10  # points of the differential input to where the pair is steered
 STEERED_PAST = 1.05
 CURVE = 3  # points of the static curve on each side of rest
 NOISE_PER_DECADE = 2
-FINE = "reltol=1e-10 vntol=1e-12"  # for the distortion
-OPEN, CLOSED = "1e15", "1"  # ohm, of what holds the outputs
+FINE = "reltol=1e-7 vntol=1e-9"  # for the distortion
+OPEN, CLOSED = "1e18", "1e-3"  # ohm, of what holds the outputs
 LEFT_OUT = ("offset_sigma", "offset", "common_mode_gain_sigma", "cmrr_mismatch", "offset_systematic", "area")
 SWEPT = "v(v-sweep)"
 AT_HIGH = {f"{name}_at_1mhz": name for name in ("cmrr", "supply_rejection")}
@@ -48,8 +47,8 @@ class CatalogueScript(Script):
     - noise over the default band, which takes in the frequency of the density. The flicker coefficient of the model is
       altered so that it gives at the known operating point what the process says;
     - a sweep of the differential input with held outputs, to where the pair is steered: linear range and steering. What
-      holds them is a source behind a resistor from the outputs, and from what controls them, to their known voltages;
-      the resistor is altered from as good as open to as good as none and back. A second copy of the stage with held
+      holds them is a source behind a resistor from the outputs to their known voltages, which leaves a control of them
+      where it is; the resistor is altered from as good as open to as good as none and back. A second copy of the stage with held
       outputs would double deck and alterations;
     - the static curve over the sine's peak to peak, `CURVE` points on each side of rest, with a polynomial through them:
       the distortion. Its tolerance is finer, and it is left out where the kernel gives none.
@@ -57,26 +56,23 @@ class CatalogueScript(Script):
 
     bounds: Mapping[str, Bound] = BOUNDS
 
-    def __init__(self, a: Analysis, **points: int) -> None:
+    def __init__(self, a: Analysis) -> None:
         """Take designs that the kernel has solved."""
-        super().__init__(a, **points)
+        super().__init__(a)
         self.ends = np.append(self.ends, float(HIGH))
+        low, high = a.circuit.conditions.common_mode
         supply = a.circuit.conditions.supply
         self.known = self.own()
-        self.low = np.clip(self.known["input_range_low"], -1.0, supply + 1.0) - PAST
-        self.high = np.clip(self.known["input_range_high"], -1.0, supply + 1.0) + PAST
+        self.low = np.clip(self.known["input_range_low"] - PAST, -1.0, low)
+        self.high = np.clip(self.known["input_range_high"] + PAST, high, supply + 1.0)
         steering = self.known["steering_voltage"]
         self.steering = np.where(np.isfinite(steering), steering, np.nanmedian(steering)) * STEERED_PAST
         self.holding = self._holding()
 
     def _holding(self) -> dict[str, Array]:
         """Return the nodes of the deck that are held, and the voltages that they are held at, each (N,)."""
-        part = held(self.top)
-        controls = {c.node: f"control_{spice.part(c.name, 0)}" for c in self.top.controls}
-        names = {*(node for node, _ in self.top.output), *(("left", "right") if self.top.symmetric else ()), *controls}
-        assert names <= set(part.wiring.nodes[part.wiring.unknowns :])
-        rows = {name: self.a.point.v[self.a.wiring.index[name]] for name in sorted(names)}
-        return {controls.get(name, spice.node(name, 0)): row for name, row in rows.items()}
+        names = {*(node for node, _ in self.top.output), *(("left", "right") if self.top.symmetric else ())}
+        return {spice.node(name, 0): self.a.point.v[self.a.wiring.index[name]] for name in sorted(names)}
 
     @property
     def deck(self) -> list[str]:
@@ -123,8 +119,8 @@ class CatalogueScript(Script):
         two_points = f"ac lin 3 {DC} {HIGH}"
         steps = f"{-(0.0 if self.top.symmetric else self.steering[k]):.9g} {self.steering[k] * (1.0 + 1e-6):.9g}"
         result = {
-            "range": [self.conducting_first(self.low[k], self.high[k], RANGE)],
-            "response": [f"ac dec {self.per_decade} {self.frequencies}"],
+            "range": [self.conducting_first(self.low[k], self.high[k], RANGE * self.fineness)],
+            "response": [f"ac dec {PER_DECADE * self.fineness} {self.frequencies}"],
             "common": [*moved("v_d", "v_cm"), two_points],
             "supply": [*moved("v_cm", "v_supply_0"), two_points],
             "resistance": [*moved("v_supply_0", "i_out"), f"ac lin 1 {DC} {DC}", *moved("i_out", "v_d")],

@@ -18,7 +18,7 @@ from optisize.process.card import Process
 from optisize.process.law import Array
 from optisize.process.square import SquareParameters
 from optisize.stage.analysis import Analysis
-from optisize.stage.elements import Transistor
+from optisize.stage.elements import Control, Transistor
 from optisize.stage.measures import CATALOGUE
 from tests.benchmarks.answers import BOUNDS, Bound, Plots, Reader
 from tests.reference import spice
@@ -26,7 +26,8 @@ from tests.reference import spice
 PER_DECADE = 4
 SWEEP = 16
 DC = "1e-3"  # Hz
-OPTIONS = "reltol=1e-6 vntol=1e-8"
+OPTIONS = "reltol=1e-6 vntol=1e-8 gmin=1e-17"
+CONTROL_GAIN = 100.0
 BEYOND = 1.25  # of the input that is estimated for the end of the swing, where the sweep ends
 SMALL = {"gain": Bound(0.01), "common_mode_gain": Bound(0.001, relative=True), "cmrr": Bound(0.01)}  # 0.1 %
 FOUR_ANALYSES = (  # the measures that the analyses of `Script` give
@@ -59,7 +60,7 @@ class Script:
 
     bounds: Mapping[str, Bound] = {**BOUNDS, **SMALL}
 
-    def __init__(self, a: Analysis, per_decade: int = PER_DECADE, sweep: int = SWEEP) -> None:
+    def __init__(self, a: Analysis) -> None:
         """Take designs that the kernel has solved: what is known of them spares the simulator a search."""
         self.a = a
         self.top = a.topology
@@ -70,7 +71,8 @@ class Script:
         bandwidth = a.gain_crossing(np.ones(self.designs))
         unity = a.gain_crossing(a.adm**2 - 1.0)
         self.ends = np.concatenate([bandwidth, unity])
-        self.per_decade, self.sweep = per_decade, sweep
+        cascoded = any("cascode" in t.group for t in self.top.transistors)
+        self.fineness = 2 if cascoded else 1  # of the points: where cascodes leave saturation nothing is straight for long
         self.amplitudes = _swing_inputs(a) * BEYOND
 
     @property
@@ -82,11 +84,12 @@ class Script:
     def deck(self) -> list[str]:
         """The elements of the first design; its inputs are driven from a common and a differential source."""
         start = np.median(self.a.point.v, axis=1)
-        free = {c.node: f"control_{spice.part(c.name, 0)}" for c in self.top.controls}
-        guesses = [f"v({free.get(n, spice.node(n, 0))})={start[i]:.3f}" for i, n in enumerate(self.top.unknown)]
+        guesses = [f"v({spice.node(n, 0)})={start[i]:.3f}" for i, n in enumerate(self.top.unknown)]
+        stage = spice.stage(self.a.circuit, 0, self._device())
         return [
             "* one stage, altered in place",
-            *spice.stage(self.a.circuit, 0, self._device()),
+            *(line for line in stage if not line.startswith(("g_control_", "e_control_"))),
+            *(line for c in self.top.controls for line in self._control(c)),
             f"v_cm cm 0 {spice.number(self.a.circuit.conditions.middle)} ac 0",
             "v_d d 0 0 ac 1",
             "e_inp inp_0 cm d 0 0.5",
@@ -115,6 +118,18 @@ class Script:
 
         return grouped
 
+    def _control(self, c: Control) -> list[str]:
+        """Return a control of finite gain about the known voltage of its node, with which the simulator converges."""
+        name, reference, share = spice.part(c.name, 0), spice.node(c.reference, 0), CONTROL_GAIN / len(c.senses)
+        chain = [spice.node(c.node, 0), *(f"control_{name}_{i}" for i in range(len(c.senses)))]
+        return [
+            *(
+                f"e_control_{name}_{i} {chain[i]} {chain[i + 1]} {spice.node(sensed, 0)} {reference} {share}"
+                for i, sensed in enumerate(c.senses)
+            ),
+            f"v_control_{name} {chain[-1]} 0 {self.a.point.v[self.a.wiring.index[c.node], 0]:.9g}",
+        ]
+
     def alterations(self, k: int) -> list[str]:
         """Return the commands that put in the sizes of design `k`; what stands between two fixed nodes is left out."""
         circuit, commands = self.a.circuit, []
@@ -135,6 +150,9 @@ class Script:
             half = 0.5 * resistor.capacitance * value / resistor.sheet_resistance * resistor.width**2
             ends = [i for i, end in enumerate((r.a, r.b)) if end in self.top.unknown]
             commands += [f"alter c_{spice.part(r.name, 0)}_{i}={half:.9g}" for i in ends]
+        for c in self.top.controls:
+            known = self.a.point.v[self.a.wiring.index[c.node], k]
+            commands.append(f"alter v_control_{spice.part(c.name, 0)}={known:.9g}")
         for s in self.top.sources:
             commands.append(f"alter i_{spice.part(s.name, 0)}={circuit.sizes[s.size][k]:.9g}")
         return commands
@@ -147,7 +165,7 @@ class Script:
 
     def swing(self, k: int) -> str:
         """Return the sweep of the differential input up to the end of the swing."""
-        step, last = self.amplitudes[k] / self.sweep, self.amplitudes[k] * (1.0 + 1e-6)
+        step, last = self.amplitudes[k] / (SWEEP * self.fineness), self.amplitudes[k] * (1.0 + 1e-6)
         return f"dc v_d {0.0 if self.top.symmetric else -last:.9g} {last:.9g} {step:.9g}"
 
     def analyses(self, k: int) -> dict[str, list[str]]:
@@ -155,7 +173,7 @@ class Script:
         low, high = self.a.circuit.conditions.common_mode
         return {
             "range": [self.conducting_first(low, high, 2)],
-            "response": [f"ac dec {self.per_decade} {self.frequencies}"],
+            "response": [f"ac dec {PER_DECADE * self.fineness} {self.frequencies}"],
             "common": [*moved("v_d", "v_cm"), f"ac lin 1 {DC} {DC}", *moved("v_cm", "v_d")],
             "swing": [self.swing(k)],
         }

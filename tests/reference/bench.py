@@ -90,16 +90,16 @@ def simulated(
     analyses: dict[str, Sequence[str]],
     figures: Sequence[str] = (),
 ) -> Bench:
-    """Run a population through the simulator, with `figures` of every transistor saved."""
+    """Run a population through the simulator, with `figures` of every transistor saved at every point."""
     lines = []
     for k in range(a.circuit.designs):
-        lines += spice.stage(a.circuit, k, device) + sources(k) + spice.nodesets(a.circuit, k, a.point.v)
+        lines += spice.stage(a.circuit, k, device) + sources(k) + spice.nodesets(a.circuit, k, a.point.v, digits=3)
     designs = range(a.circuit.designs)
     saves = [parameter(t.name, k, name) for t in a.topology.transistors for k in designs for name in figures]
     return Bench(a, spice.simulate(ngspice, folder, lines, analyses, saves))
 
 
-def assert_same(found: Array, reference: Array, relative: float = 0.0, absolute: float = 0.0) -> None:
+def assert_same(found: Array, reference: Array, relative: float = 0.0, absolute: Array | float = 0.0) -> None:
     """Hold the deviation of every element within the sum of a relative and an absolute bound; name the worst."""
     assert found.shape == reference.shape
     assert np.isfinite(reference).all()

@@ -290,9 +290,10 @@ def output_noise(circuit: Circuit, plot: Plot, gm: Array) -> tuple[Array, Array]
 
 
 def nodesets(circuit: Circuit, k: int, voltages: Array, digits: int = 1) -> list[str]:
-    """Return where the simulator shall begin: voltages of the unknown nodes to a tenth of a volt, no finer.
+    """Return where the simulator shall begin: voltages of the unknown nodes, by default to a tenth of a volt.
 
-    Of forty telescopic stages under control one now and then does not converge from there; three digits help.
+    Among forty telescopic stages under control there is now and then one that does not converge from there, and among
+    behavioural ones with any cascode always: these need three digits.
     """
     top = circuit.topology
     free = {c.node: f"control_{part(c.name, k)}" for c in top.controls}  # what a control holds follows this one

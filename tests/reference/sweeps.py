@@ -16,7 +16,9 @@ from tests.reference.bench import Bench, parameter
 
 DIGITS = 3  # of the nodesets [V]; with one digit, stages with cascodes take a hundred times as long to begin
 WITHOUT_JUNCTIONS = partial(spice.level1, leak=1e-100)  # an ideal tail pulls its node some volts beyond the rails
-COARSE = np.array([0.0, 0.15, 0.3, 0.45, 0.6, 0.75, 0.88, 0.96])  # of the way to where an end is expected
+NEARER = 0.55  # how much of the way that is left remains after a step to an expected end, at first
+STEPS = 10  # such steps; what is then left is half a percent
+THROUGH = np.array([0.1, -0.35, -0.8, -1.7, -3.5])  # of that, before and beyond the end
 
 
 @dataclass
@@ -75,7 +77,7 @@ class Ways:
             before: other analyses, with the inputs as at the beginning of the first stretch.
         """
         circuit, v = self.a.circuit, self.a.point.v
-        lines = [".options itl2=500"]
+        lines = []
         for k in range(circuit.designs):
             lines += spice.stage(circuit, k, WITHOUT_JUNCTIONS, controlled=not held) + self.sources(k)
             lines += spice.held_outputs(circuit, k, v) if held else []
@@ -85,15 +87,14 @@ class Ways:
         return Bench(self.a, spice.simulate(ngspice, folder, lines, {**(before or {}), **self.analyses}, saves))
 
 
-def to_end(reach: Array, around: Array) -> Array:
-    """Return ways (N, points) from zero to an end that is expected, in coarse steps, and through it in fine ones.
+def to_end(reach: Array) -> Array:
+    """Return ways (N, points) from zero to where an end is expected (N,), and through it in steps of 0.2 %.
 
-    Args:
-        reach: the end, (N,).
-        around: the fine steps from a little before it to a little beyond, (F,) or (N, F).
+    The simulator expects every step of a sweep to be as large as the one before. So no step is less than half of it,
+    or Newton starts beyond the end, where a transistor may be turned round, and does not find its way back.
     """
-    fine = np.maximum(reach[:, None] + around, 0.0)
-    return np.concatenate([COARSE * fine[:, :1], fine], axis=1)
+    left = NEARER ** np.arange(STEPS)
+    return reach[:, None] * (1.0 - np.concatenate([left, left[-1] * THROUGH]))
 
 
 def margins(bench: Bench, plot: str) -> Array:

@@ -3,7 +3,8 @@
 Source: Enz, Krummenacher and Vittoz, "An analytical MOS transistor model valid in all regions of operation and
 dedicated to low-voltage and low-current applications", Analog Integrated Circuits and Signal Processing 8, 1995, with
 the three second-order effects that the package states for its law. The text below is written from the formulas; the
-simulator derives its own slopes from it, so operating point and gains have to agree to 0.1 %.
+simulator derives its own slopes from it, so operating point and gains have to agree to 0.1 %. Every kind is held in one
+process; the short channels of the other one matter to the law, not to the kind, and are tried on fewer.
 """
 
 from __future__ import annotations
@@ -17,12 +18,16 @@ from optisize.process.card import Process
 from optisize.process.law import Array
 from tests.reference import spice
 from tests.reference.bench import Bench, assert_same, at_rest, drive, simulated
-from tests.reference.samples import EVERY_KIND, SOURCE_TIED, Kind, sized
+from tests.reference.samples import DEGENERATED, EVERY_KIND, SOURCE_TIED, Kind, sized
 
-SIZINGS = 42
-TRIODE_SIZINGS = 10
+SIZINGS = 12
+TRIODE_SIZINGS = 8
 SAME = 1e-3
-CASES = [(kind, process) for kind in EVERY_KIND + SOURCE_TIED for process in ("generic-180", "generic-65")]
+ROUNDED = 1e-14  # of the differential gain, what two sums of terms that cancel may differ by
+MIRRORED = [kind for kind in EVERY_KIND if kind.tail == "single" and kind.form == "simple"]
+CASES = [(kind, "generic-180") for kind in EVERY_KIND + SOURCE_TIED + DEGENERATED]
+CASES += [(kind, "generic-65") for kind in MIRRORED + SOURCE_TIED]
+TRIODE_CASES = [(kind, process) for kind, process in CASES if kind in MIRRORED + SOURCE_TIED + DEGENERATED]
 UT = 1.380649e-23 * 300.15 / 1.602176634e-19  # V; Boltzmann constant and elementary charge of CODATA 2018
 
 
@@ -81,7 +86,7 @@ def currents(bench: Bench) -> Array:
 def bench(request: pytest.FixtureRequest, ngspice: str, tmp_path_factory: pytest.TempPathFactory) -> Bench:
     kind, process = request.param
     a = sized(kind, process, SIZINGS)
-    at_dc = "ac lin 1 1e-3 1e-3"
+    at_dc = "ac lin 1 1e-9 1e-9"
     analyses = {
         "op": ["op"],
         "rest": [*drive(a, 0.5, -0.5), at_dc],
@@ -104,17 +109,16 @@ def test_differential_gain(bench: Bench) -> None:
 
 
 def test_common_mode_gain(bench: Bench) -> None:
-    """With an ideal tail the simulator reads rounding only, and the kernel exactly nothing."""
-    sides = [node for node, _ in bench.topology.output]
-    reference = np.mean([bench.voltage("common", node)[:, 0].real for node in sides], axis=0)
-    if bench.topology.tail == "ideal":
+    """With an ideal tail or under control the simulator reads next to nothing, and the kernel exactly nothing."""
+    reference = bench.mean("common")[:, 0].real
+    if bench.topology.tail == "ideal" or bench.topology.controls:
         assert (bench.a.acm == 0.0).all()
-        assert np.abs(reference).max() < 1e-7
+        assert np.abs(reference).max() < 1e-9
     else:
-        assert_same(bench.a.acm, reference, SAME)
+        assert_same(bench.a.acm, reference, SAME, ROUNDED * np.abs(bench.a.adm))
 
 
-@pytest.mark.parametrize(("kind", "process"), CASES, ids=str)
+@pytest.mark.parametrize(("kind", "process"), TRIODE_CASES, ids=str)
 def test_triode(kind: Kind, process: str, ngspice: str, tmp_path: Path) -> None:
     """Voltages and currents where a transistor that ought to be saturated is not."""
     a = sized(kind, process, TRIODE_SIZINGS, saturated=False)

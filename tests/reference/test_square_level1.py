@@ -22,12 +22,12 @@ from tests.reference.samples import DEGENERATED, EVERY_KIND, SOURCE_TIED, Kind, 
 from tests.reference.small_signal import FIGURES, HIGH, NOISE, SmallSignal, ordinary
 
 SIZINGS = 44
-TRIODE_SIZINGS = 12
+TRIODE_SIZINGS = 10
 SAME = 1e-3
 SAME_OF_FREQUENCY = 1e-2  # and of resistances and capacitances
 SAME_PHASE = 1.0  # deg
 SAME_NOISE = 2e-2
-ROUNDED = 1e-15  # of the differential gain: what two sums of terms that cancel may differ by (300 dB)
+ROUNDED = 1e-14  # of the differential gain: what two sums of terms that cancel may differ by (280 dB)
 NOTHING = 1e-10  # the same, of what the simulator's gmin of 1e-16 S leaves of a zero beside an ideal tail (200 dB)
 KINDS = EVERY_KIND + SOURCE_TIED + DEGENERATED
 
@@ -72,7 +72,7 @@ def test_differential_gain(bench: SmallSignal) -> None:
 def test_common_mode_gain(bench: SmallSignal) -> None:
     """Of a differential output: to the mean of its sides. Unlimited rejection is the business of the next test."""
     reference = bench.at("common", mean=True)[0].real
-    rounding = ROUNDED * np.abs(bench.a.adm).max()
+    rounding = ROUNDED * np.abs(bench.a.adm)
     assert_same(bench.a.acm, np.where(bench.a.acm == 0.0, 0.0, reference), SAME, rounding)
     assert_same(measure(bench, "common_mode_gain"), bench.a.acm)
     if bench.topology.tail == "ideal" or bench.topology.controls:
@@ -139,7 +139,10 @@ def test_input_noise(bench: SmallSignal) -> None:
 
 @pytest.mark.parametrize("kind", KINDS, ids=str)
 def test_triode(kind: Kind, ngspice: str, tmp_path: Path) -> None:
-    """Voltages and currents where a transistor that ought to be saturated is not."""
+    """Voltages, currents and slopes where a transistor that ought to be saturated is not, with any sources below bulk.
+
+    There `small_signal.ordinary` says what the simulator takes for gmb.
+    """
     a = sized(kind, "handbook", TRIODE_SIZINGS, saturated=False)
     bench = simulated(ngspice, tmp_path, a, spice.level1, at_rest(a), {"op": ["op"]}, FIGURES)
     for node in kind.topology.unknown:

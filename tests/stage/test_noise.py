@@ -96,20 +96,20 @@ def test_shot_noise_in_weak_inversion(input: str) -> None:
 
 
 @pytest.mark.parametrize("exponent", [0.9, 1.0, 1.2])
-@pytest.mark.parametrize("load", ["resistor", "mirror"])
+@pytest.mark.parametrize("load", ["resistor", "mirror", "source"])
 @pytest.mark.parametrize("input", ["nmos", "pmos"])
 def test_flicker_noise(input: str, load: str, exponent: float) -> None:
-    """Kf / (Cox W L f^Af) of each gate: twice that of the pair, and of the mirror (gm3/gm1)^2 of it (standard; derived
-    for the square law). It falls by f^Af, and what it adds to is the white noise alone."""
-    output = "differential" if load == "resistor" else "single-ended"
+    """Kf / (Cox W L f^Af) of each gate: twice that of the pair, and of mirror or sources (gm3/gm1)^2 of it, all of
+    their units together (standard; derived). It falls by f^Af, and what it adds to is the white noise alone."""
+    output = "single-ended" if load == "mirror" else "differential"
     process = without("handbook", channel_modulation=1e-10, body_effect=0.0, flicker_exponent=exponent)
     quiet = without("handbook", channel_modulation=1e-10, body_effect=0.0, **QUIET)
     a, still = (analysed((input, load, "ideal", output), p, "source", input_width=WIDTHS) for p in (process, quiet))
     gm1, sizes = figure(a, "input.n", "gm"), a.circuit.sizes
     own, other = (process.nmos, process.pmos) if input == "nmos" else (process.pmos, process.nmos)
     at_one = 2.0 * own.flicker_coefficient / own.oxide_capacitance / (sizes["input.width"] * sizes["input.length"])
-    if load == "mirror":
-        area = sizes["load.width"] * sizes["load.length"]
+    if load != "resistor":
+        area = sizes["load.width"] * sizes["load.length"] * sizes.get("load.units", 1.0)
         mirror = 2.0 * other.flicker_coefficient / other.oxide_capacitance / area
         at_one = at_one + mirror * (figure(a, "load.n", "gm") / gm1) ** 2
     for frequency in (0.1, 10.0, 1e3):

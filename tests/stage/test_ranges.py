@@ -14,7 +14,7 @@ import pytest
 from scipy.optimize import brentq
 
 from optisize.process.law import Array
-from optisize.stage import ranges
+from optisize.stage import mismatch, ranges
 from optisize.stage.analysis import Analysis
 from optisize.stage.measures import CATALOGUE
 from tests.stage.stages import KINDS, UT, Kind, analysed, driven_point, figure, named, saturated, under, without
@@ -26,9 +26,6 @@ HELD = [
     ("mirror", "single-ended"),
     ("source", "differential"),
 ]
-STRAIGHT = ()
-KINK = ()
-HELD_STEERED = [pytest.param(*x, marks=() if x[0] == "mirror" else STRAIGHT) for x in HELD]
 # A load of transistors needs a little output conductance, or nothing says where the output stands at rest.
 LITTLE = {"body_effect": 0.0, "early_voltage": 1e13, "vertical_field": 0.0, "critical_field": 1e15}
 
@@ -86,7 +83,7 @@ def test_linear_range_in_weak_inversion(input: str, load: str, output: str, depa
     np.testing.assert_allclose(ranges.linear_range(a, departure), 2.0 * UT * x, rtol=2e-3)
 
 
-@pytest.mark.parametrize("departure", [0.01, pytest.param(0.1, marks=KINK)])
+@pytest.mark.parametrize("departure", [0.01, 0.1])
 @pytest.mark.parametrize("input", ["nmos", "pmos"])
 def test_linear_range_grows_with_degeneration(input: str, departure: float) -> None:
     """A resistance R in each source adds R (i1 - i2) to the input: with y the steered part of the tail current I,
@@ -106,7 +103,7 @@ def test_linear_range_grows_with_degeneration(input: str, departure: float) -> N
     assert (np.diff(CATALOGUE["linear_range"].of(a)) > 0.0).all()
 
 
-@pytest.mark.parametrize(("load", "output"), HELD_STEERED)
+@pytest.mark.parametrize(("load", "output"), HELD)
 @pytest.mark.parametrize("input", ["nmos", "pmos"])
 def test_steering_voltage_of_the_square_law(input: str, load: str, output: str) -> None:
     """One per cent left of the current I: vov (sqrt(2 * 0.99) - sqrt(2 * 0.01)), 1.26570 vov; sqrt(2) vov for all."""
@@ -114,15 +111,57 @@ def test_steering_voltage_of_the_square_law(input: str, load: str, output: str) 
     np.testing.assert_allclose(CATALOGUE["steering_voltage"].of(a), (np.sqrt(1.98) - np.sqrt(0.02)) * vov, rtol=2e-3)
 
 
-@pytest.mark.parametrize(
-    ("load", "output"), [pytest.param(*x.values, marks=x.marks) for x in HELD_STEERED if x.values[0] != "diode"]
-)
+@pytest.mark.parametrize(("load", "output"), [x for x in HELD if x[0] != "diode"])
 @pytest.mark.parametrize("input", ["nmos", "pmos"])
 def test_steering_voltage_in_weak_inversion(input: str, load: str, output: str) -> None:
     """99 to 1 is n ut ln 99 = 4.5951 n ut (a difference of 98 %; one of 99 % would be 5.2933 n ut)."""
     assert 2.0 * np.arctanh(0.99) == pytest.approx(5.29330, abs=1e-5)
     a = weak_pair(input, load, output)
     np.testing.assert_allclose(CATALOGUE["steering_voltage"].of(a), UT * np.log(99.0), rtol=5e-3)
+
+
+@pytest.mark.parametrize("input", ["nmos", "pmos"])
+def test_steering_voltage_grows_with_degeneration(input: str) -> None:
+    """By the drop of what is steered, 0.98 R I (derived)."""
+    resistance = np.geomspace(100.0, 8e3, 6)
+    a, vov = square_pair(input, "resistor", "differential", input_degeneration=resistance, tail_current=60e-6)
+    expected = (np.sqrt(1.98) - np.sqrt(0.02)) * vov + 0.98 * resistance * 60e-6
+    np.testing.assert_allclose(CATALOGUE["steering_voltage"].of(a), expected, rtol=2e-3)
+
+
+@pytest.mark.xfail(strict=True, reason="the end of a drive is not found for some strongly degenerated pairs")
+@pytest.mark.parametrize("kind", [KINDS[4], KINDS[14], KINDS[19], KINDS[20]], ids=named)
+def test_degenerated_pairs_are_steered_somewhere(kind: Kind) -> None:
+    """Whatever the resistance, up to one that takes more than a volt: each design has its voltage, and it grows."""
+    a = analysed(kind, input_degeneration=np.geomspace(200.0, 16e3, 20))
+    found = CATALOGUE["steering_voltage"].of(a)[a.converged]
+    assert np.isfinite(found).all()
+    assert (np.diff(found) > 0.0).all()
+
+
+def test_the_nearer_direction_counts() -> None:
+    """A pair whose current factors differ, at its nulled output: with y steered and a_k = sqrt(I/beta_k), the input is
+    a1 (sqrt(1 + y) - 1) + a2 (1 - sqrt(1 - y)), and the tangent y = 2 vid / (a1 + a2). It bends one way at first, so
+    the departures of both directions are met at different inputs; the smaller one counts (derived)."""
+    a, vov = square_pair("nmos", "resistor", "differential")
+    t, r = len(a.wiring.transistors), len(a.wiring.resistors)
+    one = mismatch.Deviations(np.zeros((t, 1)), np.zeros((t, 1)), np.zeros((r, 1)))
+    one.factor[a.wiring.pair] = np.array([[0.15], [-0.15]])
+    unlike = mismatch.Sampled(mismatch.varied(a.circuit, one), a)
+    a1, a2 = (float(vov[0]) / np.sqrt(1.0 + x) for x in (0.15, -0.15))
+
+    def departure(y: float) -> tuple[float, float]:
+        vid = a1 * (np.sqrt(1.0 + y) - 1.0) + a2 * (1.0 - np.sqrt(1.0 - y))
+        return abs(y * 0.5 * (a1 + a2) / vid - 1.0), abs(vid)
+
+    each = []
+    for sign in (1.0, -1.0):
+        y = brentq(lambda y, sign=sign: departure(sign * y)[0] - 0.03, 1e-3, 0.9)
+        each.append(departure(sign * y)[1])
+    assert max(each) > 1.2 * min(each)
+    np.testing.assert_allclose(ranges.linear_range(unlike, 0.03), min(each), rtol=1e-4)
+    steered = [x * (np.sqrt(1.98) - 1.0) + y * (1.0 - np.sqrt(0.02)) for x, y in ((a1, a2), (a2, a1))]
+    np.testing.assert_allclose(ranges.steering_voltage(unlike), min(steered), rtol=3e-3)
 
 
 def third_over_first(curve: Callable[[Array], Array], amplitude: float) -> float:
@@ -160,13 +199,27 @@ def test_third_harmonic_in_weak_inversion(input: str, output: str) -> None:
 
 def test_a_sine_that_clips_has_no_third_harmonic() -> None:
     """Undefined from where the gain would ask for more than the supply; one design's clipping is not another's."""
-    a = analysed(("nmos", "resistor", "ideal", "differential"), load_resistance=np.array([1e3, 20e3]))
-    amplitude = 3.4 / float(np.abs(a.adm[1]))
-    assert np.isnan(ranges.third_harmonic(a, amplitude)).tolist() == [False, True]
-    alone = analysed(("nmos", "resistor", "ideal", "differential"), load_resistance=np.array([1e3]))
-    np.testing.assert_allclose(
-        ranges.third_harmonic(a, amplitude)[0], ranges.third_harmonic(alone, amplitude)[0], rtol=1e-6
-    )
+    amplitude = 0.04
+    a, _ = square_pair("nmos", "resistor", "differential", input_width=1e-3, load_resistance=np.array([1e3, 40e3]))
+    for beyond, clipped in ((0.05, False), (-0.05, True)):
+        supply = amplitude * float(np.abs(a.adm[1])) + beyond
+        found = ranges.third_harmonic(under(a, supply=supply, common_mode=(1.8, 1.8)), amplitude)
+        assert np.isnan(found).tolist() == [False, clipped]
+        alone, _ = square_pair("nmos", "resistor", "differential", input_width=1e-3, load_resistance=1e3)
+        np.testing.assert_allclose(found[0], ranges.third_harmonic(alone, amplitude)[0], rtol=1e-6)
+
+
+@pytest.mark.xfail(strict=True, reason="Newton does not settle from a straight start that the rails cut off")
+@pytest.mark.parametrize("amplitude", [0.2, 0.4])
+@pytest.mark.parametrize("process", ["handbook", "generic-180"])
+def test_a_fully_steered_pair_is_distorted_not_undefined(process: str, amplitude: float) -> None:
+    """A sine that steers the pair fully from side to side, with an output that asks for less than the supply: close to
+    a square wave, whose third harmonic is a third (Fourier)."""
+    a = saturated(("nmos", "resistor", "single", "single-ended"), process, 30, 3)
+    asked = amplitude * np.abs(a.adm) < a.circuit.conditions.supply
+    found = ranges.third_harmonic(a, amplitude)[asked]
+    assert np.isfinite(found).all()
+    assert (found < 0.36).all()
 
 
 @pytest.mark.parametrize("input", ["nmos", "pmos"])

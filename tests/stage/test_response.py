@@ -130,6 +130,27 @@ def test_rails_of_a_resistor_load(input: str) -> None:
     np.testing.assert_allclose(CATALOGUE[f"{load}_rejection"].of(r.a), decibels(r.a.adm), atol=1e-9)
 
 
+def test_capacitance_at_the_output_holds_it_to_ground() -> None:
+    """Load capacitor, junction of the drain and half of the resistor's capacitance stand between the output and ground
+    (the bulk of an n-channel pair is there): from the supply, 1 / (1 + jw R C)
+    (standard; without gds and overlap)."""
+    process = without("handbook", channel_modulation=0.0, overlap_capacitance=0.0)
+    r = process.resistor.model_copy(update={"capacitance": 2e-3})
+    a = analysed(("nmos", "resistor", "ideal", "differential"), process.model_copy(update={"resistor": r}))
+    a = under(a, load_capacitance=2e-12)
+    resistance, width = 20e3, r.width
+    drawn, row = a.circuit.drawn, a.wiring.rows["input.n"]
+    card, reverse = process.nmos, a.terminals.drain[row]
+    step = 1.0 + reverse / card.junction_potential
+    junction = card.junction_capacitance * drawn.drain_area[row] * step**-card.junction_grading
+    junction = junction + card.sidewall_capacitance * drawn.drain_edge[row] * step**-card.sidewall_grading
+    total = 2e-12 + junction + 0.5 * 2e-3 * (resistance / r.sheet_resistance * width) * width
+    np.testing.assert_allclose(a.output_capacitance, total, rtol=1e-9)
+    for frequency in (1e5, 1e7, 1e9):
+        expected = 1.0 / (1.0 + 2j * np.pi * frequency * resistance * total)
+        np.testing.assert_allclose(response(a, frequency).mean_gain("supply"), expected, rtol=1e-9)
+
+
 @pytest.mark.parametrize("kind", [KINDS[3], KINDS[5], KINDS[13], KINDS[14], KINDS[-2], KINDS[-1]], ids=named)
 def test_branches_are_what_injected_currents_do(kind: Kind) -> None:
     """A little more current in each bias leg of the nonlinear stage moves the output by what the branch's weight

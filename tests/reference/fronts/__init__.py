@@ -2,7 +2,7 @@
 
     python -m tests.reference.fronts
 
-remakes them: for each problem the union of the archives of ten runs (seeds 101 to 110) of ten times the default budget,
+remakes them, and ``python -m tests.reference.fronts NAME`` makes that of another problem: for each the union of the archives of ten runs (seeds 101 to 110) of ten times the default budget,
 without stopping early. What is stored is the box between the best and the worst loss of that union (a tenth wider on
 the far side: the reference point at 1.1 of the range that is customary for DTLZ2), and the hypervolume of the union in
 it, with the hashes of the problem and process files.
@@ -21,7 +21,7 @@ from optisize.problem.load import load_problem
 
 ROOT = Path(__file__).parents[3]
 HERE = Path(__file__).parent
-PROBLEMS = tuple(sorted(path.stem for path in (ROOT / "problems").glob("*.toml")))
+PROBLEMS = tuple(sorted(path.stem for path in HERE.glob("*.json")))  # those that have been worked out
 SEEDS = tuple(range(101, 111))
 TIMES = 10
 
