@@ -14,7 +14,7 @@ import numpy as np
 
 from optisize.process.law import Array
 
-LEAST = 1e-30  # of a square over Is; what carries less is off
+LEAST = 1e-100  # of a square over Is; what carries less is off
 STEPS = 12
 TOP = 160.0  # of v / 2 ut; exp stays finite in double precision, and far beyond any supply
 

@@ -23,7 +23,8 @@ FORMAT = "optisize table 1"
 CHANNELS = ("n", "p")
 SMALL = ("cgs", "cgd", "cgb", "noise", "flicker")
 UNITS = {
-    "current": ("A", "drain current"),
+    "pinch_off": ("V", "the p of which current = specific_current width / length (F(p) - F(p - vds)), "
+    "F(v) = ln(1 + exp(v / 2 ut))^2, ut = k temperature / q"),
     "vdsat": ("V", "drain-source voltage at which saturation begins"),
     "cgs": ("F m-2", "capacitance of the gate to the source, over width and length"),
     "cgd": ("F m-2", "capacitance of the gate to the drain, over width and length"),
@@ -53,7 +54,7 @@ class Grids:
     @property
     def boxes(self) -> dict[str, Box]:
         """The splines by the name of what they go through."""
-        return {"current": self.current, "vdsat": self.vdsat} | dict.fromkeys(SMALL, self.small)
+        return {"pinch_off": self.current, "vdsat": self.vdsat} | dict.fromkeys(SMALL, self.small)
 
 
 @dataclass(frozen=True)
@@ -63,7 +64,7 @@ class ChannelTable:
     Attributes:
         specific_current: 2 n beta ut^2 of a square [A], about; the scale of the inversion level.
         flicker_exponent: of the frequency.
-        figures: by name: `current` [A], `vdsat` [V]; at the widths for capacitances and noise: `cgs`, `cgd`, `cgb`
+        figures: by name: `pinch_off` [V], see `optisize.process.pinch`, and `vdsat` [V]; at the widths for capacitances and noise: `cgs`, `cgd`, `cgb`
             [F/m^2], `noise`, `flicker` [V^2 m^2].
         junction: of one junction over the reverse voltage: `area` [F/m^2], `edge` and `gate` [F/m], each (R,).
     """
@@ -213,7 +214,8 @@ def _write_axes(file: Any, tables: Tables) -> None:
 def _write_channel(file: Any, channel: str, tables: Sequence[ChannelTable]) -> None:
     """Write the tables of one channel at all conditions."""
     for name, (unit, text) in UNITS.items():
-        box, widths = (name, "widths") if name in ("current", "vdsat") else ("small", "small_widths")
+        box = {"pinch_off": "current", "vdsat": "vdsat"}.get(name, "small")
+        widths = "small_widths" if box == "small" else "widths"
         axes = [f"{axis}_{box}" for axis in ("vgs", "vds", "vsb")]
         dimensions = ["condition", f"{channel}_lengths", f"{channel}_{widths}", *axes]
         variable = file.createVariable(f"{channel}_{name}", "f", tuple(dimensions))

@@ -15,7 +15,7 @@ from optisize.simulator.netlist import STAGE, Device, number, wrapped
 from optisize.stage.circuit import Circuit
 
 OXIDE_PERMITTIVITY = 3.9 * 8.854214871e-12  # F/m, the constant with which the level-1 model reads TOX
-NO_LEAK = 1e-30  # A, of junctions
+NO_LEAK = 1e-60  # A, of junctions
 
 
 class Devices(Protocol):
@@ -165,30 +165,30 @@ _CHARGE = """\
 {parameters}
 .param r0={{sqrt(phi)+gamma/2}} strength={{2*kp*w*units/l*ut*ut}} delta={{4*ut}} lateral={{2*ut/(critical*l)}}
 * pinch-off voltage, slope factor, and ln(1 + exp(v / 2 ut)) of both ends of the channel
-Broot root 0 v=sqrt(max({vg}-{{vt0}}+{{r0*r0}},{{max(0.75*gamma,0.01)^2}}))
-Bvp vp 0 v={vg}-{{vt0}}-{{gamma}}*(v(root)-{{r0}})
-Bslope slope 0 v=1/(1-{{gamma/2}}/v(root))
-Bforward forward 0 v=ln(1+exp(min((v(vp)-{vs})/{{2*ut}},300)))
-Breverse reverse 0 v=ln(1+exp(min((v(vp)-{vd})/{{2*ut}},300)))
+Broot root 0 v=sqrt(max({vg}-vt0+(r0*r0),(max(0.75*gamma,0.01)^2)))
+Bvp vp 0 v={vg}-vt0-gamma*(v(root)-r0)
+Bslope slope 0 v=1/(1-(gamma/2)/v(root))
+Bforward forward 0 v=ln(1+exp(min((v(vp)-{vs})/(2*ut),300)))
+Breverse reverse 0 v=ln(1+exp(min((v(vp)-{vd})/(2*ut),300)))
 * channel-length modulation, vertical field, velocity saturation
-Blength length 0 v=1+(sqrt(({vd}-{vs})^2+{{delta*delta}})-{{delta}})/{{early*l}}
-Bfield field 0 v=1+{{theta/2}}*(v(vp)+sqrt(v(vp)^2+{{delta*delta}}))
-Bdrag drag 0 v=sqrt(1+({{lateral}}*(v(forward)-v(reverse)))^2)
+Blength length 0 v=1+(sqrt(({vd}-{vs})^2+(delta*delta))-delta)/(early*l)
+Bfield field 0 v=1+(theta/2)*(v(vp)+sqrt(v(vp)^2+(delta*delta)))
+Bdrag drag 0 v=sqrt(1+(lateral*(v(forward)-v(reverse)))^2)
 Bchannel {ends} i={current}{white}
-Bvdsat vdsat 0 v={{2*ut}}*v(forward)+{{4*ut}}
+Bvdsat vdsat 0 v=(2*ut)*v(forward)+(4*ut)
 * gate capacitances by the charges of both ends, and junctions without leakage
 Bxf xf 0 v=sqrt(0.25+v(forward)^2)
 Bxr xr 0 v=sqrt(0.25+v(reverse)^2)
 Bcs cs 0 v=2/3*(1-(v(xr)^2+v(xr)+v(xf)/2)/(v(xf)+v(xr))^2)
 Bcd cd 0 v=2/3*(1-(v(xf)^2+v(xf)+v(xr)/2)/(v(xf)+v(xr))^2)
-Cgs g s c='{{oxide*w*l*units}}*v(cs)+{{overlap*w*units}}'
-Cgd g d c='{{oxide*w*l*units}}*v(cd)+{{overlap*w*units}}'
-Cgb g b c='{{oxide*w*l*units}}*(1-1/v(slope))*(1-v(cs)-v(cd))'
+Cgs g s c='(oxide*w*l*units)*v(cs)+(overlap*w*units)'
+Cgd g d c='(oxide*w*l*units)*v(cd)+(overlap*w*units)'
+Cgb g b c='(oxide*w*l*units)*(1-1/v(slope))*(1-v(cs)-v(cd))'
 Ddrain {junction_d} junction area={{ad*units}} pj={{pd*units}}
 Dsource {junction_s} junction area={{as*units}} pj={{ps*units}}
 .model junction d {junction}
 {noise}.ends"""
-_CHARGE_CURRENT = "{strength}*v(slope)*v(length)/(v(field)*v(drag))*(v(forward)^2-v(reverse)^2)"
+_CHARGE_CURRENT = "strength*v(slope)*v(length)/(v(field)*v(drag))*(v(forward)^2-v(reverse)^2)"
 
 # The noise of one ohm times the root of the conductance Gamma gms; at the gate, flicker noise of an unbiased resistor.
 _CHARGE_NOISE = """\
@@ -196,10 +196,10 @@ _CHARGE_NOISE = """\
 Bqf qf 0 v=max(v(forward)^2/(v(xf)+0.5),1e-30)
 Bqr qr 0 v=v(reverse)^2/(v(xr)+0.5)
 Bshare share 0 v=(4*(v(qf)^2+v(qf)*v(qr)+v(qr)^2)+3*(v(qf)+v(qr)))/(6*v(qf)*(v(qf)+v(qr)+1))
-Bpull pull 0 v={{lateral^2}}*(v(forward)-v(reverse))/v(drag)^2
-Bend end 0 v={{strength/ut}}*v(slope)*v(length)/(v(field)*v(drag))*(1-exp(-v(forward)))
+Bpull pull 0 v=(lateral^2)*(v(forward)-v(reverse))/v(drag)^2
+Bend end 0 v=(strength/ut)*v(slope)*v(length)/(v(field)*v(drag))*(1-exp(-v(forward)))
 Bgap gap 0 v=v(forward)-v(pull)*(v(forward)^2-v(reverse)^2)/2
-Blift lift 0 v=({vd}-{vs})/({{early*l}}*v(length)*sqrt(({vd}-{vs})^2+{{delta*delta}}))
+Blift lift 0 v=({vd}-{vs})/((early*l)*v(length)*sqrt(({vd}-{vs})^2+(delta*delta)))
 Bgms gms 0 v=max(v(end)*v(gap)+{current}*v(lift),1e-30)
 Rwhite white 0 1
 Eflicker gate g drop 0 1u
@@ -234,7 +234,7 @@ class ChargeDevices(_OfProcess):
             vs=vs,
             ends="d s" if device.channel == "n" else "s d",
             current=_CHARGE_CURRENT,
-            white="+sqrt(v(share)*v(gms))*v(white)" if self._noisy else "",
+            white="+sqrt(max(v(share)*v(gms),1e-30))*v(white)" if self._noisy else "",
             junction_d="b d" if device.channel == "n" else "d b",
             junction_s="b s" if device.channel == "n" else "s b",
             junction=self._junction(device),

@@ -24,7 +24,9 @@ from optisize.stage.wiring import Moving, moving
 
 RANGE_SETTLED = 2e-3  # V; leaves less than 0.1 mV at the ends of the range, where only the headroom is read
 Kept = TypeVar("Kept")
-UNLIMITED = 1e-11  # a common-mode gain below this part of the terms it is summed from is rounding, hence zero
+# A gain that should not be there is rounding, hence zero, below this part of the terms that it is summed from, or below
+# this part of the differential gain of a stage whose outputs stand on gigaohms.
+UNLIMITED, UNLIMITED_GAIN = 1e-11, 2e-14
 
 
 class Analysis:
@@ -159,7 +161,8 @@ class Analysis:
 
     def beyond_rounding(self, gain: Array) -> Array:
         """Return a gain to the output, exactly zero where it is no more than the rounding of its terms, (N,)."""
-        return np.where(np.abs(gain) < UNLIMITED * self._rounding_scale, 0.0, gain)
+        rounding = np.maximum(UNLIMITED * self._rounding_scale, UNLIMITED_GAIN * np.abs(self.adm))
+        return np.where(np.abs(gain) < rounding, 0.0, gain)
 
     @cached_property
     def _rounding_scale(self) -> Array:

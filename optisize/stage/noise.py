@@ -13,7 +13,7 @@ from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from optisize.stage.response import Response
 
-POINTS_PER_DECADE = 1.5  # of the Gauss-Legendre rule over the logarithm of the frequency
+POINTS_PER_DECADE = 2.0  # of the Gauss-Legendre rule over the logarithm of the frequency
 LEAST_POINTS = 5
 
 

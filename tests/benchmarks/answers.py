@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import subprocess
 import tempfile
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Protocol
@@ -124,12 +124,11 @@ class Reader:
         """Return the output swing from a sweep of the differential input."""
         current = self.pair("swing")
         margin = np.min([*self.room("swing"), *(np.sqrt(current / current.sum(axis=0)) - 0.1)], axis=0)
-        walks = [(margin, self.output("swing"))]
+        output, rest = self.output("swing"), len(margin) // 2
         if self.a.topology.symmetric:
-            walks.append((margin, self.output("swing", mirrored=True)))
+            walks = [(margin, output), (margin, self.output("swing", mirrored=True))]
         else:
-            rest = len(margin) // 2
-            walks = [(margin[rest:], walks[0][1][rest:]), (margin[rest::-1], walks[0][1][rest::-1])]
+            walks = [(margin[rest:], output[rest:]), (margin[rest::-1], output[rest::-1])]
         return 2.0 * float(min(abs(at(output, first_zero(m)) - output[0]) for m, output in walks))
 
 
@@ -152,9 +151,10 @@ def at(values: Array, place: float) -> float:
 class Answering(Protocol):
     """A script of which answers can be read."""
 
-    deck: list[str]
     bounds: Mapping[str, Bound]
 
+    @property
+    def deck(self) -> list[str]: ...
     def commands(self, count: int, keep: bool = False) -> list[str]: ...
     def own(self) -> dict[str, Array]: ...
     def answers(self, plots: Plots, k: int) -> dict[str, float]: ...
@@ -200,8 +200,3 @@ def checked(ngspice: str, script: Answering, count: int) -> dict[str, dict[str, 
             "within": float(np.mean(missed <= bound.value)),
         }
     return rows
-
-
-def worst(rows: Mapping[str, Mapping[str, float]], but: Sequence[str] = ()) -> float:
-    """Return the smallest share of designs within its bound of all measures."""
-    return min(row["within"] for name, row in rows.items() if name not in but)

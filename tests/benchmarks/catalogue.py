@@ -27,7 +27,7 @@ HELD = 10  # points of the differential input to where the pair is steered
 STEERED_PAST = 1.05
 CURVE = 3  # points of the static curve on each side of rest
 NOISE_PER_DECADE = 2
-FINE = "reltol=1e-7 vntol=1e-9"  # for the distortion
+FINE = "reltol=1e-8 vntol=1e-10"  # for the distortion
 OPEN, CLOSED = "1e18", "1e-3"  # ohm, of what holds the outputs
 LEFT_OUT = ("offset_sigma", "offset", "common_mode_gain_sigma", "cmrr_mismatch", "offset_systematic", "area")
 SWEPT = "v(v-sweep)"
@@ -48,9 +48,9 @@ class CatalogueScript(Script):
       altered so that it gives at the known operating point what the process says;
     - a sweep of the differential input with held outputs, to where the pair is steered: linear range and steering. What
       holds them is a source behind a resistor from the outputs to their known voltages, which leaves a control of them
-      where it is; the resistor is altered from as good as open to as good as none and back. A second copy of the stage with held
-      outputs would double deck and alterations;
-    - the static curve over the sine's peak to peak, `CURVE` points on each side of rest, with a polynomial through them:
+      where it is; the resistor is altered from as good as open to as good as none and back. A second copy of the stage
+      with held outputs would double deck and alterations;
+    - the static curve over the sine's peak to peak, `CURVE` points on each side of rest and a polynomial through them:
       the distortion. Its tolerance is finer, and it is left out where the kernel gives none.
     """
 
@@ -214,7 +214,10 @@ class CatalogueScript(Script):
         return float(np.exp(density))
 
     def _integrated(self, plot: spice.Plot) -> float:
-        """Return the noise over the band: a power law between the points. The simulator's total lets go of the gain."""
+        """Return the noise over the band: a power law between the points.
+
+        The simulator's own total takes the gain at the end of each step for the whole of it, and needs far more points.
+        """
         log_f, log_power = np.log(plot["frequency"]), 2.0 * np.log(plot["inoise_spectrum"])
         slope = np.diff(log_power) / np.diff(log_f) + 1.0
         slope = np.where(np.abs(slope) < 1e-9, 1e-9, slope)
@@ -224,26 +227,20 @@ class CatalogueScript(Script):
     def _held(self, read: Reader, plot: spice.Plot) -> dict[str, float]:
         """Return linear range and steering voltage; the tangent is what the first points on each side give."""
         departure = float(CATALOGUE["linear_range"].taken_at["departure"])  # type: ignore[arg-type]
-        v, current = plot[SWEPT], sum(
-            sign * plot[f"i(v_hold_{spice.node(node, 0)})"] for node, sign in self.top.output
-        )
+        v, sides = plot[SWEPT].copy(), [sign * plot[f"i(v_hold_{spice.node(n, 0)})"] for n, sign in self.top.output]
         rest = int(np.argmin(np.abs(v)))
-        walks = [slice(rest, None)] if self.top.symmetric else [slice(rest, None), slice(rest, None, -1)]
-        moved_by = current - current[rest]
-        pair = read.pair("held")
-        share = np.sqrt(pair.min(axis=0) / pair.sum(axis=0)) - 0.1
-        # The transconductance at the points, and at rest by a parabola through those next to it.
+        v[rest], current = np.nan, np.sum(sides, axis=0)
+        slope, pair = (current - current[rest]) / v, read.pair("held")
+        left = np.sqrt(pair.min(axis=0) / pair.sum(axis=0)) - 0.1
+        # The slope at rest: of a polynomial through the slopes to the points beside it.
         near = rest + (np.array([1, 2, 3]) if self.top.symmetric else np.array([-2, -1, 1, 2]))
-        x, y = v[near], moved_by[near] / v[near]
-        terms = np.stack([x**0, x**2, x**4] if self.top.symmetric else [x**0, x, x**2, x**3], axis=1)
-        tangent = np.linalg.lstsq(terms / np.abs(terms).max(axis=0), y, rcond=None)[0][0]
-        found = []
-        for walk in walks:
-            gone = np.abs(moved_by[walk][1:] / v[walk][1:] / tangent - 1.0)
-            found.append(_departure(np.abs(v[walk][1:]), gone, departure))
+        x = v[near] / v[near[-1]]
+        terms = [x**0, x**2, x**4] if self.top.symmetric else [x**0, x, x**2, x**3]
+        gone = np.abs(slope / np.linalg.solve(np.stack(terms, axis=1), slope[near])[0] - 1.0)
+        walks = [slice(rest + 1, None)] if self.top.symmetric else [slice(rest + 1, None), slice(rest - 1, None, -1)]
         return {
-            "linear_range": float(np.nanmin(found)),
-            "steering_voltage": float(np.nanmin([abs(at(v[w], first_zero(share[w]))) for w in walks])),
+            "linear_range": float(np.nanmin([_departure(np.abs(v[w]), gone[w], departure) for w in walks])),
+            "steering_voltage": float(np.nanmin([abs(at(v[w], first_zero(left[w]))) for w in walks])),
         }
 
     def _third_harmonic(self, read: Reader) -> float:
@@ -263,4 +260,5 @@ def _departure(v: Array, gone: Array, departure: float) -> float:
     i = int(beyond[0])
     if i == 0:
         return float(v[0] * np.sqrt(departure / gone[0]))
-    return float(np.exp(np.interp(np.log(departure), np.log(np.maximum(gone[i - 1 : i + 1], 1e-12)), np.log(v[i - 1 : i + 1]))))
+    around = slice(i - 1, i + 1)
+    return float(np.exp(np.interp(np.log(departure), np.log(np.maximum(gone[around], 1e-12)), np.log(v[around]))))

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import tempfile
-from collections.abc import Callable, Mapping, Sequence
-from itertools import count
+from collections.abc import Callable, Mapping
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -19,7 +19,7 @@ from optisize.stage.circuit import size_circuit
 from optisize.stage.measures import CATALOGUE, FIGURES
 from tests.benchmarks import simulator
 from tests.benchmarks.answers import checked
-from tests.benchmarks.catalogue import AT_HIGH, HIGH, CatalogueScript
+from tests.benchmarks.catalogue import AT_HIGH, HIGH
 from tests.benchmarks.scripts import FOUR_ANALYSES, Script
 from tests.benchmarks.timing import least, spent
 from tests.reference.samples import Kind, conditions, draw
@@ -53,9 +53,14 @@ def sized(kind: Kind, designs: int) -> Analysis:
 
 
 def kind_problem(kind: Kind, sizes: Mapping[str, Array]) -> Problem:
-    """Return a problem of a kind of stage in the square-law process whose sizing space holds the sizes."""
-    where = conditions(kind, load_process("handbook"))
-    ranges = "\n".join(f"{name} = [{v.min():.4g}, {v.max():.4g}]" for name, v in sizes.items())
+    """Return a problem of a kind of stage in the square-law process, with a sizing space over the sizes.
+
+    The space leaves out what is narrower than the process can draw; evaluation takes it all the same.
+    """
+    process = load_process("handbook")
+    where, narrowest = conditions(kind, process), process.grid.minimum_width
+    lows = {name: max(v.min(), narrowest) if name.endswith("width") else v.min() for name, v in sizes.items()}
+    ranges = "\n".join(f"{name} = [{lows[name]:.4g}, {max(v.max(), 2 * lows[name]):.4g}]" for name, v in sizes.items())
     held = f'output_common_mode = "{where.output_common_mode} V"' if where.output_common_mode else ""
     at_high = "\n".join(f'{name} = {{ of = "{of}", frequency = "{HIGH} Hz" }}' for name, of in AT_HIGH.items())
     text = f"""
@@ -145,16 +150,10 @@ def measures_us(kind: Kind, designs: int = CHUNK, repeats: int = 5) -> dict[str,
     rounds = []
     for _ in range(repeats):
         fresh = Analysis(problem.circuit(a.circuit.sizes))
-        point = spent(lambda: fresh.converged)
-        rounds.append([point, *(spent(lambda: m.of(fresh)) for m in wanted)])
+        rounds.append([spent(partial(getattr, fresh, "point")), *(spent(partial(m.of, fresh)) for m in wanted)])
     in_turn = np.min(rounds, axis=0)
-    alone = [min(_alone(a, every, m.of) for _ in range(repeats)) for m in wanted]
+    alone = [min(spent(partial(m.of, a.take(every))) for _ in range(repeats)) for m in wanted]
     rows = zip(["operating point", *(m.name for m in wanted)], [in_turn[0], *alone], in_turn, strict=True)
     scale = 1e6 / designs
     table = {name: {"alone": scale * float(one), "in_turn": scale * float(turn)} for name, one, turn in rows}
     return dict(sorted(table.items(), key=lambda row: -row[1]["in_turn"]))
-
-
-def _alone(a: Analysis, every: Any, measure: Callable[[Analysis], Array]) -> float:
-    part = a.take(every)
-    return spent(lambda: measure(part))

@@ -10,7 +10,7 @@ the bounds of `answers`.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 
 import numpy as np
 
@@ -72,7 +72,9 @@ class Script:
         unity = a.gain_crossing(a.adm**2 - 1.0)
         self.ends = np.concatenate([bandwidth, unity])
         cascoded = any("cascode" in t.group for t in self.top.transistors)
-        self.fineness = 2 if cascoded else 1  # of the points: where cascodes leave saturation nothing is straight for long
+        self.fineness = (
+            2 if cascoded else 1
+        )  # of the points: where cascodes leave saturation nothing is straight for long
         self.amplitudes = _swing_inputs(a) * BEYOND
 
     @property

@@ -4,11 +4,17 @@ Both sides of each ratio run on one core of the same machine, alternately, sever
 pairs, and times are of the processor. What else runs there still matters: arrays suffer more from shared caches than
 the simulator does, by up to a quarter.
 
-    evaluation_vs_simulator   processor time a design of the circuit simulator over that of evaluating every measure and
-                              every figure of every transistor in one batch, for the circuit of `PROBLEM` with the
-                              square law; `detail` has it for all of `KINDS`
+    evaluation_vs_simulator   processor time a design of the circuit simulator over that of evaluating, in one batch,
+                              the measures that four analyses give and every figure of every transistor, for the circuit
+                              of `PROBLEM` with the square law; `detail.kinds` has it for `FOUR_KINDS`
+    catalogue_vs_simulator    the same of every measure of the catalogue with its default parameters, and of rejections
+                              at 1 MHz, against the nine analyses that these need; `detail.catalogue` has it for all of
+                              `KINDS`, and `detail.measures_us` what each measure takes
+    spread_vs_evaluation      time of 100 000 samples of the mismatch of one design over that of evaluating 150 000
+                              designs with the same measures, the largest of all problems; at most one is wanted
     search_vs_stock           time of pymoo's stock NSGA-II over that of a whole search with the same budget, on the
-                              same evaluator and `PROBLEM`
+                              same evaluator and `PROBLEM`; `detail.problems` has it for all problems, those of
+                              `SHORTER` with fewer generations and seeds
     hypervolume_vs_stock      hypervolume of the search's archive over that of every feasible design that the stock
                               ever evaluated, in the same box; the median over the seeds
     evaluation_share          the part of the search's time that evaluation takes
@@ -20,204 +26,36 @@ the simulator does, by up to a quarter.
 from __future__ import annotations
 
 import argparse
-import contextlib
 import json
 import os
 import resource
 import shutil
 import subprocess
 import sys
-import tempfile
-import time
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Sequence
 from functools import partial
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from optisize.errors import NothingFeasible
-from optisize.evolution.archive import Archive, Front
-from optisize.evolution.state import Settings
-from optisize.front import explore
-from optisize.front.run import Run
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_problem
-from optisize.process.card import load_process
-from optisize.process.law import Array
-from optisize.stage.analysis import Analysis
-from optisize.stage.circuit import size_circuit
-from optisize.stage.measures import CATALOGUE, FIGURES
-from tests.benchmarks import simulator
-from tests.reference.samples import Kind, conditions, draw
+from tests.benchmarks import evaluation, sampling
+from tests.benchmarks.catalogue import CatalogueScript
+from tests.benchmarks.evaluation import KINDS
+from tests.benchmarks.sampling import random_sizes
+from tests.benchmarks.scripts import Script
+from tests.benchmarks.searching import against_stock
+from tests.benchmarks.timing import least
 
 HERE = Path(__file__).resolve().parents[2]
 PROBLEMS = sorted((HERE / "problems").glob("*.toml"))
 PROBLEM = HERE / "problems" / "thermopile-preamplifier.toml"
-KINDS = [Kind("nmos", "resistor", "single"), Kind("nmos", "mirror", "single")]
+FOUR_KINDS = KINDS[:2]
+SHORTER = {"hydrophone-recorder": 60, "low-supply-telescopic": 60}  # generations; their designs take longest
 ONE_THREAD = {name: "1" for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")}
 COUNTS = (2_000, 20_000, 200_000)
-SIMULATED = 300
-
-
-def spent(work: Callable[[], object]) -> float:
-    """Return the processor seconds of some work in this process."""
-    begin = time.process_time()
-    work()
-    return time.process_time() - begin
-
-
-def least(work: Callable[[], object], repeats: int) -> float:
-    """Return the least processor seconds of some work."""
-    return min(spent(work) for _ in range(repeats))
-
-
-def sized(kind: Kind, count: int) -> Analysis:
-    """Return that many random sizings of a kind in the square-law process, all of them saturated at rest."""
-    process = load_process("handbook")
-    where, sizes = conditions(kind, process), draw(kind, process, 6 * count + 60, seed=1)
-    a = Analysis(size_circuit(kind.topology, process, where, sizes))
-    good = np.flatnonzero(a.converged & (a.room_at_rest > 5e-3) & (a.drain.id.min(axis=0) > 1e-8))[:count]
-    if len(good) < count:
-        raise RuntimeError(f"only {len(good)} of {6 * count + 60} sizings of {kind} are saturated")
-    return Analysis(size_circuit(kind.topology, process, where, {name: v[good] for name, v in sizes.items()}))
-
-
-def kind_problem(kind: Kind, sizes: Mapping[str, Array]) -> Problem:
-    """Return a problem of a kind of stage in the square-law process whose sizing space holds the sizes."""
-    where = conditions(kind, load_process("handbook"))
-    ranges = "\n".join(f"{name} = [{v.min():.4g}, {v.max():.4g}]" for name, v in sizes.items())
-    text = f"""
-title = "every measure"
-process = "handbook"
-[stage]
-input = "{kind.input}"
-load = "{kind.load}"
-tail = "{kind.tail}"
-output = "{kind.output}"
-[conditions]
-supply = "{where.supply} V"
-common_mode = ["{where.common_mode[0]!r} V", "{where.common_mode[1]!r} V"]
-load_capacitance = "{where.load_capacitance} F"
-[sizes]
-{ranges}
-[goals]
-gain = "max"
-supply_current = "min"
-"""
-    with tempfile.TemporaryDirectory() as folder:
-        path = Path(folder) / "problem.toml"
-        path.write_text(text, encoding="utf-8")
-        return load_problem(path)
-
-
-def every_measure(problem: Problem) -> list[str]:
-    """Return the names of all measures and of all figures of all transistors."""
-    return [*CATALOGUE, *(f"{t.name}.{figure}" for t in problem.topology.transistors for figure in FIGURES)]
-
-
-def against_simulator(
-    ngspice: str, kind: Kind, *, sizings: int = 2000, batch: int = 4000, simulated: int = SIMULATED, repeats: int = 5
-) -> dict[str, Any]:
-    """Time evaluation and simulation of the same sizings of a kind."""
-    a = sized(kind, sizings)
-    problem = kind_problem(kind, a.circuit.sizes)
-    sizes = {name: np.resize(v, batch) for name, v in a.circuit.sizes.items()}
-    names = every_measure(problem)
-    script = simulator.Script(a)
-    problem.measure(sizes, names)
-    pairs = []
-    for _ in range(repeats):
-        own = least(lambda: problem.measure(sizes, names), 5) / batch
-        other, way = simulator.fastest(ngspice, script, min(simulated, sizings), repeats=2)
-        pairs.append((own, other))
-    ratio = float(np.median([other / own for own, other in pairs]))
-    own, other = np.median(pairs, axis=0)
-    return {
-        "ratio": ratio,
-        "evaluation_us": 1e6 * float(own),
-        "simulator_us": 1e6 * float(other),
-        "simulator": way,
-        "program_us": 1e6 * simulator.by_program(ngspice, script, min(simulated, sizings), repeats=2),
-        "alterations": len(script.alterations(0)),
-        "deviation": simulator.checked(ngspice, script, min(40, sizings)),
-    }
-
-
-def stock_search(problem: Problem, seed: int, population: int, generations: int) -> tuple[float, float, Front]:
-    """Run pymoo's NSGA-II as it comes; return its seconds, those in evaluation, and all that is worth keeping."""
-    from pymoo.algorithms.moo.nsga2 import NSGA2
-    from pymoo.core.problem import Problem as PymooProblem
-    from pymoo.optimize import minimize
-
-    evaluator = explore.Evaluator(problem, 1)
-    inside: list[float] = []
-    seen: list[Front] = []
-
-    class Stage(PymooProblem):  # type: ignore[misc]
-        """The same evaluator, whole populations at a time."""
-
-        def __init__(self) -> None:
-            super().__init__(n_var=problem.space.dimensions, n_obj=len(problem.goals), n_ieq_constr=1, xl=0.0, xu=1.0)
-
-        def _evaluate(self, x: Array, out: dict[str, Array], *_args: object, **_kwargs: object) -> None:
-            begin = time.process_time()
-            found = evaluator(np.ascontiguousarray(x.T))
-            inside.append(time.process_time() - begin)
-            out["F"], out["G"] = found.losses.T, found.violation[:, None]
-            good = found.take(np.flatnonzero(found.violation <= 0.0))
-            seen.append(Front(good.vectors, good.losses))
-
-    algorithm, stage = NSGA2(pop_size=population), Stage()
-    seconds = spent(lambda: minimize(stage, algorithm, ("n_gen", generations), seed=seed, verbose=False))
-    archive = Archive.empty(problem.space.dimensions, len(problem.goals))
-    for front in seen:
-        archive = archive.add(front)
-    return seconds, sum(inside), archive.merged().front
-
-
-def own_search(problem: Problem, settings: Settings) -> tuple[float, Run]:
-    """Run one search on one thread; return its seconds and the run."""
-    begin = time.process_time()
-    run = explore.search(problem, threads=1, settings=settings)
-    return time.process_time() - begin, run
-
-
-def against_stock(problem: Problem, seeds: Sequence[int], **changes: int) -> dict[str, Any]:
-    """Time whole searches against the stock on the same evaluator, one after the other for each seed."""
-    box = explore.survey(problem)
-    tiny = explore.settings_of(problem, **{**changes, "population": 8, "generations": 3, "patience": 0, "brood": 1})
-    stock_search(problem, 1, 8, 3)
-    with contextlib.suppress(NothingFeasible):
-        explore.search(problem, threads=1, settings=tiny)
-    rows = []
-    for seed in seeds:
-        settings = explore.settings_of(problem, patience=0, seed=seed, **changes)
-        own, run = own_search(problem, settings)
-        stock, stock_evaluation, front = stock_search(problem, seed, settings.population, settings.generations)
-        info = run.info
-        share = info["evaluation_seconds"] / info["seconds"]
-        own_us, stock_us = (1e6 * s / (settings.population * settings.generations) for s in (own, stock))
-        rows.append(
-            {
-                "ratio": stock / own,
-                "hypervolume": info["hypervolume"] / (front.hypervolume(box.ideal, box.reference) or np.nan),
-                "share": share,
-                "seconds": own,
-                "stock_seconds": stock,
-                "evaluation_us": own_us * share,
-                "overhead_us": own_us * (1.0 - share),
-                "stock_evaluation_us": stock_us * stock_evaluation / stock,
-                "stock_overhead_us": stock_us * (1.0 - stock_evaluation / stock),
-            }
-        )
-    every = [round(row["ratio"], 3) for row in rows]
-    return {key: float(np.median([row[key] for row in rows])) for key in rows[0]} | {"ratios": every}
-
-
-def random_sizes(problem: Problem, count: int) -> dict[str, Array]:
-    """Return the sizings of random vectors of the space."""
-    return problem.space.decode(np.random.default_rng(1).random((problem.space.dimensions, count)))
 
 
 def scaling(problem: Problem, counts: Sequence[int] = COUNTS, repeats: int = 3) -> dict[str, Any]:
@@ -250,32 +88,59 @@ def _own_peak_megabytes() -> float:
     return peak / (1024.0**2 if sys.platform == "darwin" else 1024.0)
 
 
+def searched(path: Path, seeds: Sequence[int]) -> dict[str, Any]:
+    """Time searches of a problem against the stock."""
+    if path.stem in SHORTER:
+        return against_stock(load_problem(path), seeds[:2], generations=SHORTER[path.stem])
+    return against_stock(load_problem(path), seeds)
+
+
 def measured(ngspice: str, seeds: Sequence[int]) -> dict[str, Any]:
     """Run every benchmark; return the figures by name, and what they are made of under ``detail``."""
-    kinds = {str(kind): against_simulator(ngspice, kind) for kind in KINDS}
-    searches = {path.stem: against_stock(load_problem(path), seeds) for path in PROBLEMS}
+    four, every = evaluation.of_four_analyses, evaluation.every_measure
+    kinds = {str(kind): evaluation.against_simulator(ngspice, kind, Script, four) for kind in FOUR_KINDS}
+    catalogue = {str(kind): evaluation.against_simulator(ngspice, kind, CatalogueScript, every) for kind in KINDS}
+    spreads = {path.stem: sampling.against_evaluation(load_problem(path)) for path in PROBLEMS}
+    searches = {path.stem: searched(path, seeds) for path in PROBLEMS}
     grown = scaling(load_problem(PROBLEM))
     main = searches[PROBLEM.stem]
     return {
         "evaluation_vs_simulator": next(iter(kinds.values()))["ratio"],  # the circuit of `PROBLEM`
+        "catalogue_vs_simulator": next(iter(catalogue.values()))["ratio"],
+        "spread_vs_evaluation": max(row["ratio"] for row in spreads.values()),
         "search_vs_stock": main["ratio"],
         "hypervolume_vs_stock": main["hypervolume"],
         "evaluation_share": main["share"],
         "scaling_exponent": grown["exponent"],
         "peak_mb": peak_megabytes(PROBLEM),
         "designs_per_second": grown["rates"][1],
-        "detail": {"kinds": kinds, "problems": searches, "scaling": grown},
+        "detail": {
+            "kinds": kinds,
+            "catalogue": catalogue,
+            "measures_us": {str(kind): evaluation.measures_us(kind) for kind in KINDS},
+            "spreads": spreads,
+            "problems": searches,
+            "scaling": grown,
+        },
     }
 
 
 def _table(figures: dict[str, Any]) -> str:
     detail = figures["detail"]
     lines = [f"{name:26}{value:12.4g}" for name, value in figures.items() if name != "detail"]
-    for group in ("kinds", "problems"):
+    for group in ("kinds", "catalogue", "spreads", "problems"):
         for name, row in detail[group].items():
-            shown = ", ".join(f"{k} {v:.4g}" if isinstance(v, float) else f"{k} {v}" for k, v in row.items())
-            lines.append(f"{name}: {shown}")
+            plain = {k: v for k, v in row.items() if not isinstance(v, dict)}
+            shown = ", ".join(f"{k} {v:.4g}" if isinstance(v, float) else f"{k} {v}" for k, v in plain.items())
+            lines.append(f"{group} {name}: {shown}")
+            for measure, kept in row.get("checked", {}).items():
+                lines.append(f"    {measure:26}" + "".join(f"{k} {v:<10.3g}" for k, v in kept.items()))
     lines.append(f"scaling: {detail['scaling']['seconds']}")
+    kinds = detail["measures_us"]
+    lines.append(f"microseconds a design, alone and in turn: {', '.join(kinds)}")
+    for measure in next(iter(kinds.values())):
+        cells = [f"{table[measure]['alone']:8.2f}{table[measure]['in_turn']:8.2f}" for table in kinds.values()]
+        lines.append(f"    {measure:26}" + "  ".join(cells))
     return "\n".join(lines)
 
 

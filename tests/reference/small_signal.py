@@ -1,9 +1,4 @@
-"""A population of level-1 stages under every small-signal drive, with noise, in one process of the circuit simulator.
-
-What was found by trying, besides what `spice` tells: an AC analysis of hundreds of points takes hardly longer than one
-of a single point, as its operating point takes the time; but an analysis with figures of transistors saved at every
-point does not. ``ac lin 2`` makes one point, ``ac lin 3`` three.
-"""
+"""A population of level-1 stages under every small-signal drive, and their noise, in one process of the simulator."""
 
 from __future__ import annotations
 

@@ -6,10 +6,12 @@ the simulator solves them all. Names: node ``tail`` of stage 3 is ``tail_3``, tr
 
 What was found by trying (version 39), and what follows for a bench:
 
-- One ``ac lin 1 1 1`` is as good as DC and serves every stage at once. ``alter @v_supply_3[acmag]=1`` also works on a
-  source without an AC value. An output resistance is the voltage under an AC current into the output, not ``tf``: that
-  takes one command a stage and crashes on a large deck. An input capacitance is the imaginary part of the current of
-  the input's source over 2 pi f and its voltage, at 1 Hz as at 1 mHz.
+- One ``ac lin 1 1e-9 1e-9`` is as good as DC and serves every stage at once; 1 mHz is not, since telescopic stages have
+  poles near 1 Hz. ``ac lin 2`` makes one point, ``ac lin 3`` three. Hundreds of points take hardly longer than one, as
+  the operating point takes the time, unless figures of transistors are saved at each. ``alter @v_supply_3[acmag]=1``
+  also works on a source without an AC value. An output resistance is the voltage under an AC current into the output,
+  not ``tf``: that takes one command a stage and crashes on a large deck. An input capacitance is the imaginary part of
+  the current of the input's source over 2 pi f and its voltage, at 1 nHz as well.
 - An ideal control as a source with a gain of 1e4 and more mostly does not converge, and a loop of voltage sources
   (no gain at all) is singular as long as no transistor conducts. A current into a node that nothing loads is exact and
   converges, see `control` and `nulled_input`.
@@ -161,11 +163,19 @@ def transistors(circuit: Circuit, k: int, *, own_ground: bool = False) -> list[T
     ]
 
 
-def stage(circuit: Circuit, k: int, device: Device, *, own_ground: bool = False, controlled: bool = True) -> list[str]:
+def stage(
+    circuit: Circuit,
+    k: int,
+    device: Device,
+    *,
+    own_ground: bool = False,
+    controlled: bool = True,
+    deviations: Array | None = None,
+) -> list[str]:
     """Return the elements of stage `k`, its supply and its load, without its inputs.
 
     With `own_ground` the ground of the stage is the node ``gnd_k``, held by the source ``v_ground_k``. What is not
-    `controlled` has its controls left out, for `held_outputs`.
+    `controlled` has its controls left out, for `held_outputs`. The relative `deviations` of all resistors are (R,).
     """
     top, process, sizes = circuit.topology, circuit.process, circuit.sizes
 
@@ -177,10 +187,11 @@ def stage(circuit: Circuit, k: int, device: Device, *, own_ground: bool = False,
         lines.append(f"v_ground_{k} {at('ground')} 0 0")
     for t in transistors(circuit, k, own_ground=own_ground):
         lines += device(t, process)
-    for r in top.resistors:
+    off = np.zeros(len(top.resistors)) if deviations is None else deviations
+    for row, r in enumerate(top.resistors):
         value = sizes[r.size][k]
         ends = at(r.a), at(r.b)
-        lines.append(f"r_{part(r.name, k)} {ends[0]} {ends[1]} {number(value)}")
+        lines.append(f"r_{part(r.name, k)} {ends[0]} {ends[1]} {number(value * (1.0 + off[row]))}")
         squares = value / process.resistor.sheet_resistance
         half = 0.5 * process.resistor.capacitance * squares * process.resistor.width**2
         lines += [f"c_{part(r.name, k)}_{i} {end} {at('ground')} {number(half)}" for i, end in enumerate(ends)]
@@ -230,21 +241,21 @@ def output_terminals(circuit: Circuit, k: int) -> tuple[str, str]:
     return nodes[1.0], nodes.get(-1.0, "0")
 
 
-def nulled_input(circuit: Circuit, k: int, wanted: str = "0") -> list[str]:
+def nulled_input(circuit: Circuit, k: int, wanted: str = "0", *, common: bool = False) -> list[str]:
     """Return inputs of stage `k` that a loop sets, at DC only, so that its output is at the node `wanted`.
 
     The input that it takes is ``v(null_k)``, the offset. A current in proportion to the error flows into a capacitor:
-    at DC the error is zero, and from far below 1 mHz on the loop is open and ``v_d_k`` drives the stage. The output has
-    to rise with the input.
+    at DC the error is zero, and from far below 1 mHz on the loop is open and ``v_d_k`` drives the stage, or ``v_cm_k``
+    in `common`. The output has to rise with the input.
     """
     plus, minus = output_terminals(circuit, k)
     return [
-        f"v_cm_{k} cm_{k} 0 {number(circuit.conditions.middle)}",
+        f"v_cm_{k} cm_{k} 0 {number(circuit.conditions.middle)} ac {int(common)}",
         f"g_plus_{k} 0 null_{k} {wanted} {plus} {number(LOOP)}",
         f"g_minus_{k} 0 null_{k} {minus} 0 {number(LOOP)}",
         f"c_null_{k} null_{k} 0 1e12",
         f".nodeset v(null_{k})=0",
-        f"v_d_{k} d_{k} null_{k} 0 ac 1",
+        f"v_d_{k} d_{k} null_{k} 0 ac {int(not common)}",
         f"e_inp_{k} inp_{k} cm_{k} d_{k} 0 0.5",
         f"e_inn_{k} inn_{k} cm_{k} d_{k} 0 -0.5",
     ]
@@ -290,10 +301,11 @@ def output_noise(circuit: Circuit, plot: Plot, gm: Array) -> tuple[Array, Array]
 
 
 def nodesets(circuit: Circuit, k: int, voltages: Array, digits: int = 1) -> list[str]:
-    """Return where the simulator shall begin: voltages of the unknown nodes, by default to a tenth of a volt.
+    """Return where the simulator shall begin: voltages of the unknown nodes to a tenth of a volt, or finer.
 
-    Among forty telescopic stages under control there is now and then one that does not converge from there, and among
-    behavioural ones with any cascode always: these need three digits.
+    With three digits it goes on to its own operating point at once. With one it has to step its gmin down, which takes
+    ten times as long, and of forty telescopic stages one now and then does not converge, nor does any behavioural one
+    with a cascode.
     """
     top = circuit.topology
     free = {c.node: f"control_{part(c.name, k)}" for c in top.controls}  # what a control holds follows this one

@@ -25,11 +25,13 @@ from tests.reference.sweeps import DIGITS, Ways, first_end, pair, to_end
 SIZINGS = 40
 KINDS = EVERY_KIND + SOURCE_TIED + DEGENERATED
 DEPARTURE, STEERED = 0.01, 0.01  # the catalogue's defaults
-RANGE, STEERING = 1e-2, 5e-3  # relative; V
+RANGE, STEERING, LEAST_STEERING = 1e-2, 2e-3, 3e-4  # relative; relative; V
 PART = 0.4  # of the smaller excursion of the output, that a sine asks for at most
-HARMONICS, DISTORTION = 16, 0.5  # intervals of half a period; dB
+HARMONICS, DISTORTION = 16, 10.0 ** (0.5 / 20.0) - 1.0  # intervals of half a period; half a decibel
 SHIFT, OFFSET, LEAST_OFFSET = 0.6, 1e-3, 1e-6  # of the excursion at which the output is wanted; relative; V
-FINER = "option reltol=1e-10 vntol=1e-12"
+# What the simulator is told, and what it resolves of a third harmonic then. Stacked cascodes do not converge any finer.
+FINER, RESOLVED = "option reltol=1e-9 vntol=1e-11", 3e-9
+FINER_DELICATE, RESOLVED_DELICATE = "option reltol=1e-8 vntol=1e-11", 3e-8
 SIGNS = {"down": -1.0, "up": 1.0}
 
 
@@ -77,7 +79,14 @@ def test_steering_voltage(held: Bench) -> None:
         plot = f"steering_voltage_{side}"
         current = pair(held, plot)
         ends.append(first_end(current / current.sum(axis=0) - STEERED, np.abs(held.voltage(plot, "d"))))
-    assert_same(CATALOGUE["steering_voltage"].of(held.a), np.minimum(*ends), absolute=STEERING)
+    own = CATALOGUE["steering_voltage"].of(held.a)
+    found = np.isfinite(own)
+    assert_same(own[found], np.minimum(*ends)[found], STEERING, LEAST_STEERING)
+
+
+def test_every_end_is_found(held: Bench) -> None:
+    assert np.isfinite(CATALOGUE["linear_range"].of(held.a)).all()
+    assert np.isfinite(CATALOGUE["steering_voltage"].of(held.a)).all()
 
 
 def sines(a: Analysis) -> Array:
@@ -103,11 +112,12 @@ def test_distortion(kind: Kind, ngspice: str, tmp_path: Path) -> None:
     amplitude, ways = sines(a), Ways(a)
     to_peak, along = np.linspace(-0.5 * np.pi, 0.0, 7)[:-1], np.linspace(0.0, np.pi, HARMONICS + 1)
     ways.add("sine", differential=amplitude[:, None] * np.cos(np.concatenate([to_peak, along])))
-    ways.analyses["sine"] = [FINER, *ways.analyses["sine"]]
+    finer, resolved = (FINER_DELICATE, RESOLVED_DELICATE) if a.topology.delicate else (FINER, RESOLVED)
+    ways.analyses["sine"] = [finer, *ways.analyses["sine"]]
     bench = ways.run(ngspice, tmp_path, ())
     series = dct(bench.output("sine")[:, len(to_peak) :], type=1, axis=1)
-    reference = 20.0 * np.log10(np.abs(series[:, 3] / series[:, 1]))
-    assert_same(distortions(a, amplitude), reference, absolute=DISTORTION)
+    found = 10.0 ** (distortions(a, amplitude) / 20.0)
+    assert_same(found, np.abs(series[:, 3] / series[:, 1]), DISTORTION, resolved)
 
 
 def wanting(a: Analysis) -> Analysis:

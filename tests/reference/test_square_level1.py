@@ -24,9 +24,9 @@ from tests.reference.small_signal import FIGURES, HIGH, NOISE, SmallSignal, ordi
 SIZINGS = 44
 TRIODE_SIZINGS = 10
 SAME = 1e-3
-SAME_OF_FREQUENCY = 1e-2  # and of resistances and capacitances
-SAME_PHASE = 1.0  # deg
-SAME_NOISE = 2e-2
+SAME_CROSSING = 2e-3
+SAME_PHASE = 0.2  # deg
+SAME_TOTAL = 5e-3  # of an integral over a band
 ROUNDED = 1e-14  # of the differential gain: what two sums of terms that cancel may differ by (280 dB)
 NOTHING = 1e-10  # the same, of what the simulator's gmin of 1e-16 S leaves of a zero beside an ideal tail (200 dB)
 KINDS = EVERY_KIND + SOURCE_TIED + DEGENERATED
@@ -83,25 +83,25 @@ def test_common_mode_gain(bench: SmallSignal) -> None:
     ("name", "drive"), [("cmrr", "common"), ("supply_rejection", "supply"), ("ground_rejection", "ground")]
 )
 def test_rejection(bench: SmallSignal, name: str, drive: str) -> None:
-    """At DC within 0.1 % and at 1 MHz within 0.1 dB; of a differential output to the mean of its sides.
+    """At DC and at 1 MHz, within 0.1 % or 0.01 dB; of a differential output to the mean of its sides.
 
     A control holds that mean at every frequency, and an ideal tail lets neither the common mode nor its rail through
     at DC. There rejection is unlimited, and the simulator reads next to nothing.
     """
     tail_rail = "ground" if bench.topology.input == "nmos" else "supply"
     reference = np.abs(bench.at(drive, mean=True) / bench.at("rest"))
-    for point, (frequency, bound) in enumerate([(0.0, SAME), (HIGH, 10.0**0.005 - 1.0)]):
+    for point, frequency in enumerate([0.0, HIGH]):
         rejection = measure(bench, name, frequency)
         unlimited = np.isposinf(rejection)
         ideal = bench.topology.tail == "ideal" and drive in ("common", tail_rail) and frequency == 0.0
         assert (unlimited == (ideal or bool(bench.topology.controls))).all()
         assert (reference[point][unlimited] < NOTHING).all()
-        assert_same(10.0 ** (-rejection / 20.0), np.where(unlimited, 0.0, reference[point]), bound, ROUNDED)
+        assert_same(10.0 ** (-rejection / 20.0), np.where(unlimited, 0.0, reference[point]), SAME, ROUNDED)
 
 
 def test_bandwidth(bench: SmallSignal) -> None:
     reference, _ = bench.crossing(np.abs(bench.at("rest")[0]) / np.sqrt(2.0))
-    assert_same(measure(bench, "bandwidth"), reference, SAME_OF_FREQUENCY)
+    assert_same(measure(bench, "bandwidth"), reference, SAME_CROSSING)
 
 
 def test_unity_gain(bench: SmallSignal) -> None:
@@ -111,19 +111,19 @@ def test_unity_gain(bench: SmallSignal) -> None:
     assert amplifies.any()
     own = measure(bench, "unity_gain_frequency")
     assert (own[~amplifies] == 0.0).all()
-    assert_same(own[amplifies], reference[amplifies], SAME_OF_FREQUENCY)
+    assert_same(own[amplifies], reference[amplifies], SAME_CROSSING)
     assert np.isnan(measure(bench, "phase")[~amplifies]).all()
     assert_same(measure(bench, "phase")[amplifies], phase[amplifies], absolute=SAME_PHASE)
 
 
 def test_output_resistance(bench: SmallSignal) -> None:
-    assert_same(measure(bench, "output_resistance"), bench.at("into")[0].real, SAME_OF_FREQUENCY)
+    assert_same(measure(bench, "output_resistance"), bench.at("into")[0].real, SAME)
 
 
 def test_input_capacitance(bench: SmallSignal) -> None:
     for point, frequency in enumerate([0.0, HIGH]):
         own = measure(bench, "input_capacitance", frequency)
-        assert_same(own, bench.input_capacitance(point), SAME_OF_FREQUENCY)
+        assert_same(own, bench.input_capacitance(point), SAME)
 
 
 def test_input_noise(bench: SmallSignal) -> None:
@@ -133,15 +133,15 @@ def test_input_noise(bench: SmallSignal) -> None:
     assert (flicker[:, 0] / total[:, 0]).min() > 0.9
     assert np.median(white[:, -1] / total[:, -1]) > 0.8
     for point in (0, -1):
-        assert_same(measure(bench, "input_noise", points[point]), np.sqrt(total[:, point]), SAME_NOISE)
-    assert_same(measure(bench, "input_noise_total", NOISE[1:]), bench.input_noise_total(), SAME_NOISE)
+        assert_same(measure(bench, "input_noise", points[point]), np.sqrt(total[:, point]), SAME)
+    assert_same(measure(bench, "input_noise_total", NOISE[1:]), bench.input_noise_total(), SAME_TOTAL)
 
 
 @pytest.mark.parametrize("kind", KINDS, ids=str)
 def test_triode(kind: Kind, ngspice: str, tmp_path: Path) -> None:
-    """Voltages, currents and slopes where a transistor that ought to be saturated is not, with any sources below bulk.
+    """Voltages, currents and slopes where a transistor that ought to be saturated is not.
 
-    There `small_signal.ordinary` says what the simulator takes for gmb.
+    Sources below the bulk are among them, so gmb is not compared; see `small_signal.ordinary`.
     """
     a = sized(kind, "handbook", TRIODE_SIZINGS, saturated=False)
     bench = simulated(ngspice, tmp_path, a, spice.level1, at_rest(a), {"op": ["op"]}, FIGURES)

@@ -174,8 +174,8 @@ def test_rejection_of_a_pair_with_unlike_transconductances() -> None:
 
 @pytest.mark.parametrize("input", ["nmos", "pmos"])
 def test_rejection_of_unlike_pairs_over_a_transistor(input: str) -> None:
-    """The same with the tail's own gds for 1 / Rss and the samples' own gm: current factors of the pair apart by 1 % and
-    by 4 %, channels so long that their output conductance does not count (standard result)."""
+    """The same with the tail's own gds for 1 / Rss and the samples' own gm: current factors of the pair apart by 1 %
+    and by 4 %, channels so long that their output conductance takes 3 % of it (standard result)."""
     long = {"input_length": 40e-6, "input_width": 1500e-6, "tail_length": 1e-6, "tail_width": 12e-6}
     a = analysed((input, "resistor", "single", "differential"), without("handbook", body_effect=0.0), "source", **long)
     assert (a.room_at_rest > 0.0).all()
@@ -186,7 +186,7 @@ def test_rejection_of_unlike_pairs_over_a_transistor(input: str) -> None:
     rss = 1.0 / figure(unlike, "tail", "gds")
     expected = gm.mean(axis=0) / (gm[0] - gm[1]) * (1.0 + 2.0 * gm.mean(axis=0) * rss)
     found = CATALOGUE["cmrr_mismatch"].of(unlike)
-    np.testing.assert_allclose(found, 20.0 * np.log10(expected), atol=0.2)
+    np.testing.assert_allclose(found, 20.0 * np.log10(expected), atol=0.4)
     np.testing.assert_allclose(found[0] - found[1], 20.0 * np.log10(4.0), atol=0.02)
 
 

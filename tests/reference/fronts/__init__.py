@@ -2,10 +2,11 @@
 
     python -m tests.reference.fronts
 
-remakes them, and ``python -m tests.reference.fronts NAME`` makes that of another problem: for each the union of the archives of ten runs (seeds 101 to 110) of ten times the default budget,
-without stopping early. What is stored is the box between the best and the worst loss of that union (a tenth wider on
-the far side: the reference point at 1.1 of the range that is customary for DTLZ2), and the hypervolume of the union in
-it, with the hashes of the problem and process files.
+remakes them, and ``python -m tests.reference.fronts NAME`` makes that of another problem: for each the union of the
+archives of ten runs (seeds 101 to 110) of ten times the default budget, without stopping early. What is stored is the
+box between the best and the worst loss of that union (a tenth wider on the far side: the reference point at 1.1 of the
+range that is customary for DTLZ2), and the hypervolume of the union in it, with the hashes of the problem and process
+files.
 """
 
 from __future__ import annotations
