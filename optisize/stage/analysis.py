@@ -152,6 +152,8 @@ class Analysis:
         Of a single-ended output: its own change. Of a differential output: that of its common mode, the mean of the
         two sides. Exactly zero where the figure is no more than the rounding of the terms that it is summed from.
         """
+        if self.topology.mean_is_held:
+            return np.zeros(self.circuit.designs)
         return self.beyond_rounding(self.wiring.mean_weights @ self.responses[:, 1])
 
     @cached_property

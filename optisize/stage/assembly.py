@@ -69,6 +69,12 @@ class Topology:
         return tuple(node for node, _ in self.guesses)
 
     @property
+    def mean_is_held(self) -> bool:
+        """Whether a control holds the mean of the outputs, so that nothing moves it."""
+        outputs = {node for node, _ in self.output}
+        return any(set(control.senses) == outputs for control in self.controls)
+
+    @property
     def driven(self) -> tuple[str, ...]:
         """The nodes whose voltage is given: inputs and rails, and the reference of a common-mode control."""
         return (*DRIVEN, REFERENCE) if self.controls else DRIVEN

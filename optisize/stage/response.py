@@ -66,6 +66,8 @@ class Response:
 
     def mean_gain(self, drive: str) -> NDArray[Any]:
         """Return the gain to the output, or to the mean of the two sides of a differential one, (N,)."""
+        if self.a.topology.mean_is_held:
+            return np.zeros(self.a.circuit.designs)
         return -(self.adjoint[:, -1] * self._pull(drive)).sum(axis=0)
 
     @cached_property
