@@ -61,7 +61,8 @@ def solve(matrix: NDArray[Any], right: NDArray[Any], pattern: Pattern | None = N
     Args:
         matrix: (U, U, N), real or complex; not changed.
         right: (U, K, N); not changed.
-        pattern: which elements of the matrix may differ from zero; all where None.
+        pattern: which elements of the matrix may differ from zero; all where None, which a controlled node's zero
+            on the diagonal does not allow.
 
     Returns:
         The solutions, (U, K, N).

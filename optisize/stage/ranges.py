@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -10,8 +11,8 @@ from numpy.typing import NDArray
 from optisize.process.law import Array
 from optisize.stage.active import Active
 from optisize.stage.analysis import Analysis
-from optisize.stage.bias import settle
-from optisize.stage.excursion import Ending, follow
+from optisize.stage.bias import operating_point, settle
+from optisize.stage.excursion import STEERED, Ending, follow
 from optisize.stage.linear import solve
 from optisize.stage.network import Network
 from optisize.stage.wiring import Moving
@@ -20,13 +21,12 @@ from optisize.stage.wiring import held as held_part
 LEAST_CURRENT = 0.5  # of the pair's current in the middle of the range; less is taken as the end of the range
 SETTLED = 3e-3  # V; the step of an amplitude after which the next one would be some 0.1 mV
 BEYOND = 1.0  # V beyond the rails after which an end of the input range counts as none
-HARMONIC_POINTS = (
-    8  # of the static curve over half a period: harmonics 13 and 19 are the first to be taken for the third
-)
-DEPARTURE_STEPS = 24
-DEPARTURE_DONE = 1e-4  # of the amplitude, relative
-DEPARTURE_SETTLED = 1e-6  # V
+HARMONIC_POINTS = 8  # of the static curve over half a period: the 13th is the first harmonic taken for the third
+REACH_STEPS = 24
+REACHED = 2e-4  # of the amplitude, relative
+DRIVEN_SETTLED = 1e-6  # V
 STEEPEST, FLATTEST = 4.0, 0.5  # of the departure over the amplitude, on logarithmic axes: a square in the usual case
+FARTHEST = 6.0  # an excess beyond it says no more than its sign
 
 
 def input_range(a: Analysis) -> tuple[Array, Array]:
@@ -62,17 +62,28 @@ def _input_range(a: Analysis) -> tuple[Array, Array]:
     return ends[0], ends[1]
 
 
+@np.errstate(all="ignore")
 def steering_voltage(a: Analysis) -> Array:
     """Return the differential input [V] at which one input transistor is left with 1 % of the pair's current, (N,)."""
     part, chosen, sign = _held(a)
     start = a.point.v[part.nodes].take(chosen, axis=1).astype(a.coarse)
     network = a.circuit.network.part(part)
-    network = (network.single if a.coarse is np.float32 else network).take(chosen)
+    coarse = (network.single if a.coarse is np.float32 else network).take(chosen)
     drive = a.drives[part.nodes, 0].astype(a.coarse)
-    end = follow(network, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=SETTLED))
-    return _nearer(a, np.where(end.found, end.amplitude, np.nan).astype(np.float64))
+    end = follow(coarse, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=SETTLED))
+    amplitude = np.where(end.found, end.amplitude, np.nan).astype(np.float64)
+    missed = np.flatnonzero(~end.found)
+    if len(missed):  # a pair on large resistors steers so suddenly that its slope at rest says little
+
+        def excess(held: _Held, v: Array, here: Array) -> Array:
+            return np.log(STEERED / held.least_share(v, here))
+
+        every, guess = _at_rest(a, part, chosen, sign)
+        amplitude[missed] = _reached(every.take(missed), 2.0 * guess[missed], excess)
+    return _nearer(a, amplitude)
 
 
+@np.errstate(all="ignore")
 def linear_range(a: Analysis, departure: float) -> Array:
     """Return the differential input [V], either way, at which the current into held outputs departs from its tangent.
 
@@ -83,14 +94,22 @@ def linear_range(a: Analysis, departure: float) -> Array:
     Returns:
         (N,); not a number where it was not found.
     """
-    part, chosen, sign = _held(a)
+    held, steered = _at_rest(a, *_held(a))
+
+    def excess(held: _Held, v: Array, here: Array) -> Array:
+        return np.log(np.maximum(held.departure(v, here), 1e-12) / departure)
+
+    return _nearer(a, _reached(held, 0.3 * steered * np.sqrt(departure / 0.01), excess))
+
+
+def _at_rest(a: Analysis, part: Moving, chosen: NDArray[np.intp], sign: Array) -> tuple[_Held, Array]:
+    """Return designs with held outputs, and the input [V] at which the tangent at rest would steer them, (N,)."""
     weights = _output_weights(a, part)
     tangent = _tangent(a, part, weights)[chosen]
     steered = 0.5 * a.drain.id[a.wiring.pair].sum(axis=0)[chosen] / np.abs(tangent)
-    guess = 0.3 * steered * np.sqrt(departure / 0.01) * len(a.topology.output)
     network, start = a.circuit.network.part(part).take(chosen), a.point.v[part.nodes].take(chosen, axis=1)
     held = _Held(network, start, a.drives[part.nodes, 0], weights @ part.wiring.current_stamp, sign, tangent, sign)
-    return _nearer(a, _departing(replace(held, rest=held.current(start)), guess, departure))
+    return replace(held, rest=held.current(start)), steered * len(a.topology.output)
 
 
 @dataclass(frozen=True)
@@ -122,33 +141,52 @@ class _Held:
         terminals = self.network.terminals(v)
         return self.out @ self.network.branch_currents(terminals, self.network.law.drain(*terminals.of_law))
 
-    def departure(self, v: Array, amplitude: Array) -> tuple[Array, Array]:
-        """Return node voltages at an amplitude, from a guess, and the departure from the tangent there, (N,)."""
+    def driven(self, v: Array, amplitude: Array) -> tuple[Array, NDArray[np.bool_]]:
+        """Return node voltages at an amplitude, from a guess, and whether they were found, (N,) of bool."""
         driven = slice(self.network.wiring.unknowns, None)
         v[driven] = self.start[driven] + self.drive[driven, None] * (self.sign * amplitude)
-        v = settle(self.network, v, DEPARTURE_SETTLED).v
-        return v, np.abs((self.current(v) - self.rest) / (self.tangent * self.sign * amplitude) - 1.0)
+        end = settle(self.network, v, DRIVEN_SETTLED)
+        return end.v, end.converged
+
+    def departure(self, v: Array, amplitude: Array) -> Array:
+        """Return how far the current is from its tangent, relative, (N,)."""
+        return np.abs((self.current(v) - self.rest) / (self.tangent * self.sign * amplitude) - 1.0)
+
+    def least_share(self, v: Array, _amplitude: Array) -> Array:
+        """Return the smaller share of the input transistors in their current, (N,)."""
+        terminals = self.network.terminals(v)
+        current = self.network.law.drain(*terminals.of_law).id[self.network.wiring.pair]
+        return np.maximum(current.min(axis=0) / current.sum(axis=0), 0.0)
 
 
-def _departing(held: _Held, guess: Array, departure: float) -> Array:
-    """Return the amplitude at which the current departs that far from its tangent, (N,).
+Excess = Callable[[_Held, Array, Array], Array]
 
-    The secant method on logarithms, along which the departure is close to a straight line of slope two, held within
-    what is known to be too little and too much.
+
+def _reached(held: _Held, guess: Array, excess: Excess) -> Array:
+    """Return the amplitude at which an excess vanishes, (N,); not a number where it was not found.
+
+    The secant method on the logarithm of the amplitude, held within what is known to be too little and too much.
+
+    Args:
+        held: N designs.
+        guess: first amplitude [V].
+        excess: of a state, its node voltages and amplitude: below zero before the end, about 2 for each unit of the
+            logarithm of the amplitude.
     """
     result = np.full(len(guess), np.nan)
     active, v, here = Active(len(guess)), held.start.copy(), np.log(guess)
     last = far_last = np.full(len(guess), np.nan)
     low, high = np.full(len(guess), -np.inf), np.full(len(guess), np.inf)
-    for _ in range(DEPARTURE_STEPS):
-        v, gone = held.departure(v, np.exp(here))
-        far = np.log(np.maximum(gone, 1e-12) / departure)
+    for _ in range(REACH_STEPS):
+        v, found = held.driven(v, np.exp(here))
+        # Where no state is found the amplitude is taken as too large.
+        far = np.clip(np.where(found, excess(held, v, np.exp(here)), np.inf), -FARTHEST, FARTHEST)
         low, high = np.where(far < 0.0, here, low), np.where(far > 0.0, here, high)
         slope = (far - far_last) / (here - last)
         slope = np.where((slope > FLATTEST) & (slope < STEEPEST), slope, 2.0)
         following = here + np.clip(-far / slope, -1.5, 1.0)
         following = np.where((following > low) & (following < high), following, 0.5 * (low + high))
-        fresh = active.fresh(np.abs(following - here) < DEPARTURE_DONE)
+        fresh = active.fresh(np.abs(following - here) < REACHED)
         result[active.designs(fresh)] = np.exp(following[fresh])
         last, far_last, here = here, far, following
         left = active.thinned()
@@ -200,11 +238,26 @@ def _third_harmonic(a: Analysis, amplitude: float) -> Array:
         start = rest + amplitude * np.cos(angle) * toward
         start[: w.unknowns] = np.clip(start[: w.unknowns], 0.0, a.circuit.conditions.supply)
         end = settle(network, start)
-        output = w.output(end.v)
+        v, found = end.v, end.converged
+        if not found.all():  # the straight answer leads far beyond a clipped one
+            v, found = _solved_again(a, part, v, found, amplitude * float(np.cos(angle)))
+        output = w.output(v)
         first += output * np.cos(angle)
         third += output * np.cos(3.0 * angle)
-        solved &= end.converged
+        solved &= found
     return np.where(solved, np.abs(third / first), np.nan)
+
+
+def _solved_again(
+    a: Analysis, part: Moving, v: Array, found: NDArray[np.bool_], applied: float
+) -> tuple[Array, NDArray[np.bool_]]:
+    """Solve those that were not found from the topology's own first guess, at a differential input [V]."""
+    missed = np.flatnonzero(~found)
+    circuit, inputs = a.circuit.take(missed), a.point.v[[a.wiring.index["in+"], a.wiring.index["in-"]]][:, missed]
+    again = operating_point(circuit, circuit.driven(inputs[0] + 0.5 * applied, inputs[1] - 0.5 * applied))
+    v, found = v.copy(), found.copy()
+    v[:, missed], found[missed] = again.v[part.nodes], again.converged
+    return v, found
 
 
 def _held(a: Analysis) -> tuple[Moving, NDArray[np.intp], Array]:

@@ -88,10 +88,12 @@ def test_no_systematic_offset_between_two_outputs(kind: Kind) -> None:
 
 
 def test_what_cannot_be_had_is_flagged() -> None:
-    """An output beyond what full steering reaches: not found and not a number, without harm to the design beside it."""
+    """An output beyond what full steering reaches: not found, left where it started, and not a number, without harm to
+    the design beside it."""
     a = analysed(("nmos", "resistor", "ideal", "single-ended"), load_resistance=np.array([5e3, 20e3]))
     found = nulled(a, np.array([2.2, 2.2]))
     assert found.found.tolist() == [False, True]
+    np.testing.assert_array_equal(found.v[:, 0], a.point.v[:, 0])
     wishing = under(a, output_common_mode=2.2)
     offset = CATALOGUE["offset_systematic"].of(wishing)
     assert np.isnan(offset).tolist() == [True, False]

@@ -177,6 +177,15 @@ def test_ideal_tail_rejects_everything(process: str, kind: Kind, bulk: str) -> N
     assert (tail < moved + 1e-9).all()
 
 
+@pytest.mark.parametrize("kind", [("nmos", "mirror", "single"), ("pmos", "source", "ideal", "differential")], ids=named)
+def test_driven_nodes(kind: Kind) -> None:
+    """Inputs, supply, ground at zero, and the reference where a control has one."""
+    a = analysed(kind)
+    driven = dict(zip(a.topology.driven, a.circuit.driven(np.array([1.0]), np.array([0.8]))[:, 0], strict=True))
+    expected = {"in+": 1.0, "in-": 0.8, "supply": 3.3, "ground": 0.0}
+    assert driven == (expected | {"reference": 1.65} if kind[1] == "source" else expected)
+
+
 @pytest.mark.parametrize("kind", [k for k in [*KINDS, *IDEAL_STACKED] if k[1] == "source"], ids=named)
 def test_common_mode_control_holds_the_mean(kind: Kind) -> None:
     """Whatever the inputs do, as long as there is an operating point: the mean of the outputs is the reference, and no

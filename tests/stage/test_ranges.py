@@ -129,7 +129,6 @@ def test_steering_voltage_grows_with_degeneration(input: str) -> None:
     np.testing.assert_allclose(CATALOGUE["steering_voltage"].of(a), expected, rtol=2e-3)
 
 
-@pytest.mark.xfail(strict=True, reason="the end of a drive is not found for some strongly degenerated pairs")
 @pytest.mark.parametrize("kind", [KINDS[4], KINDS[14], KINDS[19], KINDS[20]], ids=named)
 def test_degenerated_pairs_are_steered_somewhere(kind: Kind) -> None:
     """Whatever the resistance, up to one that takes more than a volt: each design has its voltage, and it grows."""
@@ -209,7 +208,6 @@ def test_a_sine_that_clips_has_no_third_harmonic() -> None:
         np.testing.assert_allclose(found[0], ranges.third_harmonic(alone, amplitude)[0], rtol=1e-6)
 
 
-@pytest.mark.xfail(strict=True, reason="Newton does not settle from a straight start that the rails cut off")
 @pytest.mark.parametrize("amplitude", [0.2, 0.4])
 @pytest.mark.parametrize("process", ["handbook", "generic-180"])
 def test_a_fully_steered_pair_is_distorted_not_undefined(process: str, amplitude: float) -> None:

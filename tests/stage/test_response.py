@@ -240,7 +240,7 @@ def test_output_resistance_of_a_telescopic_stage(input: str, load: str, output: 
     for part in ("input", "load"):
         strong = figure(a, f"{part}.cascode.n", "gm") + figure(a, f"{part}.cascode.n", "gmb")
         conductance = conductance + figure(a, f"{part}.n", "gds") * figure(a, f"{part}.cascode.n", "gds") / strong
-    np.testing.assert_allclose(CATALOGUE["output_resistance"].of(a), len(a.topology.output) / conductance, rtol=0.2)
+    np.testing.assert_allclose(CATALOGUE["output_resistance"].of(a), len(a.topology.output) / conductance, rtol=0.02)
 
 
 def test_rejection_falls_with_the_capacitance_of_the_tail() -> None:
