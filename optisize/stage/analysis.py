@@ -87,8 +87,14 @@ class Analysis:
 
     @cached_property
     def converged(self) -> Any:
-        """Which designs have an operating point in the middle of the common-mode range, (N,) of bool."""
-        return self.point.converged
+        """Which designs have an operating point in the middle of the common-mode range that the law knows, (N,)."""
+        outside = self.outside
+        return self.point.converged if outside is None else self.point.converged & ~outside.any(axis=0)
+
+    @cached_property
+    def outside(self) -> NDArray[np.bool_] | None:
+        """Which transistors are where their law knows nothing of them, (T, N); None of a law that holds everywhere."""
+        return self.circuit.law.outside(*self.terminals.of_law)
 
     @cached_property
     def terminals(self) -> Terminals:
@@ -181,22 +187,14 @@ class Analysis:
     @cached_property
     def capacitance_branches(self) -> Array:
         """All capacitances [F] in the order of the wiring's stamp, (5T + R + 1, N)."""
-        gate, drawn, p = self.capacitances, self.circuit.drawn, self.circuit.parameters
-
-        def junction(area: Array, edge: Array, reverse: Array) -> Array:
-            """Depletion capacitance of an area and its edge; grading powers of one logarithm."""
-            built_in = p["junction_potential"]
-            bias = np.log1p(np.maximum(reverse / built_in, -0.4))
-            bottom = p["junction_capacitance"] * area * np.exp(-p["junction_grading"] * bias)
-            return bottom + p["sidewall_capacitance"] * edge * np.exp(-p["sidewall_grading"] * bias)
-
+        gate, drawn, p, law = self.capacitances, self.circuit.drawn, self.circuit.parameters, self.circuit.law
         return np.concatenate(
             [
                 gate.cgs,
                 gate.cgd,
                 gate.cgb,
-                junction(drawn.drain_area, drawn.drain_edge, self.terminals.drain),
-                junction(drawn.source_area, drawn.source_edge, self.terminals.source),
+                law.junctions(p, drawn.drain_area, drawn.drain_edge, self.terminals.drain),
+                law.junctions(p, drawn.source_area, drawn.source_edge, self.terminals.source),
                 self.circuit.resistor_capacitances,
                 np.full((1, self.circuit.designs), self.circuit.conditions.load_capacitance),
             ]

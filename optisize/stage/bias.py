@@ -106,7 +106,7 @@ def operating_point(circuit: Circuit, driven: Array) -> OperatingPoint:
 
 
 @np.errstate(all="ignore")
-def settle(network: Network, start: Array, settled: float = SETTLED) -> OperatingPoint:
+def settle(network: Network, start: Array, settled: float = SETTLED, iterations: int = ITERATIONS) -> OperatingPoint:
     """Solve the unknown node voltages of every design.
 
     Args:
@@ -114,6 +114,7 @@ def settle(network: Network, start: Array, settled: float = SETTLED) -> Operatin
         start: node voltages (A, N) to start from, with those of the driven nodes.
         settled: the step [V] after which a design is done; convergence is quadratic, so what is left is about its
             square over 50 mV.
+        iterations: at the most; fewer where the start is near.
 
     Returns:
         As `operating_point`.
@@ -122,7 +123,7 @@ def settle(network: Network, start: Array, settled: float = SETTLED) -> Operatin
     converged = np.zeros(network.designs, dtype=bool)
     active, part, moving = Active(network.designs), network, v.copy()
     pinned = np.zeros(network.designs, dtype=int)
-    for _ in range(ITERATIONS):
+    for _ in range(iterations):
         fresh = active.fresh(newton_step(part, moving) < settled)
         done = active.designs(fresh)
         v[:, done] = moving.take(fresh, axis=1)

@@ -19,6 +19,9 @@ from optisize.stage.network import Equations, Network, Terminals
 
 STEERED = 0.01  # the part of the pair's current below which an input transistor counts as off
 ITERATIONS = 25
+# The part of the way to full steering that the first step takes: the slope at rest leads a square-law pair to 1.71
+# overdrives, beyond 1.41 where one side is off and has no slope to come back by.
+CAUTION = 0.7
 STEP_LIMIT = 0.6  # V, of any node in one step
 SETTLED = 1e-2  # V; the step after which the next one would be some 0.1 mV (convergence is quadratic)
 
@@ -106,7 +109,7 @@ def follow(
     for iteration in range(ITERATIONS):
         here = rest if iteration == 0 and rest is not None else linearised(part, pv, drive)
         # The first step is straight from rest: however small it is, it does not know the curve.
-        fresh = active.fresh(_step(part, here, pv, pa, drive, ps, ends) & (iteration > 0))
+        fresh = active.fresh(_step(part, here, pv, pa, drive, ps, ends, iteration == 0) & (iteration > 0))
         done = active.designs(fresh)
         v[:, done], amplitude[done], found[done] = pv.take(fresh, axis=1), pa[fresh], True
         left = active.thinned()
@@ -125,7 +128,14 @@ def linearised(network: Network, v: Array, drive: Array) -> Linearised:
 
 
 def _step(
-    network: Network, here: Linearised, v: Array, amplitude: Array, drive: Array, sign: Array, ending: Ending
+    network: Network,
+    here: Linearised,
+    v: Array,
+    amplitude: Array,
+    drive: Array,
+    sign: Array,
+    ending: Ending,
+    first: bool,
 ) -> NDArray[np.bool_]:
     """Move node voltages and amplitude in place by one damped step; return which designs have settled, (N,)."""
     unknowns = network.wiring.unknowns
@@ -133,8 +143,8 @@ def _step(
     toward = np.zeros((v.shape[0], 2, v.shape[1]), dtype=v.dtype)
     toward[:unknowns] = regular_solve(network, here.equations.matrix, -right)
     toward[unknowns:, 1] = drive[unknowns:, None] * sign
-    margin, settle, rise = _margins(network, here, toward, ending)
-    step = np.maximum(_amplitude_step(margin + settle, rise), -amplitude)
+    margin, settle, rise = _margins(network, here, toward, ending, first)
+    step = np.maximum(_amplitude_step(margin + settle, rise, amplitude), -amplitude)
     change = toward[:, 0] + step * toward[:, 1]
     moved = np.abs(change[:unknowns]).max(axis=0)
     if not moved.max() < STEP_LIMIT:
@@ -146,11 +156,13 @@ def _step(
     return (np.maximum(moved, np.abs(toward[:unknowns, 0]).max(axis=0)) < SETTLED) & (np.abs(step) < ending.settled)
 
 
-def _margins(network: Network, here: Linearised, toward: Array, ending: Ending) -> tuple[Array, Array, Array]:
+def _margins(
+    network: Network, here: Linearised, toward: Array, ending: Ending, first: bool
+) -> tuple[Array, Array, Array]:
     """Return the margins (K, N), how they settle with the residual, and how they rise with the amplitude."""
     change = network.terminals(toward)
     parts = [_saturation_margins(network, here, change)] if ending.saturated else []
-    parts += _pair_margins(network, here, change, ending)
+    parts += _pair_margins(network, here, change, ending, CAUTION if first else 1.0)
     margin, both = (np.concatenate(rows) for rows in zip(*parts, strict=True))
     return margin, both[:, 0], both[:, 1]
 
@@ -163,7 +175,9 @@ def _saturation_margins(network: Network, here: Linearised, change: Terminals) -
     return room, moved.take(rows, axis=0)
 
 
-def _pair_margins(network: Network, here: Linearised, change: Terminals, ending: Ending) -> list[tuple[Array, Array]]:
+def _pair_margins(
+    network: Network, here: Linearised, change: Terminals, ending: Ending, caution: float
+) -> list[tuple[Array, Array]]:
     """Return what the pair's currents have left, as roots since these are straighter, and how that changes."""
     pair, drain = network.wiring.pair, here.drain
     current = drain.id[pair]
@@ -175,15 +189,20 @@ def _pair_margins(network: Network, here: Linearised, change: Terminals, ending:
     if ending.steered:
         share = np.maximum(current / total, 1e-9)
         root = np.sqrt(share)
-        margins.append((root - np.sqrt(STEERED), (flow - share[:, None] * whole) / (2.0 * total * root)[:, None]))
+        turn = (flow - share[:, None] * whole) / (2.0 * total * root)[:, None]
+        margins.append((caution * (root - np.sqrt(STEERED)), turn))
     if ending.current is not None:
         root = np.sqrt(np.maximum(total / ending.current, 1e-9))
         margins.append(((root - 1.0)[None], (whole / (2.0 * ending.current * root))[None]))
     return margins
 
 
-def _amplitude_step(margin: Array, rise: Array) -> Array:
-    """Return the step (N,) to where the first margin that falls with the drive is predicted to vanish."""
-    steps = np.where(rise < 0.0, margin / -rise, np.inf)
+def _amplitude_step(margin: Array, rise: Array, amplitude: Array) -> Array:
+    """Return the step (N,) to where the first margin that falls with the drive is predicted to vanish.
+
+    A margin that is gone and no longer falls, such as the current of a transistor that is off, was passed: half way
+    back.
+    """
+    steps = np.where(rise < 0.0, margin / -rise, np.where(margin < 0.0, -0.5 * amplitude, np.inf))
     nearest = steps.min(axis=0)
     return np.where(np.isfinite(nearest), nearest, 0.1)

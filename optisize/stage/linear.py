@@ -135,6 +135,7 @@ class Transfer:
 
 
 CROSSING_STEPS = 5
+SEARCHED_POINTS = (32, 24, 24, 24)  # of the grids of a search, each between two points of the one before
 CROSSING_DONE = 1e-4  # of the logarithmic frequency; the secant method leaves about its square
 
 
@@ -181,16 +182,17 @@ def crossing(transfer: Transfer, level: Array, start: Array) -> Array:
 
 
 def _searched_crossing(transfer: Transfer, target: Array, middle: Array) -> Array:
-    """Return the first crossing on a grid of frequencies around the estimate, refined twice; else NaN."""
-    points, designs = 96, np.arange(len(target))
-    every = transfer.take(np.tile(designs, points))
+    """Return the first crossing on a grid of frequencies around the estimate, refined thrice; else NaN."""
     low, span = middle - 7.0, np.full(len(target), 19.0)
-    exists = np.ones(len(target), dtype=bool)
-    for _ in range(3):
+    result = np.full(len(target), np.nan)
+    left: NDArray[np.intp] = np.arange(len(target))
+    for points in SEARCHED_POINTS:
         grid = low + span * np.linspace(0.0, 1.0, points)[:, None]
-        above = every.fall(grid.ravel()).reshape(grid.shape) > target
+        every = transfer.take(np.tile(left, points))
+        above = every.fall(grid.ravel()).reshape(grid.shape) > target[left]
         first = above.argmax(axis=0)
-        exists &= above.any(axis=0) & (first > 0)
-        span = span / (points - 1)
-        low = grid[np.maximum(first - 1, 0), designs]
-    return np.where(exists, np.exp(low + 0.5 * span), np.nan)
+        there = np.flatnonzero(above.any(axis=0) & (first > 0))
+        left, span = left[there], span[there] / (points - 1)
+        low = grid[first[there] - 1, there]
+    result[left] = np.exp(low + 0.5 * span)
+    return result

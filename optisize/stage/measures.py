@@ -186,15 +186,15 @@ def input_range_high(a: Analysis) -> Array:
 
 @_measure("V", "max", scale="log", source=_HANDBOOK, parameters=(_DEPARTURE,))
 def linear_range(a: Analysis, departure: float = 0.01) -> Array:
-    """Differential input voltage, either way, at which the current into the output departs from its tangent by 1 %, or
-    by another departure that is stated, while the output is held at rest (both drains where the sides are alike)."""
+    """Differential input voltage, either way, at which the difference of the input transistors' currents departs from
+    its tangent by 1 %, or by another departure that is stated, their drains held at rest."""
     return ranges.linear_range(a, departure)
 
 
 @_measure("V", "max", scale="log", source=_HANDBOOK)
 def steering_voltage(a: Analysis) -> Array:
-    """Differential input voltage that steers the pair: one input transistor is left with 1 % of its current, while the
-    output is held at rest (both drains where the sides are alike)."""
+    """Differential input voltage that steers the pair: one input transistor is left with 1 % of its current, the drains
+    of the pair held at rest."""
     return ranges.steering_voltage(a)
 
 

@@ -138,7 +138,7 @@ def varied(circuit: Circuit, deviations: Deviations) -> Circuit:
     p["current_factor"] = p["current_factor"] * (1.0 + deviations.factor)
     conductances = circuit.network.conductances.copy()
     conductances[: len(deviations.resistance)] /= 1.0 + deviations.resistance
-    law = circuit.process.law_of(p, circuit.width * circuit.units, circuit.length, circuit.conditions.temperature)
+    law = circuit.law_with(p)
     return replace(circuit, parameters=p, network=replace(circuit.network, law=law, conductances=conductances))
 
 

@@ -22,9 +22,11 @@ LEAST_CURRENT = 0.5  # of the pair's current in the middle of the range; less is
 SETTLED = 3e-3  # V; the step of an amplitude after which the next one would be some 0.1 mV
 BEYOND = 1.0  # V beyond the rails after which an end of the input range counts as none
 HARMONIC_POINTS = 8  # of the static curve over half a period: the 13th is the first harmonic taken for the third
-REACH_STEPS = 24
-REACHED = 2e-4  # of the amplitude, relative
-DRIVEN_SETTLED = 1e-6  # V
+REACH_STEPS = 16
+REACHED = 2e-3  # of the amplitude, relative; the secant method leaves about its square, at a kink a tenth
+DRIVEN_SETTLED = 1e-4  # V; what Newton leaves is about its square over 50 mV
+DRIVEN_ITERATIONS = 12  # from one amplitude to the next
+CURVE_SETTLED = 1e-5  # V
 STEEPEST, FLATTEST = 4.0, 0.5  # of the departure over the amplitude, on logarithmic axes: a square in the usual case
 FARTHEST = 6.0  # an excess beyond it says no more than its sign
 
@@ -64,28 +66,29 @@ def _input_range(a: Analysis) -> tuple[Array, Array]:
 
 @np.errstate(all="ignore")
 def steering_voltage(a: Analysis) -> Array:
-    """Return the differential input [V] at which one input transistor is left with 1 % of the pair's current, (N,)."""
+    """Return the differential input [V] that leaves one input transistor with 1 % of the pair's current, (N,).
+
+    The drains of the pair are held at rest.
+    """
     part, chosen, sign = _held(a)
-    start = a.point.v[part.nodes].take(chosen, axis=1).astype(a.coarse)
     network = a.circuit.network.part(part)
-    coarse = (network.single if a.coarse is np.float32 else network).take(chosen)
+    network = (network.single if a.coarse is np.float32 else network).take(chosen)
+    start = a.point.v[part.nodes].take(chosen, axis=1).astype(a.coarse)
     drive = a.drives[part.nodes, 0].astype(a.coarse)
-    end = follow(coarse, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=SETTLED))
+    end = follow(network, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=SETTLED))
     amplitude = np.where(end.found, end.amplitude, np.nan).astype(np.float64)
     missed = np.flatnonzero(~end.found)
     if len(missed):  # a pair on large resistors steers so suddenly that its slope at rest says little
-
-        def excess(held: _Held, v: Array, here: Array) -> Array:
-            return np.log(STEERED / held.least_share(v, here))
-
-        every, guess = _at_rest(a, part, chosen, sign)
-        amplitude[missed] = _reached(every.take(missed), 2.0 * guess[missed], excess)
+        every, steered = _at_rest(a, part, chosen, sign)
+        amplitude[missed] = _reached(every.take(missed), steered[missed], _Held.beyond_steering)
     return _nearer(a, amplitude)
 
 
 @np.errstate(all="ignore")
 def linear_range(a: Analysis, departure: float) -> Array:
-    """Return the differential input [V], either way, at which the current into held outputs departs from its tangent.
+    """Return the differential input [V], either way, at which the pair's difference departs from its tangent.
+
+    The difference is that of the currents of the input transistors, their drains held at rest.
 
     Args:
         a: N designs.
@@ -103,60 +106,61 @@ def linear_range(a: Analysis, departure: float) -> Array:
 
 
 def _at_rest(a: Analysis, part: Moving, chosen: NDArray[np.intp], sign: Array) -> tuple[_Held, Array]:
-    """Return designs with held outputs, and the input [V] at which the tangent at rest would steer them, (N,)."""
-    weights = _output_weights(a, part)
-    tangent = _tangent(a, part, weights)[chosen]
-    steered = 0.5 * a.drain.id[a.wiring.pair].sum(axis=0)[chosen] / np.abs(tangent)
+    """Return designs with held drains, and the input [V] at which the tangent at rest would steer them, (N,)."""
+    slope, moved = _tangent(a, part)
+    tangent = slope[chosen]
+    steered = a.drain.id[a.wiring.pair].sum(axis=0)[chosen] / np.abs(tangent)
     network, start = a.circuit.network.part(part).take(chosen), a.point.v[part.nodes].take(chosen, axis=1)
-    held = _Held(network, start, a.drives[part.nodes, 0], weights @ part.wiring.current_stamp, sign, tangent, sign)
-    return replace(held, rest=held.current(start)), steered * len(a.topology.output)
+    held = _Held(network, start, moved.take(chosen, axis=1), a.drives[part.nodes, 0], sign, tangent, sign)
+    return replace(held, rest=held.current(start)), steered
 
 
 @dataclass(frozen=True)
 class _Held:
-    """Designs with held outputs, driven from rest: what their current into the outputs departs from.
+    """Designs with held drains of the pair, driven from rest: what the difference of its currents departs from.
 
     Attributes:
-        network, start: the part with held outputs, and its node voltages at rest, (A, N).
-        drive, out: of the nodes, (A,), and of the branches into the output, (B,).
-        sign, tangent, rest: direction of the drive, slope [S] and current at rest [A], (N,).
+        network, start: the part with held drains, and its node voltages at rest, (A, N).
+        toward: how the nodes move with the drive at rest, (A, N).
+        drive: of the nodes, (A,).
+        sign, tangent, rest: direction of the drive, slope [S] and difference at rest [A], (N,).
     """
 
     network: Network
     start: Array
+    toward: Array
     drive: Array
-    out: Array
     sign: Array
     tangent: Array
     rest: Array
 
     def take(self, columns: NDArray[np.intp]) -> _Held:
         """Return some of the designs."""
-        start = self.start.take(columns, axis=1)
+        start, toward = self.start.take(columns, axis=1), self.toward.take(columns, axis=1)
         sign, tangent, rest = self.sign[columns], self.tangent[columns], self.rest[columns]
-        return _Held(self.network.take(columns), start, self.drive, self.out, sign, tangent, rest)
+        return _Held(self.network.take(columns), start, toward, self.drive, sign, tangent, rest)
 
     def current(self, v: Array) -> Array:
-        """Return the current into the output at node voltages, (N,)."""
-        terminals = self.network.terminals(v)
-        return self.out @ self.network.branch_currents(terminals, self.network.law.drain(*terminals.of_law))
+        """Return the difference of the pair's currents at node voltages, (N,)."""
+        positive, negative = self.network.law.drain(*self.network.terminals(v).of_law).id[self.network.wiring.pair]
+        return positive - negative
 
     def driven(self, v: Array, amplitude: Array) -> tuple[Array, NDArray[np.bool_]]:
         """Return node voltages at an amplitude, from a guess, and whether they were found, (N,) of bool."""
         driven = slice(self.network.wiring.unknowns, None)
         v[driven] = self.start[driven] + self.drive[driven, None] * (self.sign * amplitude)
-        end = settle(self.network, v, DRIVEN_SETTLED)
+        end = settle(self.network, v, DRIVEN_SETTLED, DRIVEN_ITERATIONS)
         return end.v, end.converged
 
     def departure(self, v: Array, amplitude: Array) -> Array:
         """Return how far the current is from its tangent, relative, (N,)."""
         return np.abs((self.current(v) - self.rest) / (self.tangent * self.sign * amplitude) - 1.0)
 
-    def least_share(self, v: Array, _amplitude: Array) -> Array:
-        """Return the smaller share of the input transistors in their current, (N,)."""
-        terminals = self.network.terminals(v)
-        current = self.network.law.drain(*terminals.of_law).id[self.network.wiring.pair]
-        return np.maximum(current.min(axis=0) / current.sum(axis=0), 0.0)
+    def beyond_steering(self, v: Array, _amplitude: Array) -> Array:
+        """Return by how much the pair is steered beyond 1 %, as roots, (N,)."""
+        current = self.network.law.drain(*self.network.terminals(v).of_law).id[self.network.wiring.pair]
+        share = np.maximum(current.min(axis=0) / current.sum(axis=0), 0.0)
+        return STEEPEST * (np.sqrt(STEERED) - np.sqrt(share))
 
 
 Excess = Callable[[_Held, Array, Array], Array]
@@ -174,7 +178,8 @@ def _reached(held: _Held, guess: Array, excess: Excess) -> Array:
             logarithm of the amplitude.
     """
     result = np.full(len(guess), np.nan)
-    active, v, here = Active(len(guess)), held.start.copy(), np.log(guess)
+    active, here, unknowns = Active(len(guess)), np.log(guess), held.network.wiring.unknowns
+    v = held.start + (held.sign * guess) * held.toward
     last = far_last = np.full(len(guess), np.nan)
     low, high = np.full(len(guess), -np.inf), np.full(len(guess), np.inf)
     for _ in range(REACH_STEPS):
@@ -188,6 +193,7 @@ def _reached(held: _Held, guess: Array, excess: Excess) -> Array:
         following = np.where((following > low) & (following < high), following, 0.5 * (low + high))
         fresh = active.fresh(np.abs(following - here) < REACHED)
         result[active.designs(fresh)] = np.exp(following[fresh])
+        v[:unknowns] = held.start[:unknowns] + (v[:unknowns] - held.start[:unknowns]) * np.exp(following - here)
         last, far_last, here = here, far, following
         left = active.thinned()
         if left is not None:
@@ -196,14 +202,6 @@ def _reached(held: _Held, guess: Array, excess: Excess) -> Array:
             held, v = held.take(left), v.take(left, axis=1)
             here, last, far_last, low, high = here[left], last[left], far_last[left], low[left], high[left]
     return result
-
-
-def _output_weights(a: Analysis, part: Moving) -> Array:
-    """Return the output as a combination of all nodes of a part, (A,)."""
-    weights = np.zeros(len(part.wiring.nodes))
-    for node, weight in a.topology.output:
-        weights[part.wiring.index[node]] = weight
-    return weights
 
 
 def third_harmonic(a: Analysis, amplitude: float) -> Array:
@@ -225,27 +223,40 @@ def third_harmonic(a: Analysis, amplitude: float) -> Array:
 
 
 def _third_harmonic(a: Analysis, amplitude: float) -> Array:
+    """Return third over first harmonic; where both sides are alike, one half of the curve tells the other."""
     part = a.moving[0]
-    network = a.circuit.network.part(part)
-    angles = (np.arange(HARMONIC_POINTS) + 0.5) * np.pi / HARMONIC_POINTS
+    network, w = a.circuit.network.part(part), part.wiring
+    points = np.cos((np.arange(HARMONIC_POINTS) + 0.5) * np.pi / HARMONIC_POINTS)
+    half = points[points > 0.0][::-1]
     first, third = np.zeros(a.circuit.designs), np.zeros(a.circuit.designs)
     solved = np.ones(a.circuit.designs, dtype=bool)
-    rest, w = a.point.v[part.nodes], part.wiring
-    drive, toward = a.drives[part.nodes, 0], np.zeros((len(w.nodes), a.circuit.designs))
+    toward = np.zeros((len(w.nodes), a.circuit.designs)) + a.drives[part.nodes, 0, None]
     toward[: w.unknowns] = a.responses[part.nodes[: w.unknowns], 0]
-    toward[w.unknowns :] = drive[w.unknowns :, None]
-    for angle in angles:
-        start = rest + amplitude * np.cos(angle) * toward
-        start[: w.unknowns] = np.clip(start[: w.unknowns], 0.0, a.circuit.conditions.supply)
-        end = settle(network, start)
-        v, found = end.v, end.converged
-        if not found.all():  # the straight answer leads far beyond a clipped one
-            v, found = _solved_again(a, part, v, found, amplitude * float(np.cos(angle)))
-        output = w.output(v)
-        first += output * np.cos(angle)
-        third += output * np.cos(3.0 * angle)
-        solved &= found
+    for side in (1.0,) if a.alike else (1.0, -1.0):
+        rest, reached, last = a.point.v[part.nodes], toward, 1.0
+        for cosine in half:  # outwards: each point begins on the chord of the one before
+            applied = side * amplitude * cosine
+            v, found = _on_curve(a, part, network, rest + (applied / last) * reached, applied)
+            reached, last = v - rest, applied
+            output = w.output(v)
+            if a.alike:
+                output = output - w.output(v, mirrored=True)
+            first += side * output * cosine
+            third += side * output * (4.0 * cosine**3 - 3.0 * cosine)
+            solved &= found
     return np.where(solved, np.abs(third / first), np.nan)
+
+
+def _on_curve(
+    a: Analysis, part: Moving, network: Network, start: Array, applied: float
+) -> tuple[Array, NDArray[np.bool_]]:
+    """Return node voltages of a part at a differential input [V], from a guess, and which of them were found."""
+    unknowns = part.wiring.unknowns
+    start[:unknowns] = np.clip(start[:unknowns], 0.0, a.circuit.conditions.supply)
+    end = settle(network, start, CURVE_SETTLED)
+    if end.converged.all():
+        return end.v, end.converged
+    return _solved_again(a, part, end.v, end.converged, applied)  # a straight guess leads far beyond a clipped answer
 
 
 def _solved_again(
@@ -261,27 +272,28 @@ def _solved_again(
 
 
 def _held(a: Analysis) -> tuple[Moving, NDArray[np.intp], Array]:
-    """Return the part with held outputs, and which designs are driven which way: both ways where the sides differ."""
+    """Return the part with held drains, and which designs are driven which way: both ways where mismatch is in them."""
     every = np.arange(a.circuit.designs)
-    if a.alike:
+    if a.matched:
         return held_part(a.topology), every, np.ones(len(every))
     return held_part(a.topology), np.concatenate([every, every]), np.repeat([-1.0, 1.0], len(every))
 
 
 def _nearer(a: Analysis, amplitude: Array) -> Array:
     """Return the smaller of the amplitudes of both directions, (N,)."""
-    return amplitude if a.alike else amplitude.reshape(2, -1).min(axis=0)
+    return amplitude if a.matched else np.fmin(*amplitude.reshape(2, -1))
 
 
-def _tangent(a: Analysis, part: Moving, weights: Array) -> Array:
-    """Return the change of the current into the held outputs over the differential input at rest [S], (N,)."""
-    w = part.wiring
-    t = len(a.wiring.transistors)
-    rows = np.concatenate([k * t + part.transistors for k in range(3)] + [3 * t + part.linear])
-    slopes = a.slopes[rows]
-    matrix = (w.all_conductances.reshape(-1, len(rows)) @ slopes).reshape(len(w.nodes), len(w.nodes), -1)
-    u, drive = w.unknowns, a.drives[part.nodes, 0]
-    pull = np.einsum("uan,a->un", matrix[:u], drive)
-    moved = np.zeros((len(w.nodes), a.circuit.designs)) + drive[:, None]
-    moved[:u] = solve(matrix[:u, :u], -pull[:, None], w.conductance_pattern)[:, 0]
-    return np.einsum("a,abn,bn->n", weights, matrix, moved)
+def _tangent(a: Analysis, part: Moving) -> tuple[Array, Array]:
+    """Return how the difference of the pair's currents [S], (N,), and the nodes, (A, N), move with the input."""
+    w, t, u = part.wiring, len(a.wiring.transistors), part.wiring.unknowns
+    slopes = a.slopes[np.concatenate([k * t + part.transistors for k in range(3)] + [3 * t + part.linear])]
+    matrix = (w.conductance_stamp.reshape(-1, len(slopes)) @ slopes).reshape(u, len(w.nodes), -1)
+    moved = np.zeros((len(w.nodes), a.circuit.designs)) + a.drives[part.nodes, 0, None]
+    pull = np.einsum("uan,a->un", matrix, a.drives[part.nodes, 0])
+    moved[:u] = solve(matrix[:, :u], -pull[:, None], w.conductance_pattern)[:, 0]
+    change = a.circuit.network.part(part).terminals(moved)
+    gate, drain, source = (x[w.pair] for x in change.of_law)
+    pair = a.wiring.pair
+    flow = a.drain.gm[pair] * gate + a.drain.gds[pair] * drain - a.drain.gms[pair] * source
+    return flow[0] - flow[1], moved

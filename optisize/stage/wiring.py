@@ -20,28 +20,26 @@ from optisize.stage.assembly import Topology
 from optisize.stage.linear import Pattern
 
 Indices = NDArray[np.intp]
+PAIR_GROUP = "input"  # the group of the input transistors
 
 
 class Wiring:
     """The constant arrays of a topology: indices of terminals and incidence of branches on the unknown nodes."""
 
-    def __init__(
-        self, topology: Topology, frozen: frozenset[str] = frozenset(), watched: frozenset[str] = frozenset()
-    ) -> None:
+    def __init__(self, topology: Topology, frozen: frozenset[str] = frozenset()) -> None:
         """Number the nodes and lay out the incidence arrays.
 
         Args:
             topology: the stage.
             frozen: unknown nodes that are held where they are, with the elements that stand at no other unknown node
                 left out: what a drive cannot move need not be solved again.
-            watched: frozen nodes whose currents are asked for, so that their elements stay.
         """
         self.topology = topology
         solved = tuple(node for node in topology.unknown if node not in frozen)
         self.nodes = (*solved, *topology.driven, *(node for node in topology.unknown if node in frozen))
         self.index = {name: i for i, name in enumerate(self.nodes)}
         self.unknowns = len(solved)
-        alive = {*solved, *watched}
+        alive = set(solved)
         self.transistors = tuple(x for x in topology.transistors if {x.drain, x.source} & alive)
         self.resistors = tuple(x for x in topology.resistors if {x.a, x.b} & alive)
         self.sources = tuple(x for x in topology.sources if {x.a, x.b} & alive)
@@ -267,12 +265,16 @@ def moving(topology: Topology) -> Moving:
 
 @lru_cache(maxsize=256)
 def held(topology: Topology) -> Moving:
-    """Return the part that the inputs can move while the outputs, and what controls them, are held where they are.
-
-    Both sides of a stage whose sides are alike are held, whichever of them is the output.
-    """
-    outputs = frozenset(("left", "right") if topology.symmetric else (node for node, _ in topology.output))
-    return _part(topology, _still(topology) | outputs | {c.node for c in topology.controls}, outputs)
+    """Return the part that the inputs can move, and that steers the pair, while the drains of the pair are held."""
+    whole = wiring(topology)
+    depends = np.any(whole.conductance_stamp != 0.0, axis=2)
+    drains = {t.drain for t in topology.transistors if t.group == PAIR_GROUP}
+    free = [node for node in topology.unknown if node not in drains | _still(topology)]
+    steering = {t.source for t in topology.transistors if t.group == PAIR_GROUP}
+    for _ in free:
+        rows = depends[[whole.index[node] for node in steering]].any(axis=0)
+        steering |= {node for node in free if rows[whole.index[node]]}
+    return _part(topology, frozenset(topology.unknown) - steering)
 
 
 def _still(topology: Topology) -> frozenset[str]:
@@ -285,9 +287,9 @@ def _still(topology: Topology) -> frozenset[str]:
     return frozenset(whole.nodes[i] for i in range(whole.unknowns) if not moved[i])
 
 
-def _part(topology: Topology, frozen: frozenset[str], watched: frozenset[str] = frozenset()) -> Moving:
+def _part(topology: Topology, frozen: frozenset[str]) -> Moving:
     """Return a part of a stage, and where its elements stand in the whole."""
-    whole, part = wiring(topology), Wiring(topology, frozen, watched)
+    whole, part = wiring(topology), Wiring(topology, frozen)
 
     def positions(all_of: tuple[Any, ...], some: tuple[Any, ...]) -> Indices:
         return np.array([all_of.index(x) for x in some], dtype=np.intp)
