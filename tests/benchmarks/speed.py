@@ -8,8 +8,8 @@ the simulator does, by up to a quarter.
                               the measures that four analyses give and every figure of every transistor, for the circuit
                               of `PROBLEM` with the square law; `detail.kinds` has it for `FOUR_KINDS`
     catalogue_vs_simulator    the same of every measure of the catalogue with its default parameters, and of rejections
-                              at 1 MHz, against the nine analyses that these need; `detail.catalogue` has it for all of
-                              `KINDS`, and `detail.measures_us` what each measure takes
+                              at 1 MHz, against the nine analyses that these need, the smallest of `KINDS`;
+                              `detail.catalogue` has all of them, and `detail.measures_us` what each measure takes
     spread_vs_evaluation      time of 100 000 samples of the mismatch of one design over that of evaluating 150 000
                               designs with the same measures, the largest of all problems; at most one is wanted
     search_vs_stock           time of pymoo's stock NSGA-II over that of a whole search with the same budget, on the
@@ -106,7 +106,7 @@ def measured(ngspice: str, seeds: Sequence[int]) -> dict[str, Any]:
     main = searches[PROBLEM.stem]
     return {
         "evaluation_vs_simulator": next(iter(kinds.values()))["ratio"],  # the circuit of `PROBLEM`
-        "catalogue_vs_simulator": next(iter(catalogue.values()))["ratio"],
+        "catalogue_vs_simulator": min(row["ratio"] for row in catalogue.values()),
         "spread_vs_evaluation": max(row["ratio"] for row in spreads.values()),
         "search_vs_stock": main["ratio"],
         "hypervolume_vs_stock": main["hypervolume"],
