@@ -24,6 +24,7 @@ from optisize.stage.mismatch import Deviations, Sampled, spreads, varied
 
 CONFIDENCE = 0.95
 BINS = 40
+ROUNDING = 1e-9  # relative; a measure that varies by no more does not vary
 STEP = 0.5  # standard deviations, either way, over which the first-order prediction is taken
 SHOWN = (0.00135, 0.5, 0.99865)  # the quantiles of three standard deviations of a normal distribution
 OWN = ("offset_systematic", "cmrr_mismatch")  # shown of every stage, since they are what mismatch makes
@@ -87,7 +88,7 @@ class Distribution:
         found = self.finite
         if len(found) < 2:
             return float("nan")
-        return float(found.std(ddof=1)) if np.ptp(found) > 0.0 else 0.0
+        return float(found.std(ddof=1)) if np.ptp(found) > ROUNDING * np.abs(found).max() else 0.0
 
     @property
     def quantiles(self) -> tuple[float, ...]:
@@ -97,7 +98,14 @@ class Distribution:
 
     def histogram(self, bins: int = BINS) -> tuple[Array, NDArray[np.intp]]:
         """Return edges (B + 1,) and counts (B,) of the finite samples."""
-        counts, edges = np.histogram(self.finite, bins=bins) if len(self.finite) else (np.zeros(0, int), np.zeros(1))
+        found = self.finite
+        if not len(found):
+            return np.zeros(1), np.zeros(0, dtype=np.intp)
+        low, high = float(found.min()), float(found.max())
+        least = ROUNDING * max(abs(low), abs(high), 1e-300)  # bins that can be told apart
+        if high - low < least:
+            low, high = low - 0.5 * least, high + 0.5 * least
+        counts, edges = np.histogram(found, bins=bins, range=(low, high))
         return edges, counts
 
 
@@ -133,7 +141,7 @@ class Spread:
         sizes: of the design.
         samples, seed: of the Monte Carlo.
         unsolved: samples without an operating point at which the output stands as it does without mismatch.
-        distributions: of each measure that varies or has a limit.
+        distributions: of goals and limits, and of each other measure that varies.
         yields: of each limit, then of all of them together.
     """
 
@@ -200,9 +208,8 @@ def spread(
 
 
 def _tells(found: Distribution, problem: Problem) -> bool:
-    """Tell whether a measure varies from sample to sample, or has a limit."""
-    limited = any(limit.measure.name == found.measure.name for limit in problem.limits)
-    return limited or found.sigma > 0.0
+    """Tell whether a measure varies from sample to sample, or is a goal or a limit."""
+    return found.measure.name in problem.needed or found.sigma > 0.0
 
 
 def _yields(limits: Sequence[Limit], names: list[str], values: Array, linear: Array) -> tuple[Yield, ...]:
