@@ -20,6 +20,7 @@ from optisize.stage.wiring import held as held_part
 
 LEAST_CURRENT = 0.5  # of the pair's current in the middle of the range; less is taken as the end of the range
 SETTLED = 3e-3  # V; the step of an amplitude after which the next one would be some 0.1 mV
+STEERED_SETTLED = 3e-4  # V; a pair in weak inversion steers within tens of millivolts
 BEYOND = 1.0  # V beyond the rails after which an end of the input range counts as none
 HARMONIC_POINTS = 8  # of the static curve over half a period: the 13th is the first harmonic taken for the third
 REACH_STEPS = 16
@@ -75,7 +76,7 @@ def steering_voltage(a: Analysis) -> Array:
     network = (network.single if a.coarse is np.float32 else network).take(chosen)
     start = a.point.v[part.nodes].take(chosen, axis=1).astype(a.coarse)
     drive = a.drives[part.nodes, 0].astype(a.coarse)
-    end = follow(network, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=SETTLED))
+    end = follow(network, start, None, drive, sign.astype(a.coarse), Ending(saturated=False, settled=STEERED_SETTLED))
     amplitude = np.where(end.found, end.amplitude, np.nan).astype(np.float64)
     missed = np.flatnonzero(~end.found)
     if len(missed):  # a pair on large resistors steers so suddenly that its slope at rest says little
