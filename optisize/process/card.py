@@ -16,7 +16,6 @@ from optisize.errors import InputError, listing, nearest, shorten
 from optisize.files import read_toml, validated
 from optisize.process.law import Array, Law
 from optisize.process.laws import LAWS, AnyParameters
-from optisize.process.library import Library
 from optisize.process.parameters import Parameters
 from optisize.quantities import In
 
@@ -103,9 +102,6 @@ class Process(Parameters):
     resistor: ResistorParameters
     grid: Grid
     corners: Annotated[dict[str, Corner], Field(description="named corners", default_factory=dict)]
-    library: Annotated[
-        Library | None, Field(description="the SPICE model library that tables are made from and decks name")
-    ] = None
 
     @cached_property
     def corner_names(self) -> tuple[str, ...]:

@@ -23,7 +23,7 @@ from typing import Annotated, Self
 import numpy as np
 from pydantic import Field
 
-from optisize.process.law import Array, Capacitances, Drain, Pick, Saturation, taken
+from optisize.process.law import Array, Capacitances, Drain, OfParameters, Pick, Saturation, taken
 from optisize.process.parameters import TransistorParameters
 from optisize.quantities import In
 
@@ -63,7 +63,7 @@ class _Channel:
 
 
 @dataclass(frozen=True)
-class ChargeLaw:
+class ChargeLaw(OfParameters):
     """The charge law of T transistors in N designs; every array is (T, N) or broadcasts to it."""
 
     strength: Array  # 2 beta ut^2

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
 Pick = slice | NDArray[np.intp]
+Voltages = tuple[Array, Array, Array]
 
 
 class Drain(NamedTuple):
@@ -86,6 +87,27 @@ class Law(Protocol):
     def noise_conductance(self, vg: Array, vd: Array, vs: Array) -> Array:
         """Return the conductance g [S] of the channel's white noise: its current has the density 4 k T g [A^2/Hz]."""
 
+    def flicker(
+        self, parameters: Mapping[str, Array], drain: Drain, v: Voltages, sizes: Voltages, frequency: float
+    ) -> Array:
+        """Return the flicker noise current at a frequency [A^2/Hz].
+
+        Args:
+            parameters: as for `bind`.
+            drain: currents and derivatives at the terminal voltages `v` of gate, drain and source [V].
+            sizes: width of a unit [m], units, length [m].
+            frequency: [Hz].
+        """
+
+    def junctions(self, parameters: Mapping[str, Array], area: Array, edge: Array, reverse: Array) -> Array:
+        """Return the capacitances [F] of drain or source junctions.
+
+        Args:
+            parameters: as for `bind`.
+            area, edge: drawn area [m^2] and perimeter without the edge under the gate [m].
+            reverse: voltage over the junction [V].
+        """
+
     def gate_voltage(self, current: Array, vs: Array) -> Array:
         """Estimate the gate voltage at which a saturated device carries `current` [A]; a start for Newton."""
 
@@ -102,3 +124,22 @@ def taken(array: Array, rows: Pick, columns: Pick) -> Array:
 def picked(array: Array, columns: Pick) -> Array:
     """Index the columns of an array that has one for every design, however few they are."""
     return array[:, columns] if isinstance(columns, slice) else array.take(columns, axis=1)
+
+
+class OfParameters:
+    """What every law with parameters of a process file says alike of junctions and flicker noise."""
+
+    def flicker(
+        self, parameters: Mapping[str, Array], drain: Drain, v: Voltages, sizes: Voltages, frequency: float
+    ) -> Array:
+        """Return the flicker noise current [A^2/Hz]: Kf / (Cox W L f^Af) at the gate, times gm^2."""
+        width, units, length = sizes
+        gate = parameters["oxide_capacitance"] * width * units * length * frequency ** parameters["flicker_exponent"]
+        return parameters["flicker_coefficient"] * drain.gm**2 / gate
+
+    def junctions(self, parameters: Mapping[str, Array], area: Array, edge: Array, reverse: Array) -> Array:
+        """Return the depletion capacitance [F] of an area and its edge; grading powers of one logarithm."""
+        built_in = parameters["junction_potential"]
+        bias = np.log1p(np.maximum(reverse / built_in, -0.4))
+        bottom = parameters["junction_capacitance"] * area * np.exp(-parameters["junction_grading"] * bias)
+        return bottom + parameters["sidewall_capacitance"] * edge * np.exp(-parameters["sidewall_grading"] * bias)

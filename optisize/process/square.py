@@ -14,7 +14,7 @@ from typing import Annotated, Self
 import numpy as np
 from pydantic import Field
 
-from optisize.process.law import Array, Capacitances, Drain, Pick, Saturation, taken
+from optisize.process.law import Array, Capacitances, Drain, OfParameters, Pick, Saturation, taken
 from optisize.process.parameters import TransistorParameters
 from optisize.quantities import In
 
@@ -28,7 +28,7 @@ class SquareParameters(TransistorParameters):
 
 
 @dataclass(frozen=True)
-class SquareLaw:
+class SquareLaw(OfParameters):
     """The square law of T transistors in N designs; every array is (T, N) or broadcasts to it."""
 
     beta: Array

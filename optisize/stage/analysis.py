@@ -87,14 +87,8 @@ class Analysis:
 
     @cached_property
     def converged(self) -> Any:
-        """Which designs have an operating point in the middle of the common-mode range that the law knows, (N,)."""
-        outside = self.outside
-        return self.point.converged if outside is None else self.point.converged & ~outside.any(axis=0)
-
-    @cached_property
-    def outside(self) -> NDArray[np.bool_] | None:
-        """Which transistors are where their law knows nothing of them, (T, N); None of a law that holds everywhere."""
-        return self.circuit.law.outside(*self.terminals.of_law)
+        """Which designs have an operating point in the middle of the common-mode range, (N,) of bool."""
+        return self.point.converged
 
     @cached_property
     def terminals(self) -> Terminals:

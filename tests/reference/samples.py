@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -115,11 +116,9 @@ def draw(kind: Kind, process: Process, count: int, seed: int) -> dict[str, np.nd
     return sizes
 
 
-def sized(kind: Kind, process_name: str, count: int, *, saturated: bool = True, seed: int = 1) -> Analysis:
-    """Return `count` random sizings that have an operating point, all saturated or all with a transistor in triode.
-
-    A sizing within 5 mV of the border between both is left out: there the first derivatives of the square law jump.
-    """
+@lru_cache(maxsize=256)
+def usable(kind: Kind, process_name: str, count: int, saturated: bool, seed: int) -> dict[str, np.ndarray]:
+    """Return the sizes of `sized`, worked out once for all tests of a kind."""
     process = load_process(process_name)
     where = conditions(kind, process)
     sizes = draw(kind, process, DRAWS[saturated], seed)
@@ -129,10 +128,21 @@ def sized(kind: Kind, process_name: str, count: int, *, saturated: bool = True, 
         a = Analysis(size_circuit(kind.topology, process, where, part))
         room = a.room_at_rest
         conducting = a.drain.id.min(axis=0) > 1e-8
-        usable = a.converged & conducting & (room > 5e-3 if saturated else room < -5e-3)
-        good += (start + np.flatnonzero(usable)).tolist()
+        good += (
+            start + np.flatnonzero(a.converged & conducting & (room > 5e-3 if saturated else room < -5e-3))
+        ).tolist()
         if len(good) >= count:
             break
     picked = np.array(good[:count])
     assert len(picked) == count, f"only {len(picked)} of {DRAWS[saturated]} sizings of {kind} can be used"
-    return Analysis(size_circuit(kind.topology, process, where, {name: v[picked] for name, v in sizes.items()}))
+    return {name: v[picked] for name, v in sizes.items()}
+
+
+def sized(kind: Kind, process_name: str, count: int, *, saturated: bool = True, seed: int = 1) -> Analysis:
+    """Return `count` random sizings that have an operating point, all saturated or all with a transistor in triode.
+
+    A sizing within 5 mV of the border between both is left out: there the first derivatives of the square law jump.
+    """
+    process = load_process(process_name)
+    sizes = usable(kind, process_name, count, saturated, seed)
+    return Analysis(size_circuit(kind.topology, process, conditions(kind, process), sizes))

@@ -169,60 +169,71 @@ def stage(
     device: Device,
     *,
     own_ground: bool = False,
-    controlled: bool = True,
+    loaded: bool = True,
     deviations: Array | None = None,
 ) -> list[str]:
     """Return the elements of stage `k`, its supply and its load, without its inputs.
 
     With `own_ground` the ground of the stage is the node ``gnd_k``, held by the source ``v_ground_k``. What is not
-    `controlled` has its controls left out, for `held_outputs`. The relative `deviations` of all resistors are (R,).
+    `loaded` has its load left out, for `held_drains`. The relative `deviations` of all resistors are (R,).
     """
     top, process, sizes = circuit.topology, circuit.process, circuit.sizes
 
     def at(name: str) -> str:
         return node(name, k, own_ground=own_ground)
 
+    def there(name: str) -> bool:
+        return loaded or not of_load(name)
+
     lines = [f"v_supply_{k} {at('supply')} 0 {number(circuit.conditions.supply)}"]
     if own_ground:
         lines.append(f"v_ground_{k} {at('ground')} 0 0")
     for t in transistors(circuit, k, own_ground=own_ground):
-        lines += device(t, process)
+        lines += device(t, process) if there(t.name) else []
     off = np.zeros(len(top.resistors)) if deviations is None else deviations
     for row, r in enumerate(top.resistors):
+        if not there(r.name):
+            continue
         value = sizes[r.size][k]
         ends = at(r.a), at(r.b)
         lines.append(f"r_{part(r.name, k)} {ends[0]} {ends[1]} {number(value * (1.0 + off[row]))}")
         squares = value / process.resistor.sheet_resistance
         half = 0.5 * process.resistor.capacitance * squares * process.resistor.width**2
         lines += [f"c_{part(r.name, k)}_{i} {end} {at('ground')} {number(half)}" for i, end in enumerate(ends)]
-    for s in top.sources:
+    for s in (s for s in top.sources if there(s.name)):
         a, b = (s.a, s.b) if top.input == "nmos" else (s.b, s.a)
         lines.append(f"i_{part(s.name, k)} {at(a)} {at(b)} {number(sizes[s.size][k])}")
     for name, _ in top.output:
         load = number(circuit.conditions.load_capacitance)
         lines.append(f"c_load_{part(name, k)} {at(name)} {at('ground')} {load}")
-    if top.controls:
+    if top.controls and loaded:
         held = circuit.conditions.output_common_mode
         assert held is not None
         lines.append(f"v_reference_{k} {at(REFERENCE)} 0 {number(held)}")
-    for c in top.controls if controlled else ():
+    for c in top.controls if loaded else ():
         lines += control(c, k)
     return lines
 
 
-def path(name: str, values: Array) -> list[str]:
-    """Return a source that takes a node through values, one after the other, while ``v_theta`` goes 0, 1, 2 and so on.
+def of_load(name: str) -> bool:
+    """Tell whether an element belongs to the load, by its name in the stage or in the deck."""
+    return name.startswith("load")
 
-    Each stage goes its own way in one sweep: ``dc v_theta 5 9 1`` visits the values 5 to 9.
+
+def path(name: str, values: Array) -> list[str]:
+    """Return a source that takes a node through values, one after the other, while ``v_theta`` goes 1, 2, 3 and so on.
+
+    Each stage goes its own way in one sweep: ``dc v_theta 5 9 1`` visits the fifth value to the ninth. Before the first
+    the way is level: the simulator begins every sweep with the slope that the way has at zero.
     """
-    points = ",".join(f"{step},{number(float(value))}" for step, value in enumerate(values))
+    steps = ["-1", "0.5", *map(str, range(1, len(values) + 1))]
+    ways = [values[0], values[0], *values]
+    points = ",".join(f"{step},{number(float(value))}" for step, value in zip(steps, ways, strict=True))
     return [f"b_{name} {name} 0 v=pwl(v(theta),{points})"]
 
 
-def held_outputs(circuit: Circuit, k: int, voltages: Array) -> list[str]:
-    """Return sources ``v_held_<node>_k`` at both sides of stage `k` where these are alike, else at its output.
-
-    What controls the outputs is held too. The current of such a source is what the stage pushes into it.
+def held_drains(circuit: Circuit, k: int, voltages: Array) -> list[str]:
+    """Return sources at the drains of the pair of stage `k`, and of its cascodes, where the load would be.
 
     Args:
         circuit: the stages.
@@ -230,8 +241,7 @@ def held_outputs(circuit: Circuit, k: int, voltages: Array) -> list[str]:
         voltages: of all unknown nodes, (U, N).
     """
     top = circuit.topology
-    nodes = ["left", "right"] if top.symmetric else [name for name, _ in top.output]
-    nodes += [c.node for c in top.controls]
+    nodes = dict.fromkeys([*(t.drain for t in top.transistors if t.group == "input"), "left", "right"])
     return [f"v_held_{part(x, k)} {node(x, k)} 0 {number(voltages[top.unknown.index(x), k])}" for x in nodes]
 
 

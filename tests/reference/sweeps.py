@@ -16,6 +16,7 @@ from tests.reference.bench import Bench, parameter
 
 DIGITS = 3  # of the nodesets [V]; with one digit, stages with cascodes take a hundred times as long to begin
 WITHOUT_JUNCTIONS = partial(spice.level1, leak=1e-100)  # an ideal tail pulls its node some volts beyond the rails
+CURRENTS = "option abstol=1e-14"  # A; with a hundredth of it some population at rest does not converge
 NEARER = 0.55  # how much of the way that is left remains after a step to an expected end, at first
 STEPS = 10  # such steps; what is then left is half a percent
 THROUGH = np.array([0.1, -0.35, -0.8, -1.7, -3.5])  # of that, before and beyond the end
@@ -40,20 +41,19 @@ class Ways:
         """Add a stretch; the common mode stays in the middle of its range, the differential input at zero."""
         given = common if common is not None else differential
         assert given is not None
-        begin = sum(part.shape[1] for part in self.common)
+        begin = 1 + sum(part.shape[1] for part in self.common)
         middle = np.full(given.shape, self.a.circuit.conditions.middle)
         self.common.append(middle if common is None else common)
         self.differential.append(np.zeros(given.shape) if differential is None else differential)
-        self.analyses[name] = [f"dc v_theta {begin} {begin + given.shape[1] - 1} 1"]
+        self.analyses[name] = [CURRENTS, f"dc v_theta {begin} {begin + given.shape[1] - 1} 1"]
 
     def sources(self, k: int) -> list[str]:
         """Return the sources of the inputs of stage `k`."""
         lines = ["v_theta theta 0 0"] if k == 0 else []
-        for name, parts in (("cm", self.common), ("way", self.differential)):
+        for name, parts in (("cm", self.common), ("d", self.differential)):
             lines += spice.path(f"{name}_{k}", np.concatenate([part[k] for part in parts]))
         return [
             *lines,
-            f"v_d_{k} d_{k} way_{k} 0 ac 1",
             f"e_inp_{k} inp_{k} cm_{k} d_{k} 0 0.5",
             f"e_inn_{k} inn_{k} cm_{k} d_{k} 0 -0.5",
         ]
@@ -65,7 +65,6 @@ class Ways:
         figures: Sequence[str],
         *,
         held: bool = False,
-        before: dict[str, Sequence[str]] | None = None,
     ) -> Bench:
         """Run all stretches in one process of the simulator.
 
@@ -73,18 +72,19 @@ class Ways:
             ngspice: path of the simulator.
             folder: where the files go.
             figures: of every transistor that are kept, such as ``id``.
-            held: whether the outputs are held at rest by `spice.held_outputs`.
-            before: other analyses, with the inputs as at the beginning of the first stretch.
+            held: whether the drains of the pair are held at rest by `spice.held_drains`, without the load.
         """
         circuit, v = self.a.circuit, self.a.point.v
-        lines = []
+        lines: list[str] = []
         for k in range(circuit.designs):
-            lines += spice.stage(circuit, k, WITHOUT_JUNCTIONS, controlled=not held) + self.sources(k)
-            lines += spice.held_outputs(circuit, k, v) if held else []
-            lines += spice.nodesets(circuit, k, v, DIGITS)
-        designs = range(circuit.designs)
-        saves = [parameter(t.name, k, name) for t in self.a.topology.transistors for k in designs for name in figures]
-        return Bench(self.a, spice.simulate(ngspice, folder, lines, {**(before or {}), **self.analyses}, saves))
+            stage = spice.stage(circuit, k, WITHOUT_JUNCTIONS, loaded=not held) + self.sources(k)
+            stage += spice.held_drains(circuit, k, v) if held else []
+            there = {word for line in stage for word in line.split()}
+            begin = spice.nodesets(circuit, k, v, DIGITS)
+            lines += stage + [line for line in begin if line[line.index("(") + 1 : line.index(")")] in there]
+        there = [t for t in self.a.topology.transistors if not (held and spice.of_load(t.name))]
+        saves = [parameter(t.name, k, name) for t in there for k in range(circuit.designs) for name in figures]
+        return Bench(self.a, spice.simulate(ngspice, folder, lines, self.analyses, saves))
 
 
 def to_end(reach: Array) -> Array:

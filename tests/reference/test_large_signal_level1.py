@@ -25,6 +25,7 @@ from tests.reference.sweeps import DIGITS, Ways, first_end, pair, to_end
 SIZINGS = 40
 KINDS = EVERY_KIND + SOURCE_TIED + DEGENERATED
 DEPARTURE, STEERED = 0.01, 0.01  # the catalogue's defaults
+LITTLE = 0.02  # of the linear range
 RANGE, STEERING, LEAST_STEERING = 1e-2, 2e-3, 3e-4  # relative; relative; V
 PART = 0.4  # of the smaller excursion of the output, that a sine asks for at most
 HARMONICS, DISTORTION = 16, 10.0 ** (0.5 / 20.0) - 1.0  # intervals of half a period; half a decibel
@@ -32,61 +33,44 @@ SHIFT, OFFSET, LEAST_OFFSET = 0.6, 1e-3, 1e-6  # of the excursion at which the o
 # What the simulator is told, and what it resolves of a third harmonic then. Stacked cascodes do not converge any finer.
 FINER, RESOLVED = "option reltol=1e-9 vntol=1e-11", 3e-9
 FINER_DELICATE, RESOLVED_DELICATE = "option reltol=1e-8 vntol=1e-11", 3e-8
-SIGNS = {"down": -1.0, "up": 1.0}
+
+
+def directions() -> Array:
+    """Return the direction in which each stage is driven: matched stages answer alike both ways."""
+    return np.where(np.arange(SIZINGS) % 2, 1.0, -1.0)
 
 
 @pytest.fixture(scope="module", params=KINDS, ids=str)
 def held(request: pytest.FixtureRequest, ngspice: str, tmp_path_factory: pytest.TempPathFactory) -> Bench:
-    """Held outputs: the slope at rest, and both directions to 1 % of departure and to 1 % of a current."""
+    """Held drains: a little both ways, then to 1 % of departure, then to 1 % of a current."""
     a = sized(request.param, "handbook", SIZINGS)
     ways = Ways(a)
-    for measure in ("linear_range", "steering_voltage"):
-        reach = CATALOGUE[measure].of(a)
-        reach = np.where(np.isfinite(reach), reach, np.nanmedian(reach))
-        for side, sign in SIGNS.items():
-            ways.add(f"{measure}_{side}", differential=sign * to_end(reach))
-    before = {"rest": ["ac lin 1 1e-3 1e-3"]}
-    return ways.run(ngspice, tmp_path_factory.mktemp("held"), ("id",), held=True, before=before)
-
-
-def output_current(bench: Bench, plot: str) -> Array:
-    """Return what every stage pushes into the sources that hold its output, (N, points)."""
-    designs = range(bench.a.circuit.designs)
-    parts = [
-        sign * bench.plots[plot].stack([f"i(v_held_{spice.part(node, k)})" for k in designs])
-        for node, sign in bench.topology.output
-    ]
-    return np.sum(parts, axis=0)
+    linear, steering = (CATALOGUE[name].of(a) for name in ("linear_range", "steering_voltage"))
+    ways.add("little", differential=LITTLE * linear[:, None] * np.array([-1.0, 1.0]))
+    ways.add("linear", differential=directions()[:, None] * to_end(linear))
+    ways.add("steering", differential=directions()[:, None] * to_end(steering))
+    return ways.run(ngspice, tmp_path_factory.mktemp("held"), ("id",), held=True)
 
 
 def test_linear_range(held: Bench) -> None:
-    """The nearer of both directions in which the current into the output is 1 % off its tangent at rest."""
-    ends, tangent = [], output_current(held, "rest").real
-    for side in SIGNS:
-        plot = f"linear_range_{side}"
-        input, current = held.voltage(plot, "d"), output_current(held, plot)
-        straight = tangent * input[:, 1:]
-        gone = np.abs((current[:, 1:] - current[:, :1]) / straight - 1.0)
-        left = DEPARTURE - np.concatenate([np.zeros((SIZINGS, 1)), gone], axis=1)
-        ends.append(first_end(left[None], np.abs(input)))
-    assert_same(CATALOGUE["linear_range"].of(held.a), np.minimum(*ends), RANGE)
+    """Where the difference of the pair's currents is 1 % off its tangent at rest, a short chord."""
+
+    def difference(plot: str) -> tuple[Array, Array]:
+        current = pair(held, plot)
+        return held.voltage(plot, "d"), current[0] - current[1]
+
+    (input, ends), (way, along) = difference("little"), difference("linear")
+    tangent = np.diff(ends) / np.diff(input)
+    gone = np.abs(along[:, 1:] / (tangent * way[:, 1:]) - 1.0)
+    left = DEPARTURE - np.concatenate([np.zeros((SIZINGS, 1)), gone], axis=1)
+    assert_same(CATALOGUE["linear_range"].of(held.a), first_end(left[None], np.abs(way)), RANGE)
 
 
 def test_steering_voltage(held: Bench) -> None:
-    """The nearer of both directions in which an input transistor is left with 1 % of the pair's current."""
-    ends = []
-    for side in SIGNS:
-        plot = f"steering_voltage_{side}"
-        current = pair(held, plot)
-        ends.append(first_end(current / current.sum(axis=0) - STEERED, np.abs(held.voltage(plot, "d"))))
-    own = CATALOGUE["steering_voltage"].of(held.a)
-    found = np.isfinite(own)
-    assert_same(own[found], np.minimum(*ends)[found], STEERING, LEAST_STEERING)
-
-
-def test_every_end_is_found(held: Bench) -> None:
-    assert np.isfinite(CATALOGUE["linear_range"].of(held.a)).all()
-    assert np.isfinite(CATALOGUE["steering_voltage"].of(held.a)).all()
+    """Where an input transistor is left with 1 % of the pair's current."""
+    current = pair(held, "steering")
+    reference = first_end(current / current.sum(axis=0) - STEERED, np.abs(held.voltage("steering", "d")))
+    assert_same(CATALOGUE["steering_voltage"].of(held.a), reference, STEERING, LEAST_STEERING)
 
 
 def sines(a: Analysis) -> Array:

@@ -9,6 +9,7 @@ as resistances; a loop at DC takes the offset out by the input.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import lru_cache
 from pathlib import Path
 
@@ -56,25 +57,35 @@ SAMPLES, OWN_SAMPLES, SIMULATED_SAMPLES = 100, 20_000, 2000
 CHUNK, OWN_CHUNK = 40, 2000  # stages side by side in one deck (the time grows with their square), and in the kernel
 SAME = 2e-5  # relative, and of the standard deviation
 LINEAR = 0.05
-CONFIDENCE = 0.999
+CONFIDENCE = 0.99
 
 
-def drawn(a: Analysis, count: int, seed: int) -> Deviations:
+def spreads(a: Analysis) -> Deviations:
+    """Return the standard deviations of every transistor and resistor of one design, each (T, 1) or (R, 1)."""
+    process, sizes, top = a.circuit.process, a.circuit.sizes, a.topology
+    cards = [process.nmos if top.channel(t) == "n" else process.pmos for t in top.transistors]
+    areas = [
+        sizes[f"{t.group}.width"][0] * (sizes[t.units][0] if t.units else 1.0) * sizes[f"{t.group}.length"][0]
+        for t in top.transistors
+    ]
+    resistor = process.resistor
+    squares = [sizes[r.size][0] / resistor.sheet_resistance for r in top.resistors]
+
+    def alone(matching: Sequence[float], area: Sequence[float]) -> Array:
+        """Return the part of one device in the spread of a difference of two."""
+        return (np.array(matching) / np.sqrt(2.0 * np.array(area)))[:, None]
+
+    return Deviations(
+        alone([c.threshold_matching for c in cards], areas),
+        alone([c.factor_matching for c in cards], areas),
+        alone([resistor.matching] * len(squares), [n * resistor.width**2 for n in squares]),
+    )
+
+
+def drawn(sigmas: Deviations, count: int, seed: int) -> Deviations:
     """Return deviations of every transistor and resistor of one design, each (T, N) or (R, N)."""
     rng = np.random.default_rng(seed)
-    circuit, top = a.circuit, a.topology
-    process, sizes = circuit.process, circuit.sizes
-    thresholds, factors, resistances = [], [], []
-    for t in top.transistors:
-        card = process.nmos if top.channel(t) == "n" else process.pmos
-        units = sizes[t.units][0] if t.units else 1.0
-        area = sizes[f"{t.group}.width"][0] * units * sizes[f"{t.group}.length"][0]
-        thresholds.append(card.threshold_matching / np.sqrt(2.0 * area) * rng.standard_normal(count))
-        factors.append(card.factor_matching / np.sqrt(2.0 * area) * rng.standard_normal(count))
-    for r in top.resistors:
-        area = sizes[r.size][0] / process.resistor.sheet_resistance * process.resistor.width**2
-        resistances.append(process.resistor.matching / np.sqrt(2.0 * area) * rng.standard_normal(count))
-    return Deviations(np.array(thresholds), np.array(factors), np.array(resistances).reshape(-1, count))
+    return Deviations(*(sigma * rng.standard_normal((len(sigma), count)) for sigma in sigmas))
 
 
 def deviating(a: Analysis, deviations: Deviations, k: int) -> spice.Device:
@@ -125,7 +136,7 @@ def solved(a: Analysis, deviations: Deviations) -> tuple[Array, Array]:
     return samples.offset, samples.wiring.output(samples.responses[:, 1])
 
 
-@lru_cache(maxsize=2)
+@lru_cache(maxsize=32)
 def sturdy(kind: Kind) -> Analysis:
     """Return the sizing with the most room of a few: mismatch is straight well inside saturation only."""
     a = sized(kind, "handbook", 8)
@@ -133,15 +144,12 @@ def sturdy(kind: Kind) -> Analysis:
     return Analysis(a.circuit.take(np.array([best])))
 
 
-@lru_cache(maxsize=2)
+@lru_cache(maxsize=32)
 def monte_carlo(kind: Kind, seed: int = 11) -> tuple[Array, Array]:
     """Return offset and common-mode gain by the kernel's own Monte Carlo of that sizing, with its own spreads."""
-    a, rng = sturdy(kind), np.random.default_rng(seed)
-    spreads = mismatch.spreads(a.circuit)
-    chunks = [
-        solved(a, Deviations(*(sigma * rng.standard_normal((len(sigma), OWN_CHUNK)) for sigma in spreads)))
-        for _ in range(OWN_SAMPLES // OWN_CHUNK)
-    ]
+    a = sturdy(kind)
+    sigmas = mismatch.spreads(a.circuit)
+    chunks = [solved(a, drawn(sigmas, OWN_CHUNK, seed + i)) for i in range(OWN_SAMPLES // OWN_CHUNK)]
     offset, gain = (np.concatenate(x) for x in zip(*chunks, strict=True))
     return offset, gain
 
@@ -158,7 +166,7 @@ def test_first_order(kind: Kind) -> None:
 def test_two_monte_carlos(kind: Kind, ngspice: str, tmp_path: Path) -> None:
     """Means and standard deviations within the intervals (t, chi-square) of the simulator's samples."""
     a = sturdy(kind)
-    samples = simulated(ngspice, tmp_path, a, drawn(a, SIMULATED_SAMPLES, seed=5))
+    samples = simulated(ngspice, tmp_path, a, drawn(spreads(a), SIMULATED_SAMPLES, seed=5))
     for own, found in zip(monte_carlo(kind), samples, strict=True):
         n, sigma = len(found), found.std(ddof=1)
         low, high = stats.t.interval(CONFIDENCE, n - 1, found.mean(), sigma / np.sqrt(n))
@@ -169,8 +177,10 @@ def test_two_monte_carlos(kind: Kind, ngspice: str, tmp_path: Path) -> None:
 
 @pytest.mark.parametrize("kind", KINDS, ids=str)
 def test_the_same_deviations(kind: Kind, ngspice: str, tmp_path: Path) -> None:
-    """Sample by sample: the offset, and the common-mode gain with the offset taken out."""
+    """The spreads, and sample by sample the offset and the common-mode gain with the offset taken out."""
     a = sized(kind, "handbook", 1)
-    deviations = drawn(a, SAMPLES, seed=7)
+    for own, reference in zip(mismatch.spreads(a.circuit), spreads(a), strict=True):
+        np.testing.assert_allclose(own, reference, rtol=1e-12)
+    deviations = drawn(spreads(a), SAMPLES, seed=7)
     for found, reference in zip(solved(a, deviations), simulated(ngspice, tmp_path, a, deviations), strict=True):
         assert_same(found, reference, SAME, SAME * reference.std())
