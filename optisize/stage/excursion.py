@@ -178,7 +178,7 @@ def _saturation_margins(network: Network, here: Linearised, change: Terminals) -
 def _pair_margins(
     network: Network, here: Linearised, change: Terminals, ending: Ending, caution: float
 ) -> list[tuple[Array, Array]]:
-    """Return what the pair's currents have left, as roots since these are straighter, and how that changes."""
+    """Return what the pair's currents have left, a share as its root since that is straighter, and how that changes."""
     pair, drain = network.wiring.pair, here.drain
     current = drain.id[pair]
     flow = drain.gm[pair, None] * change.gate[pair]
@@ -192,8 +192,7 @@ def _pair_margins(
         turn = (flow - share[:, None] * whole) / (2.0 * total * root)[:, None]
         margins.append((caution * (root - np.sqrt(STEERED)), turn))
     if ending.current is not None:
-        root = np.sqrt(np.maximum(total / ending.current, 1e-9))
-        margins.append(((root - 1.0)[None], (whole / (2.0 * ending.current * root))[None]))
+        margins.append(((total / ending.current - 1.0)[None], (whole / ending.current)[None]))
     return margins
 
 

@@ -24,6 +24,11 @@ What was found by trying (version 39), and what follows for a bench:
   ``write``. The totals are exact for power laws between the points. The output may be ``v(a,b)``. The source has to
   have an AC value, which may be zero; its magnitude does not matter, nor do other sources. Every command repeats the
   operating point of the whole deck, 45 ms for forty stages; see `output_chain` for all of them at once.
+- A ``dc`` sweep begins each point on the straight line through the two before it, as if its steps were equal. A step
+  of less than half the one before begins beyond its point; there a transistor may be turned round, Newton runs in
+  circles, and the steps down of gmin that follow cost a thousand times as much and now and then end at a solution that
+  is none. See `path` and `sweeps.to_end`.
+- Time grows with the square of the stages in a deck, each model being looked up among all: forty are a good number.
 """
 
 from __future__ import annotations

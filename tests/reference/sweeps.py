@@ -41,6 +41,7 @@ class Ways:
         """Add a stretch; the common mode stays in the middle of its range, the differential input at zero."""
         given = common if common is not None else differential
         assert given is not None
+        assert np.isfinite(given).all(), f"{name}: no way to where nothing was found"
         begin = 1 + sum(part.shape[1] for part in self.common)
         middle = np.full(given.shape, self.a.circuit.conditions.middle)
         self.common.append(middle if common is None else common)
