@@ -15,11 +15,8 @@ from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from optisize.stage.response import Response
 
-FEW, FEW_PER_DECADE, FLAT = (
-    4,
-    0.8,
-    0.05,
-)  # frequencies, where the weight of white noise differs by so little (ln) over the band
+FEW, FEW_PER_DECADE = 4, 0.8  # frequencies where white noise is flat
+FLAT = 0.005  # by how much it may differ over the band for that (ln)
 MANY, MANY_PER_DECADE = 6, 2.0  # frequencies elsewhere
 FINE = 12  # points of the rule for the powers, for each frequency
 
