@@ -91,13 +91,11 @@ def plot(
 ) -> None:
     """Draw the trade-offs between the goals and the history of the search."""
     from optisize.front.run import load_run
-    from optisize.show.plots import write_figures
+    from optisize.show.plots import FORMATS, write_figures
 
     for kind in formats or []:
-        if kind not in ("png", "svg", "pdf"):
-            raise InputError(
-                f'--format: found "{kind}"; allowed are png, svg, pdf{nearest(kind, ("png", "svg", "pdf"))}'
-            )
+        if kind not in FORMATS:
+            raise InputError(f'--format: found "{kind}"; allowed are {", ".join(FORMATS)}{nearest(kind, FORMATS)}')
     loaded = load_run(run)
     directory = to or run
     if not directory.is_dir():

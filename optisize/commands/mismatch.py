@@ -34,13 +34,14 @@ def spread(
     import os
 
     from optisize.front.pick import pick
-    from optisize.front.spread import OWN
+    from optisize.front.spread import OWN, check_measures
     from optisize.front.spread import spread as spread_of
     from optisize.show.spread import Counter, check_figure, draw_spread, print_spread, spread_record
 
     if figure is not None:
         check_figure(figure)
     picked = pick(run, design, sizing)
+    check_measures(picked.problem, measure or ())
     with Counter(samples, quiet) as watch:
         found = spread_of(
             picked.problem,

@@ -40,6 +40,7 @@ def search(
     from optisize.front import explore
     from optisize.front.run import check_free
     from optisize.problem.load import load_problem, load_sizing
+    from optisize.show.terminal import Progress
 
     loaded = load_problem(problem)
     target = to or Path("results") / problem.stem
@@ -48,7 +49,7 @@ def search(
     settings = explore.settings_of(loaded, **{k: v for k, v in chosen.items() if v is not None})
     seeds = load_sizing(start_from, loaded) if start_from else None
     with on_ctrl_c(stop_once):
-        with _progress(settings.generations, quiet) as watch:
+        with Progress(settings.generations, quiet) as watch:
             run = explore.search(loaded, threads=threads, seeds=seeds, watch=watch, settings=settings)
         _finish(run, target, figures, as_json)
 
@@ -67,29 +68,15 @@ def resume(
     """Go on with an interrupted search, bit for bit; a finished one goes on from its front."""
     from optisize.front import explore
     from optisize.front.run import check_free, check_writable, load_run
+    from optisize.show.terminal import Progress
 
     loaded = load_run(run)
     check_writable(run) if to is None else check_free(to)
     settings = loaded.problem.settings if loaded.state is None else loaded.state.settings
     with on_ctrl_c(stop_once):
-        with _progress(generations or settings.generations, quiet) as watch:
+        with Progress(generations or settings.generations, quiet) as watch:
             again = explore.resume(loaded, generations=generations, threads=threads, watch=watch)
         _finish(again, to or run, figures, as_json, replace=to is None)
-
-
-class _progress:
-    """Shows a search on stderr while it runs."""
-
-    def __init__(self, budget: int, quiet: bool) -> None:
-        from optisize.show.terminal import Progress
-
-        self._progress = Progress(budget, quiet)
-
-    def __enter__(self) -> Any:
-        return self._progress
-
-    def __exit__(self, *_: object) -> None:
-        self._progress.close()
 
 
 def _finish(run: Any, target: Path, figures: bool, as_json: bool, replace: bool = False) -> None:

@@ -188,10 +188,11 @@ def spread(
     if not matched.converged[0]:
         raise InputError("the sizing has no operating point between the rails under these conditions")
     wanted = [problem.find(n) for n in dict.fromkeys([*problem.needed, *(OWN if names is None else names)])]
+    without_mismatch = [m.at(m.name, dict(m.settings) | {"sigmas": 0.0}) if counts_sigmas(m) else m for m in wanted]
     spread_of = spreads(matched.circuit)
     values = np.concatenate(_sampled(matched, spread_of, wanted, samples, seed, threads, watch), axis=1)
     linear = _first_order(matched, spread_of, wanted, seed, samples)
-    at_rest = measured(matched, wanted)
+    at_rest = measured(matched, without_mismatch)
     distributions = [
         Distribution(m, float(rest[0]), row, expected)
         for m, rest, row, expected in zip(wanted, at_rest, values, linear, strict=True)
@@ -205,6 +206,20 @@ def spread(
         distributions=tuple(d for d in distributions if _tells(d, problem)),
         yields=_yields(problem.limits, [m.name for m in wanted], values, linear),
     )
+
+
+def check_measures(problem: Problem, names: Sequence[str]) -> None:
+    """Raise InputError for a name of the option ``--measure`` that no measure has."""
+    for name in names:
+        try:
+            problem.find(name)
+        except InputError as error:
+            raise InputError(f"--measure: {error}") from None
+
+
+def counts_sigmas(measure: Measure) -> bool:
+    """Tell whether a measure counts standard deviations of mismatch; of a sample it reads what that has itself."""
+    return any(p.name == "sigmas" for p in measure.parameters)
 
 
 def _tells(found: Distribution, problem: Problem) -> bool:

@@ -35,6 +35,8 @@ _PREFIXES = (
     (1e-9, "n"),
     (1e-12, "p"),
 )
+FORMATS = ("png", "svg", "pdf")
+BETTER = {"max": "higher", "min": "lower", "zero": "nearer to zero"}
 LINE = 40  # letters that fit beside an axis
 _LOG_SPAN = 8.0  # an axis whose figures span more than this factor is logarithmic
 
@@ -146,14 +148,14 @@ def _draw_trade_off(figure: Figure, spot: Axes, shown: TradeOff) -> None:
         norm = _norm(colour)
         drawn = spot.scatter(shown.x.values, shown.y.values, c=colour.values, cmap="viridis", norm=norm, **options)
         bar = figure.colorbar(drawn, ax=spot)
-        bar.set_label(_heading(colour))
+        bar.set_label(heading(colour.label, colour.better))
     else:
         spot.scatter(shown.x.values, shown.y.values, color="#31688e", **options)
     for axis, set_label, set_scale, line in (
         (shown.x, spot.set_xlabel, spot.set_xscale, spot.axvline),
         (shown.y, spot.set_ylabel, spot.set_yscale, spot.axhline),
     ):
-        set_label(_heading(axis))
+        set_label(heading(axis.label, axis.better))
         if axis.logarithmic:
             set_scale("log")
         for name, bound in axis.bounds:
@@ -166,11 +168,11 @@ def _draw_trade_off(figure: Figure, spot: Axes, shown: TradeOff) -> None:
     spot.set_axisbelow(True)
 
 
-def _heading(axis: Axis) -> str:
-    """Return what stands at an axis, in lines that are no longer than the axis."""
-    way = "higher is better" if axis.better == "max" else "lower is better"
-    whole = f"{axis.label}, {way}"
-    return whole if len(whole) <= LINE else f"{textwrap.fill(axis.label, LINE)},\n{way}"
+def heading(label: str, better: str) -> str:
+    """Return what stands at an axis, and which way is better, in lines that are no longer than the axis."""
+    way = f"{BETTER[better]} is better"
+    whole = f"{label}, {way}"
+    return whole if len(whole) <= LINE else f"{textwrap.fill(label, LINE)},\n{way}"
 
 
 def _norm(axis: Axis) -> Any:

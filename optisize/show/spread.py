@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import sys
-import time
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -11,12 +9,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from optisize.errors import InputError, nearest
-from optisize.front.spread import CONFIDENCE, Distribution, Spread, Yield
+from optisize.front.spread import CONFIDENCE, Distribution, Spread, Yield, counts_sigmas
 from optisize.problem.own_measures import label as label_of
 from optisize.process.law import Array
 from optisize.quantities import write
-from optisize.show.plots import pyplot, readable, title_text, write_figure
-from optisize.show.terminal import console, json_number, print_caution, print_table
+from optisize.show.plots import FORMATS, heading, pyplot, readable, title_text, write_figure
+from optisize.show.terminal import StatusLine, console, json_number, print_caution, print_table
 from optisize.stage.catalogue import Measure
 
 if TYPE_CHECKING:
@@ -24,34 +22,20 @@ if TYPE_CHECKING:
 
 BARS = " ▁▂▃▄▅▆▇█"
 BAR_BINS = 24
-KINDS = (".png", ".svg", ".pdf")
 
 
-class Counter:
-    """Shows on stderr how many samples are done, once it takes longer than two seconds."""
+class Counter(StatusLine):
+    """Shows how many samples are done, once it takes longer than two seconds."""
 
     def __init__(self, samples: int, quiet: bool) -> None:
         """Prepare for a number of samples."""
-        self._samples, self._quiet = samples, quiet
-        self._last = time.monotonic()
-        self._live = sys.stderr.isatty()
-        self._shown = False
-
-    def __enter__(self) -> Counter:
-        return self
+        super().__init__(quiet, patience=2.0)
+        self._samples = samples
 
     def __call__(self, done: int) -> None:
         """Show the number, if it is time to."""
-        now = time.monotonic()
-        if self._quiet or now - self._last < (0.2 if self._shown and self._live else 2.0):
-            return
-        self._last, self._shown = now, True
-        text = f"samples {done}/{self._samples}"
-        print(f"\r{text}\x1b[K" if self._live else text, end="" if self._live else "\n", file=sys.stderr, flush=True)
-
-    def __exit__(self, *_: object) -> None:
-        if self._shown and self._live:
-            print("\r\x1b[K", end="", file=sys.stderr, flush=True)
+        if self.due:
+            self.show(f"samples {done}/{self._samples}")
 
 
 def bars(found: Distribution, bins: int = BAR_BINS) -> str:
@@ -64,8 +48,7 @@ def bars(found: Distribution, bins: int = BAR_BINS) -> str:
 
 def sample_label(measure: Measure) -> str:
     """Return what to call a measure of samples: one that counts standard deviations reads what a sample has itself."""
-    counts = any(p.name == "sigmas" for p in measure.parameters)
-    return f"{measure.name} (of each)" if counts else label_of(measure)
+    return f"{measure.name} (of each)" if counts_sigmas(measure) else label_of(measure)
 
 
 def print_spread(found: Spread, label: str) -> None:
@@ -124,6 +107,7 @@ class Histogram:
 
     Attributes:
         label: name, settings of its parameters, and unit.
+        better: ``max``, ``min`` or, of a signed figure, ``zero``.
         edges, counts: of the bins, (B + 1,) and (B,), in that unit.
         linear: counts of the same samples to first order, (B,).
         matched: the value without mismatch.
@@ -131,6 +115,7 @@ class Histogram:
     """
 
     label: str
+    better: str
     edges: Array
     counts: Array
     linear: Array
@@ -151,6 +136,7 @@ def _histogram(d: Distribution, found: Spread) -> Histogram:
     limits = [b for x in found.problem.limits if x.measure.name == d.measure.name for b in x.bounds]
     return Histogram(
         label=f"{name} [{unit}]" if unit else name,
+        better=_better(d.measure, found),
         edges=edges / factor,
         counts=counts.astype(float),
         linear=linear.astype(float),
@@ -159,10 +145,16 @@ def _histogram(d: Distribution, found: Spread) -> Histogram:
     )
 
 
+def _better(measure: Measure, found: Spread) -> str:
+    sense = next((g.sense for g in found.problem.goals if g.measure.name == measure.name), measure.better)
+    return "zero" if measure.signed and sense == "min" else sense
+
+
 def check_figure(path: Path) -> None:
     """Raise InputError for a figure file of a kind that cannot be drawn, or in no directory."""
-    if path.suffix not in KINDS:
-        raise InputError(f'--figure: found "{path.name}"; allowed are {", ".join(KINDS)}{nearest(path.suffix, KINDS)}')
+    kinds = [f".{kind}" for kind in FORMATS]
+    if path.suffix not in kinds:
+        raise InputError(f'--figure: found "{path.name}"; allowed are {", ".join(kinds)}{nearest(path.suffix, kinds)}')
     if not path.parent.is_dir():
         raise InputError(f"--figure: {path.parent}: there is no such directory")
 
@@ -196,14 +188,15 @@ def draw_spread(found: Spread, label: str, path: Path, dpi: int = 150) -> None:
 def _draw(spot: Axes, shown: Histogram) -> None:
     spot.stairs(shown.counts, shown.edges, fill=True, color="#8fb8d8", label="samples")
     spot.stairs(shown.linear, shown.edges, color="#1f3a52", linewidth=1.3, label="to first order")
-    spot.axvline(shown.matched, color="0.25", linestyle=":", linewidth=1.2, label="without mismatch")
+    if np.isfinite(shown.matched):
+        spot.axvline(shown.matched, color="0.25", linestyle=":", linewidth=1.2, label="without mismatch")
     low, high = shown.edges[0], shown.edges[-1]
     for name, bound in shown.bounds:
         if low - 0.5 * (high - low) <= bound <= high + 0.5 * (high - low):
             spot.axvline(bound, color="#b5367a", linestyle="--", linewidth=1.2, label=f"limit: {name} {bound:g}")
-    spot.set_xlabel(shown.label)
+    spot.set_xlabel(heading(shown.label, shown.better))
     spot.set_ylabel("samples in a bin")
     spot.set_ylim(top=1.35 * float(max(shown.counts.max(), shown.linear.max())))
-    spot.legend(fontsize=7, frameon=False, loc="upper right", ncols=2)
+    spot.legend(fontsize=7, framealpha=0.9, edgecolor="none", loc="upper right", ncols=2)
     spot.grid(True, color="0.9", linewidth=0.6)
     spot.set_axisbelow(True)

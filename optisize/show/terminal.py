@@ -6,6 +6,7 @@ import math
 import sys
 import time
 from collections.abc import Iterable, Sequence
+from typing import Self
 
 import numpy as np
 import pandas as pd
@@ -26,6 +27,7 @@ from optisize.quantities import write
 CAUTION = "A starting point for your simulator, not a sign-off: layout, reliability and ESD need the foundry's models."
 
 
+REWRITTEN, REPEATED = 0.1, 2.0  # s between two states that are shown: of a line in a terminal, of lines elsewhere
 GAP = 2  # blanks between the columns of a table
 
 
@@ -72,33 +74,51 @@ def _blocks(widths: Sequence[int], room: int) -> list[list[int]]:
     return blocks
 
 
-class Progress:
-    """Shows how a search goes on: one line that is rewritten in a terminal, a line every few seconds elsewhere."""
+class StatusLine:
+    """Shows on stderr how work goes on: a line that is rewritten in a terminal, one every few seconds elsewhere."""
+
+    def __init__(self, quiet: bool = False, patience: float = 0.0) -> None:
+        """Begin; `patience` is how many seconds the work may take before a terminal shows anything."""
+        self._quiet = quiet
+        self._live = sys.stderr.isatty()
+        self._shown = False
+        self._due = time.monotonic() + (max(patience, REWRITTEN) if self._live else REPEATED)
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        """Leave the line."""
+        if self._live and self._shown:
+            print("\r\x1b[K", end="", file=sys.stderr, flush=True)
+
+    @property
+    def due(self) -> bool:
+        """Whether it is time to show something."""
+        return not self._quiet and time.monotonic() >= self._due
+
+    def show(self, text: str) -> None:
+        """Show a text in place of the one before."""
+        self._due, self._shown = time.monotonic() + (REWRITTEN if self._live else REPEATED), True
+        print(f"\r{text}\x1b[K" if self._live else text, end="" if self._live else "\n", file=sys.stderr, flush=True)
+
+
+class Progress(StatusLine):
+    """Shows how a search goes on."""
 
     def __init__(self, budget: int, quiet: bool = False) -> None:
         """Prepare for a number of generations."""
+        super().__init__(quiet)
         self._budget = budget
-        self._quiet = quiet
-        self._begin = self._last = time.monotonic()
-        self._live = sys.stderr.isatty()
 
     def __call__(self, state: State) -> None:
         """Show the state of the search after a generation, if it is time to."""
-        now = time.monotonic()
-        if self._quiet or not state.records or now - self._last < (0.1 if self._live else 2.0):
-            return
-        self._last = now
-        record = state.records[-1]
-        text = (
-            f"generation {record.generation}/{self._budget}  evaluations {record.evaluations}  "
-            f"feasible {100 * record.feasible_share:.0f} %  hypervolume {record.hypervolume:.4f}"
-        )
-        print(f"\r{text}\x1b[K" if self._live else text, end="" if self._live else "\n", file=sys.stderr, flush=True)
-
-    def close(self) -> None:
-        """Leave the line."""
-        if self._live and not self._quiet and self._last > self._begin:
-            print("\r\x1b[K", end="", file=sys.stderr, flush=True)
+        if self.due and state.records:
+            record = state.records[-1]
+            self.show(
+                f"generation {record.generation}/{self._budget}  evaluations {record.evaluations}  "
+                f"feasible {100 * record.feasible_share:.0f} %  hypervolume {record.hypervolume:.4f}"
+            )
 
 
 def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Binding]) -> None:

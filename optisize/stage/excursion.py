@@ -22,6 +22,7 @@ ITERATIONS = 25
 # The part of the way to full steering that the first step takes: the slope at rest leads a square-law pair to 1.71
 # overdrives, beyond 1.41 where one side is off and has no slope to come back by.
 CAUTION = 0.7
+FREE_STEP = 0.1  # of the supply, where no margin falls: what nothing ends is driven far beyond the rails
 STEP_LIMIT = 0.6  # V, of any node in one step
 SETTLED = 1e-2  # V; the step after which the next one would be some 0.1 mV (convergence is quadratic)
 
@@ -32,7 +33,7 @@ class Excursion:
 
     Attributes:
         v: node voltages at the end, (A, N).
-        amplitude: of the drive [V], (N,).
+        amplitude: of the drive [V], (N,); of one without end, how far it was driven.
         found: whether the end was found, (N,) of bool.
     """
 
@@ -67,12 +68,14 @@ class Ending:
         steered: whether each input transistor must carry its least share of the pair's current.
         current: the least current of the pair [A], (N,), if any.
         settled: the step of the amplitude [V] after which it is known, where it is what is wanted.
+        farthest: the amplitude [V] beyond which the drive counts as without end.
     """
 
     saturated: bool = True
     steered: bool = True
     current: Array | None = None
     settled: float = np.inf
+    farthest: float = np.inf
 
     def take(self, columns: Pick) -> Self:
         """Return the same for some of the designs."""
@@ -112,6 +115,8 @@ def follow(
         fresh = active.fresh(_step(part, here, pv, pa, drive, ps, ends, iteration == 0) & (iteration > 0))
         done = active.designs(fresh)
         v[:, done], amplitude[done], found[done] = pv.take(fresh, axis=1), pa[fresh], True
+        endless = active.fresh(pa > ends.farthest)
+        amplitude[active.designs(endless)] = pa[endless]
         left = active.thinned()
         if left is not None:
             if not len(left):
@@ -144,7 +149,8 @@ def _step(
     toward[:unknowns] = regular_solve(network, here.equations.matrix, -right)
     toward[unknowns:, 1] = drive[unknowns:, None] * sign
     margin, settle, rise = _margins(network, here, toward, ending, first)
-    step = np.maximum(_amplitude_step(margin + settle, rise, amplitude), -amplitude)
+    onward = FREE_STEP * network.supply
+    step = np.maximum(_amplitude_step(margin + settle, rise, amplitude, onward), -amplitude)
     change = toward[:, 0] + step * toward[:, 1]
     moved = np.abs(change[:unknowns]).max(axis=0)
     if not moved.max() < STEP_LIMIT:
@@ -196,12 +202,12 @@ def _pair_margins(
     return margins
 
 
-def _amplitude_step(margin: Array, rise: Array, amplitude: Array) -> Array:
+def _amplitude_step(margin: Array, rise: Array, amplitude: Array, onward: float) -> Array:
     """Return the step (N,) to where the first margin that falls with the drive is predicted to vanish.
 
     A margin that is gone and no longer falls, such as the current of a transistor that is off, was passed: half way
-    back.
+    back. Where nothing falls the drive goes onward by that much [V].
     """
     steps = np.where(rise < 0.0, margin / -rise, np.where(margin < 0.0, -0.5 * amplitude, np.inf))
     nearest = steps.min(axis=0)
-    return np.where(np.isfinite(nearest), nearest, 0.1)
+    return np.where(np.isfinite(nearest), nearest, onward)

@@ -37,7 +37,7 @@ def input_range(a: Analysis) -> tuple[Array, Array]:
 
     Up to where the first transistor that has to be saturated no longer is, or the pair carries less than half of its
     current in the middle of the range. The middle itself where that is out of saturation; unlimited where nothing ends
-    the range within a volt of the rails.
+    the range within a volt of the rails; not a number where neither was found.
     """
     return a.once("input range", lambda: _input_range(a))
 
@@ -50,7 +50,8 @@ def _input_range(a: Analysis) -> tuple[Array, Array]:
         twice = np.concatenate([columns, columns])
         sign = np.repeat([-1.0, 1.0], len(columns))
         least = LEAST_CURRENT * a.drain.id[a.wiring.pair].sum(axis=0)[twice]
-        ending = Ending(steered=False, current=least.astype(a.coarse), settled=SETTLED)
+        farthest = max(conditions.middle, conditions.supply - conditions.middle) + BEYOND
+        ending = Ending(steered=False, current=least.astype(a.coarse), settled=SETTLED, farthest=farthest)
         end = follow(
             a.moving[1].take(twice),
             a.point.v[part.nodes].take(twice, axis=1).astype(a.coarse),
@@ -60,8 +61,9 @@ def _input_range(a: Analysis) -> tuple[Array, Array]:
             ending,
         )
         reach = conditions.middle + sign * end.amplitude
-        reached = end.found & (reach > -BEYOND) & (reach < conditions.supply + BEYOND)
-        ends[:, columns] = np.where(reached, reach, sign * np.inf).reshape(2, -1)
+        beyond = (reach < -BEYOND) | (reach > conditions.supply + BEYOND)
+        reach = np.where(beyond, sign * np.inf, np.where(end.found, reach, np.nan))
+        ends[:, columns] = reach.reshape(2, -1)
     return ends[0], ends[1]
 
 

@@ -43,9 +43,8 @@ def _shape(group: str, of: str) -> tuple[Size, Size]:
     )
 
 
-def _gate(transistor: str, current: Callable[[Start], Array]) -> Guess:
-    """Return the guess of a gate that stands at its rail by what a transistor needs to carry a current."""
-    rail = "tail_rail" if transistor in ("bias", "tail.cascode.bias") else "load_rail"
+def _gate(rail: str, transistor: str, current: Callable[[Start], Array]) -> Guess:
+    """Return the guess of a gate that stands from a rail by what a transistor needs to carry a current."""
     return lambda s: s.away(rail, s.gate_drive(transistor, current(s)))
 
 
@@ -140,7 +139,7 @@ DEGENERATED = {"input.p": "left_source", "input.n": "right_source"}
 _ONE_OUTPUT = "a mirror has one output: the other side is its diode"
 _HELD = "common-mode control holds the mean of two outputs"
 _BOTH = ("single-ended", "differential")
-_LOAD_GATE = _gate("load.p", _half)
+_LOAD_GATE = _gate("load_rail", "load.p", _half)
 
 
 def _current_source(name: str, drain: str) -> Transistor:
@@ -207,7 +206,7 @@ LOADS: dict[str, LoadKind] = {
             ("left", lambda s: s.rail(REFERENCE)),
             ("right", lambda s: s.rail(REFERENCE)),
             ("load_gate", _LOAD_GATE),
-            ("load_bias", _gate("load.bias", _leg)),
+            ("load_bias", _gate("load_rail", "load.bias", _leg)),
         ),
         outputs=("differential",),
         symmetric=True,
@@ -233,7 +232,7 @@ _OVER_CASCODE = _under_cascode("load.cascode.bias", "load.cascode.p", _half)
 _LOAD_CASCODE_GUESSES: tuple[tuple[str, Guess], ...] = (
     ("left_high", lambda s: s.away("load_rail", _OVER_CASCODE(s))),
     ("right_high", lambda s: s.away("load_rail", _OVER_CASCODE(s))),
-    ("load_cascode", _gate("load.cascode.bias", _leg)),
+    ("load_cascode", _gate("load_rail", "load.cascode.bias", _leg)),
 )
 
 CASCODED_LOADS: dict[str, LoadKind] = {
@@ -319,7 +318,7 @@ TAILS: dict[str, TailKind] = {
             Transistor("bias", "bias", "bias", "tail_rail", "input", "tail", saturates=False),
         ),
         sources=(_BIAS_LEG,),
-        guesses=(("bias", _gate("bias", _leg)),),
+        guesses=(("bias", _gate("tail_rail", "bias", _leg)),),
         current=_mirrored,
     ),
     "cascode": TailKind(
@@ -342,10 +341,10 @@ TAILS: dict[str, TailKind] = {
         ),
         sources=(_BIAS_LEG, CurrentSource("tail.cascode.bias", "load_rail", "tail_cascode", "bias.current")),
         guesses=(
-            ("bias", _gate("bias", _leg)),
+            ("bias", _gate("tail_rail", "bias", _leg)),
             ("tail_low", lambda s: s.away("tail_rail", _UNDER_TAIL_CASCODE(s))),
             ("bias_low", lambda s: s.away("tail_rail", _UNDER_TAIL_CASCODE(s))),
-            ("tail_cascode", _gate("tail.cascode.bias", _leg)),
+            ("tail_cascode", _gate("tail_rail", "tail.cascode.bias", _leg)),
         ),
         current=_mirrored,
     ),
