@@ -52,7 +52,9 @@ def characteristic(
     """
     wanted = np.array([levels], dtype=float)
     size = np.ones_like(wanted)
-    law, _ = process.bind_law([channel], _WIDTH * size, length * size, process.nominal.temperature, "typical")
+    law, _ = process.bind_law(
+        [channel], _WIDTH * size, length * size, process.nominal.temperature, process.corner_names[0]
+    )
     vs = np.zeros_like(wanted)
     low, high = np.full_like(wanted, -2.0), np.full_like(wanted, 20.0)
     for _ in range(60):

@@ -6,7 +6,7 @@ caller). Arrays have the shape (T, N): transistors by designs; parameters may be
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import NamedTuple, Protocol, Self
 
 import numpy as np
@@ -108,6 +108,15 @@ class Law(Protocol):
             reverse: voltage over the junction [V].
         """
 
+    def leak(self, drain: Drain, vg: Array, vd: Array, vs: Array) -> Drain | None:
+        """Return what of a drain current flows to the bulk, and its derivatives; None where the law has none."""
+
+    def outside(self, vg: Array, vd: Array, vs: Array) -> NDArray[np.bool_] | None:
+        """Tell which transistors are where the law knows nothing of them; None where it holds everywhere."""
+
+    def why_outside(self, names: Sequence[str], vg: Array, vd: Array, vs: Array) -> list[str]:
+        """Return what is outside in the first design, each one short text with the transistor's name."""
+
     def gate_voltage(self, current: Array, vs: Array) -> Array:
         """Estimate the gate voltage at which a saturated device carries `current` [A]; a start for Newton."""
 
@@ -143,3 +152,15 @@ class OfParameters:
         bias = np.log1p(np.maximum(reverse / built_in, -0.4))
         bottom = parameters["junction_capacitance"] * area * np.exp(-parameters["junction_grading"] * bias)
         return bottom + parameters["sidewall_capacitance"] * edge * np.exp(-parameters["sidewall_grading"] * bias)
+
+    def leak(self, drain: Drain, vg: Array, vd: Array, vs: Array) -> None:
+        """Return None: the whole drain current flows to the source."""
+        return None
+
+    def outside(self, vg: Array, vd: Array, vs: Array) -> None:
+        """Return None: a law with parameters holds everywhere."""
+        return None
+
+    def why_outside(self, names: Sequence[str], vg: Array, vd: Array, vs: Array) -> list[str]:
+        """Return nothing: a law with parameters holds everywhere."""
+        return []

@@ -87,8 +87,21 @@ class Analysis:
 
     @cached_property
     def converged(self) -> Any:
-        """Which designs have an operating point in the middle of the common-mode range, (N,) of bool."""
-        return self.point.converged
+        """Which designs have an operating point in the middle of the common-mode range that the law knows, (N,)."""
+        outside = self.outside
+        return self.point.converged if outside is None else self.point.converged & ~outside.any(axis=0)
+
+    @property
+    def why_unsolved(self) -> str:
+        """Why the first design has no measures."""
+        names = [t.name for t in self.wiring.transistors]
+        told = self.circuit.law.why_outside(names, *self.terminals.of_law) if self.point.converged[0] else []
+        return "; ".join(told) or "has no operating point between the rails under these conditions"
+
+    @cached_property
+    def outside(self) -> NDArray[np.bool_] | None:
+        """Which transistors are where their law knows nothing of them, (T, N); None of a law that holds everywhere."""
+        return self.circuit.law.outside(*self.terminals.of_law)
 
     @cached_property
     def terminals(self) -> Terminals:
@@ -118,7 +131,23 @@ class Analysis:
     @cached_property
     def equations(self) -> Equations:
         """The linearised equations with both drives."""
-        return self.circuit.network.equations(self.terminals, self.drain, self.drives)
+        whole = self.circuit.network.equations(self.terminals, self.drain, self.drives)
+        if self.leak is None:
+            return whole
+        unknowns = self.wiring.unknowns
+        moved = np.tensordot(self.wiring.leak_stamp[:, :unknowns], self.leak, 1)
+        pulled = np.tensordot(np.einsum("uae,ak->uke", self.wiring.leak_stamp, self.drives), self.leak, 1)
+        return Equations(whole.residual, whole.matrix + moved, whole.pulls + pulled)
+
+    @cached_property
+    def leak(self) -> Array | None:
+        """The slopes of what flows from drains to the bulk, in the order of the wiring's stamp, (3T, N); None if none.
+
+        It is small beside the current, so that the operating point leaves it in the channel; its slopes are not, where
+        common-mode gains are.
+        """
+        found = self.circuit.law.leak(self.drain, *self.terminals.of_law)
+        return None if found is None else np.concatenate([found.gm, found.gds, found.gms])
 
     @cached_property
     def slopes(self) -> Array:

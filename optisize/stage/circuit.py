@@ -11,7 +11,7 @@ import numpy as np
 from optisize.process.card import Process
 from optisize.process.law import Array, Law, Pick, picked, taken
 from optisize.stage.assembly import Topology
-from optisize.stage.layout import Drawn, draw_transistors, resistor_area, resistor_length
+from optisize.stage.layout import Drawn, draw_transistors, finger_count, resistor_area, resistor_length
 from optisize.stage.network import Network
 from optisize.stage.wiring import Wiring, wiring
 
@@ -96,7 +96,10 @@ class Circuit:
 
     def law_with(self, parameters: Mapping[str, Array]) -> Law:
         """Return the law of the same transistors with other parameters."""
-        return self.process.law_of(parameters, self.width * self.units, self.length, self.conditions.temperature)
+        c = self.conditions
+        fingers = self.drawn.fingers * self.units
+        width = self.width * self.units
+        return self.process.law_of(parameters, width, self.length, c.temperature, c.corner, fingers)
 
     def driven(self, positive: Array, negative: Array) -> Array:
         """Return the voltages of the driven nodes (K, N) for input voltages (N,)."""
@@ -153,7 +156,10 @@ def size_circuit(topology: Topology, process: Process, conditions: Conditions, s
     length = np.array([sizes[f"{x.group}.length"] for x in t])
     units = np.array([sizes[x.units] if x.units else one for x in t])
     channels = [topology.channel(x) for x in t]
-    law, parameters = process.bind_law(channels, width * units, length, conditions.temperature, conditions.corner)
+    even = np.array([[x.even_fingers] for x in t])
+    fingers = finger_count(width, process.grid, even) * units
+    temperature, corner = conditions.temperature, conditions.corner
+    law, parameters = process.bind_law(channels, width * units, length, temperature, corner, fingers)
     ratio = process.resistance_ratio(conditions.temperature, conditions.corner)
     conductances = [1.0 / (sizes[r.size] * ratio) for r in topology.resistors] + [one for _ in topology.controls]
     currents = [topology.polarity * sizes[s.size] for s in topology.sources]

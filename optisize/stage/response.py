@@ -55,6 +55,8 @@ class Response:
         """Return how the residual moves with a drive, (U, N)."""
         a, vector = self.a, self.a.wiring.drive(**DRIVES[drive])
         pull: NDArray[Any] = np.tensordot(a.wiring.conductance_stamp, vector, (1, 0)) @ a.slopes
+        if a.leak is not None:
+            pull = pull + np.tensordot(a.wiring.leak_stamp, vector, (1, 0)) @ a.leak
         if self.frequency:
             stamp = np.tensordot(a.wiring.capacitance_stamp, vector, (1, 0))
             pull = pull + self._jw * (stamp @ a.capacitance_branches)

@@ -107,6 +107,18 @@ class Wiring:
         full[:, :, 3 * t :] = self.fed[:, None] * self.sensed[None]
         return full
 
+    @cached_property
+    def leak_stamp(self) -> Array:
+        """(U, A, 3T): how what flows from drains to the bulk, not to the source, enters the matrix by its slopes."""
+        t = len(self.transistors)
+        full = np.zeros((len(self.nodes), len(self.nodes), 3 * t))
+        for k in range(t):
+            for node, sign in ((self.source[k], 1.0), (self.bulk[k], -1.0)):
+                for kind, terminal, value in ((0, self.gate, 1.0), (1, self.drain, 1.0), (2, self.source, -1.0)):
+                    full[node, terminal[k], kind * t + k] += sign * value
+                    full[node, self.bulk[k], kind * t + k] -= sign * value
+        return full[: self.unknowns]
+
     def _all_capacitances(self) -> Array:
         """Return (A, A, 5T + R + 1): gate to source, drain, bulk; drain and source junctions; resistors; load.
 

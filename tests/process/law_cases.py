@@ -4,21 +4,30 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import NamedTuple
 
 import numpy as np
 
-from optisize.process.card import Channel, built_in_names, load_process, thermal_voltage
+from optisize.process.card import Channel, Process, built_in_names, load_process, thermal_voltage
 from optisize.process.law import Array, Law
-from optisize.process.laws import LAWS
+from tests.process.tables import sampled_process
 
 NOMINAL = 300.15
 UT = float(thermal_voltage(NOMINAL))
 
 
+SAMPLED = "sampled"  # a table of a built-in process
+
+
+@lru_cache
+def process_of(name: str) -> Process:
+    return load_process(sampled_process() if name == SAMPLED else name)
+
+
 @dataclass(frozen=True)
 class Case:
-    """A kind of transistor of a built-in process."""
+    """A kind of transistor of a built-in process, or of a table of one."""
 
     process: str
     channel: Channel
@@ -28,21 +37,21 @@ class Case:
 
     @property
     def law_name(self) -> str:
-        return load_process(self.process).law
+        return process_of(self.process).law
 
     @property
     def parameters(self) -> dict[str, Array]:
-        return load_process(self.process).transistor_arrays([self.channel], NOMINAL, "typical")
+        return process_of(self.process).transistor_arrays([self.channel], NOMINAL, "typical")
 
     def bind(self, width: Array, length: Array, **changes: float) -> Law:
         """Return the law for widths and lengths (T, N), with some parameters changed."""
         parameters: Mapping[str, Array] = self.parameters | {k: np.array([[v]]) for k, v in changes.items()}
-        return LAWS[self.law_name].law.bind(parameters, width, length, np.array([[UT]]))
+        return process_of(self.process).law_of(parameters, width, length, NOMINAL)
 
     def random(self, shape: tuple[int, int] = (3, 400), seed: int = 7) -> Law:
         """Return transistors of random sizes, one for each element of `shape`."""
         rng = np.random.default_rng(seed)
-        shortest = load_process(self.process).grid.minimum_length
+        shortest = process_of(self.process).grid.minimum_length
         return self.bind(shortest * 2000.0 ** rng.random(shape), shortest * 40.0 ** rng.random(shape))
 
 
@@ -53,8 +62,9 @@ def voltages(shape: tuple[int, int] = (3, 400), seed: int = 11) -> tuple[Array, 
     return vg, rng.uniform(-0.2, 1.8, shape), rng.uniform(-0.2, 1.2, shape)
 
 
-CASES = [Case(process, channel) for process in built_in_names() for channel in ("n", "p")]
+CASES = [Case(process, channel) for process in (*built_in_names(), SAMPLED) for channel in ("n", "p")]
 SQUARE_CASES = [case for case in CASES if case.law_name == "square"]
+TABLE_CASES = [case for case in CASES if case.law_name == "table"]
 CHARGE_CASES = [case for case in CASES if case.law_name == "charge"]
 IDEAL_CHARGE = {"early_voltage": 1e15, "vertical_field": 0.0, "critical_field": 1e15}
 
