@@ -32,6 +32,12 @@ class NothingFeasible(OptisizeError):
     lines = True
 
 
+class SimulationFailed(OptisizeError):
+    """The circuit simulator gave no result; the message ends with its own last lines."""
+
+    lines = True
+
+
 def nearest(name: str, allowed: Iterable[str]) -> str:
     """Return a hint ``; did you mean "x"?`` for the allowed name nearest to `name`, or an empty string."""
     close = difflib.get_close_matches(name, list(allowed), n=1, cutoff=0.5)

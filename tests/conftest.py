@@ -4,6 +4,10 @@ parameters that no catalogue has.
 
 from __future__ import annotations
 
+import fcntl
+import os
+import re
+import shlex
 import shutil
 from collections.abc import Callable
 from pathlib import Path
@@ -17,19 +21,59 @@ from optisize.process.law import Array
 from optisize.stage.analysis import Analysis
 from optisize.stage.measures import CATALOGUE, Measure, Parameter, Setting
 from tests.problem.texts import RESISTOR
+from tests.reference.library import open_library
 
 Cli = Callable[..., Result]
+
+
+def readme_command(begin: str) -> list[str]:
+    """Return the words of a command that the README shows, without the program."""
+    text = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8").replace("\\\n", " ")
+    lines = "".join(re.findall(r"```bash\n(.*?)```", text, re.DOTALL)).splitlines()
+    (line,) = (x for x in lines if x.startswith(begin))
+    return shlex.split(line)[1:]
+
+
+def call(*words: str) -> Result:
+    """Call a command: `call("front", "run")`."""
+    return CliRunner().invoke(app, list(words))
 
 
 @pytest.fixture
 def cli(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Cli:
     """Call a command in an empty directory: `cli("front", "run")`."""
     monkeypatch.chdir(tmp_path)
-
-    def call(*words: str) -> Result:
-        return CliRunner().invoke(app, list(words))
-
     return call
+
+
+@pytest.fixture(scope="session")
+def ngspice() -> str:
+    """The path of the circuit simulator; a machine without it skips, but continuous integration has to have it."""
+    path = shutil.which("ngspice")
+    if path is None:
+        reason = "the circuit simulator ngspice is not installed"
+        if os.environ.get("CI") == "true":
+            pytest.fail(reason)
+        pytest.skip(reason)
+    return path
+
+
+@pytest.fixture(scope="session")
+def open_process(ngspice: str, tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The file `process/open.toml` as the README's command makes it of the open library; once for all workers."""
+    library = open_library()
+    base = tmp_path_factory.getbasetemp()
+    place = (base.parent if "PYTEST_XDIST_WORKER" in os.environ else base) / "open-library"
+    place.mkdir(exist_ok=True)
+    path = place / "process" / "open.toml"
+    with open(place / "lock", "w", encoding="ascii") as lock:
+        fcntl.flock(lock, fcntl.LOCK_EX)
+        if not path.exists():
+            words = readme_command("optisize process characterise models/all.spice")
+            places = {"models/all.spice": str(library), "process/open.toml": str(path)}
+            result = call(*(places.get(word, word) for word in words), "--quiet")
+            assert result.exit_code == 0, result.stderr
+    return path
 
 
 @pytest.fixture(scope="session")

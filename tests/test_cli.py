@@ -31,11 +31,14 @@ COMMANDS = (
     "plot",
     "spread",
     "corners",
+    "deck",
+    "resimulate",
     "measures",
     "schema",
     "new",
     "process list",
     "process show",
+    "process characterise",
 )
 COMMAND = Path(sys.executable).with_name("optisize")
 QUICK = ("--population", "40", "--generations", "21", "--no-figures")
@@ -60,7 +63,7 @@ def test_every_command_has_help_with_an_example(cli: Cli, command: str, flag: st
 
 def test_the_list_of_commands_is_that_of_the_tests(cli: Cli) -> None:
     names = {c.name or c.callback.__name__ for c in app.registered_commands if c.callback}
-    assert names | {"process list", "process show"} == set(COMMANDS)
+    assert names | {"process list", "process show", "process characterise"} == set(COMMANDS)
     shown = cli("--help").stdout
     assert all(name.split()[0] in shown for name in COMMANDS)
     assert cli("--version").stdout == f"optisize {optisize.__version__}\n"

@@ -46,6 +46,8 @@ def test_every_command_works(place: Path, monkeypatch: pytest.MonkeyPatch) -> No
     for line in shown:
         program, *arguments = shlex.split(line)
         assert program == "optisize"
+        if ("resimulate" in line or "--resimulated" in line) and shutil.which("ngspice") is None:
+            continue
         result = CliRunner().invoke(app, arguments)
         assert result.exit_code == 0, (line, result.output)
         assert result.stdout.strip(), line
@@ -103,6 +105,14 @@ def test_the_python_lines_work(place: Path) -> None:
     script = f"{code}\nassert len(front) >= 100\n"
     subprocess.run([sys.executable, "-c", script], cwd=place, check=True, timeout=120)
     assert (place / "results" / "from-python" / "front.csv").is_file()
+
+
+def test_other_commands_are_those_that_other_tests_run() -> None:
+    """With a model library at hand, by `open_process` and the closed loop."""
+    lines = [line for block in blocks("bash") for line in block.replace("\\\n", " ").splitlines()]
+    tested = ("optisize process characterise models/all.spice", "optisize search problems/strain-gauge-amplifier.toml")
+    assert all(line.startswith(tested) for line in lines)
+    assert len(lines) == len(tested)
 
 
 def test_the_set_up_lines_are_two_and_whole() -> None:

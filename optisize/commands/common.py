@@ -91,6 +91,10 @@ def common(
 
 ProblemPath = Annotated[Path, typer.Argument(metavar="PROBLEM.toml", help="The problem file.", show_default=False)]
 RunPath = Annotated[Path, typer.Argument(metavar="RUN", help="A run directory.", show_default=False)]
+Simulator = Annotated[
+    str | None,
+    typer.Option("--simulator", help="The circuit simulator; otherwise OPTISIZE_NGSPICE, or ngspice on the PATH."),
+]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON, numbers in SI units.")]
 
 

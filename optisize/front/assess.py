@@ -62,7 +62,7 @@ def assess_sizing(
     values = problem.measure(sizes, names)
     assessed = problem.judge(values)
     if not assessed.solved[0]:
-        raise InputError(f"{name}: has no operating point between the rails under these conditions")
+        raise InputError(f"{name}: {problem.why_unsolved(sizes)}")
     directory = str(against) if against is not None else latest_run_of(problem)
     run = load_run(directory) if directory is not None else None
     better = None

@@ -15,7 +15,7 @@ from optisize.front.table import column, find_column, unit_of
 from optisize.problem.evaluate import TOLERANCE
 from optisize.quantities import QuantityError, read
 
-_CONDITION = re.compile(r"\s*([\w.]+)\s*(>=|<=|>|<|=)\s*(.+?)\s*")
+_CONDITION = re.compile(r"\s*((?:simulated )?[\w.]+)\s*(>=|<=|>|<|=)\s*(.+?)\s*")
 
 
 @dataclass(frozen=True)

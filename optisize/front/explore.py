@@ -128,11 +128,12 @@ def search(
         NothingFeasible: no design meets every limit; the message says which ones stood in the way.
     """
     begin = time.perf_counter()
-    evaluator = Evaluator(problem, threads or os.cpu_count() or 1)
+    wanted = problem.narrowed()
+    evaluator = Evaluator(wanted, threads or os.cpu_count() or 1)
     if settings is None:
         settings = settings_of(problem)
     if state is None:
-        box = survey(problem)
+        box = survey(wanted)
         state = genetic.start(
             evaluator,
             dimensions=problem.space.dimensions,
@@ -146,7 +147,7 @@ def search(
             watch(state)
     state = genetic.run(state, evaluator, on_generation=watch)
     if not state.front.size and state.stopped != "interrupted":
-        raise NothingFeasible(explain_infeasible(problem, state))
+        raise NothingFeasible(explain_infeasible(wanted, state))
     seconds = time.perf_counter() - begin
     return _finished(problem, state, seconds, evaluator.seconds)
 

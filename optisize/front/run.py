@@ -25,7 +25,7 @@ from optisize.problem.load import load_problem
 
 PROBLEM, PROCESS, FRONT, HISTORY, INFO = "problem.toml", "process.toml", "front.csv", "history.csv", "run.json"
 CHECKPOINT = "checkpoint.npz"
-FIGURES = ("trade-offs", "history")  # without their formats
+FIGURES = ("trade-offs", "history", "resimulation")  # without their formats
 COUNTS = ("seed", "population", "generations")  # what run.json has to say to go on
 RECORDS = ("evaluations", "hypervolume", "feasible_share")  # what history.csv has to hold
 
@@ -106,6 +106,13 @@ def _take_over(target: Path, beside: Path) -> None:
             shutil.copytree(found, beside / found.name, symlinks=True)
         elif not own:
             shutil.copy2(found, beside / found.name, follow_symlinks=False)
+
+
+def copy_figures(source: Path, target: Path) -> None:
+    """Copy the figures of a run into the directory that is to take its place."""
+    for found in source.iterdir():
+        if found.stem in FIGURES and found.is_file():
+            shutil.copy2(found, target / found.name)
 
 
 def _exchange(target: Path, beside: Path) -> None:

@@ -186,7 +186,7 @@ def spread(
     """
     matched = Analysis(problem.circuit(sizes))
     if not matched.converged[0]:
-        raise InputError("the sizing has no operating point between the rails under these conditions")
+        raise InputError(f"the sizing: {matched.why_unsolved}")
     wanted = [problem.find(n) for n in dict.fromkeys([*problem.needed, *(OWN if names is None else names)])]
     without_mismatch = [m.at(m.name, dict(m.settings) | {"sigmas": 0.0}) if counts_sigmas(m) else m for m in wanted]
     spread_of = spreads(matched.circuit)

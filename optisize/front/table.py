@@ -21,6 +21,11 @@ def column(name: str, unit: str) -> str:
     return f"{name} [{unit}]" if unit else name
 
 
+def simulated_column(measure: Measure) -> str:
+    """Return the name of the column of a measure as the circuit simulator gives it: ``simulated gain [dB]``."""
+    return column(f"simulated {measure.name}", measure.unit)
+
+
 def units(problem: Problem) -> dict[str, str]:
     """Return the unit of every size and measure of a problem's designs, in the order of the columns."""
     named = {size.name: size.unit for size in problem.topology.sizes}

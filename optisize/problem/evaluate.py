@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 
 import numpy as np
@@ -52,12 +52,20 @@ class Limit:
     Attributes:
         low, high: bounds in the measure's unit; None where open.
         implied: whether the limit is the package's own, not the problem's.
+        margins: how far inside the low and the high bound a search keeps, in the measure's unit.
     """
 
     measure: Measure
     low: float | None
     high: float | None
     implied: bool = False
+    margins: tuple[float, float] = (0.0, 0.0)
+
+    def narrowed(self) -> Limit:
+        """Return the limit that a search keeps, inside by the margins."""
+        low = None if self.low is None else self.low + self.margins[0]
+        high = None if self.high is None else self.high - self.margins[1]
+        return Limit(self.measure, low, high, self.implied)
 
     def violation(self, values: Array) -> Array:
         """Return by how much the limit is missed, (N,): 0 where met.
@@ -155,6 +163,10 @@ class Problem:
         names = [g.measure.name for g in self.goals] + [x.measure.name for x in self.limits]
         return tuple(dict.fromkeys(names))
 
+    def narrowed(self) -> Problem:
+        """Return the problem that is searched: its limits narrowed by their margins."""
+        return replace(self, limits=tuple(limit.narrowed() for limit in self.limits))
+
     def circuit(self, sizes: Mapping[str, Array]) -> Circuit:
         """Return the sized circuit of N sizings, each size (N,)."""
         return size_circuit(self.topology, self.process, self.conditions, sizes)
@@ -185,6 +197,10 @@ class Problem:
         else:
             parts = [part(start) for start in starts]
         return {m.name: np.concatenate([p[i] for p in parts]) for i, m in enumerate(wanted)}
+
+    def why_unsolved(self, sizes: Mapping[str, Array]) -> str:
+        """Return why one sizing has no measures, each size (1,)."""
+        return Analysis(self.circuit(sizes)).why_unsolved
 
     def assess(self, sizes: Mapping[str, Array], threads: int = 1) -> Assessed:
         """Return losses and violations of N sizings, each size (N,)."""

@@ -12,17 +12,17 @@ import numpy as np
 
 from optisize.errors import InputError, listing, nearest, shorten
 from optisize.files import near_file, read_bytes, read_toml, validated
-from optisize.problem.evaluate import Goal, Limit, Problem
+from optisize.problem.evaluate import Problem
 from optisize.problem.own_measures import own_measures
 from optisize.problem.schema import ProblemFile, SizingFile, flatten, read_size
 from optisize.problem.space import SizeRange, SizingSpace
-from optisize.process.card import Process, load_process, locate_process
+from optisize.problem.targets import read_goals, read_limits
+from optisize.process.card import Process, load_process, locate_process, standing_alone
 from optisize.process.law import Array
-from optisize.quantities import QuantityError, read, write
+from optisize.quantities import QuantityError, write
 from optisize.stage.assembly import Topology, build
 from optisize.stage.circuit import Conditions
 from optisize.stage.elements import Size
-from optisize.stage.measures import CATALOGUE, FIGURES, Measure, find
 from optisize.stage.topology import DEGENERATION
 
 
@@ -45,11 +45,14 @@ def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
         _check_corner(file.conditions.corner, process)
         conditions = Conditions(**file.conditions.model_dump())
         _check_conditions(conditions)
+        _check_tabulated(conditions, process)
         _check_output_common_mode(conditions, topology)
-        space = SizingSpace(topology, process, _ranges(file.sizes, topology, process))
+        tabulated = _tabulated(file.lengths, process)
+        ranges = _ranges(file.sizes, SizingSpace(topology, process, (), tabulated))
+        space = SizingSpace(topology, process, ranges, tabulated)
         own = own_measures(file.measures, topology)
-        goals = _goals(file.goals, topology, own)
-        limits = _limits(file.limits, topology, own)
+        goals = read_goals(file.goals, topology, own)
+        limits = read_limits(file.limits, topology, own)
         if not space.dimensions:
             raise InputError("sizes: every size is fixed; free one by giving it two values, or use assess")
     except InputError as error:
@@ -66,14 +69,21 @@ def load_problem(path: str | Path, process_file: Path | None = None) -> Problem:
         limits=limits,
         settings=file.search,
         text=read_bytes(path).decode("utf-8"),
-        process_text=read_bytes(source).decode("utf-8"),
+        process_text=standing_alone(source, process),
         source=str(path),
         own_measures=own,
-        hashes={
-            "problem": hashlib.sha256(read_bytes(path)).hexdigest(),
-            "process": hashlib.sha256(read_bytes(source)).hexdigest(),
-        },
+        hashes=_hashes(path, source, process),
     )
+
+
+def _hashes(path: Path, source: Path, process: Process) -> dict[str, str]:
+    hashes = {
+        name: hashlib.sha256(read_bytes(file)).hexdigest() for name, file in (("problem", path), ("process", source))
+    }
+    if process.table is not None:
+        with process.table.file.open("rb") as file:
+            hashes["table"] = hashlib.file_digest(file, "sha256").hexdigest()
+    return hashes
 
 
 def load_sizing(path: str | Path, problem: Problem) -> dict[str, Array]:
@@ -84,7 +94,7 @@ def load_sizing(path: str | Path, problem: Problem) -> dict[str, Array]:
     path = Path(path)
     file = validated(SizingFile, read_toml(path), str(path))
     try:
-        ranges = _ranges(file.sizes, problem.topology, problem.process)
+        ranges = _ranges(file.sizes, problem.space)
     except InputError as error:
         raise InputError(f"{path}: {error}") from None
     for r in ranges:
@@ -118,6 +128,29 @@ def _check_conditions(conditions: Conditions) -> None:
         )
 
 
+def _check_tabulated(conditions: Conditions, process: Process) -> None:
+    """Raise InputError for a corner, temperature or supply that the tables of the process do not hold."""
+    if process.tables is None:
+        return
+    try:
+        process.tables.find(conditions.corner, conditions.temperature)
+    except InputError as error:
+        raise InputError(f"conditions: {error}") from None
+    highest = process.tables.grids.current.axes[1].high
+    if conditions.supply > highest:
+        raise InputError(
+            f"conditions.supply: found {write(conditions.supply, 'V')}; the tables of the process reach to "
+            f"{write(highest, 'V')}"
+        )
+
+
+def _tabulated(lengths: str, process: Process) -> bool:
+    """Tell whether lengths are only those of the tables; raises InputError when there are no tables."""
+    if lengths == "tabulated" and process.tables is None:
+        raise InputError(f'lengths: found "tabulated", but the process has law "{process.law}", which has no tables')
+    return lengths == "tabulated"
+
+
 def _degenerated(sizes: Mapping[str, Any]) -> bool:
     """Tell whether the sizes ask for resistors under the sources of the pair."""
     inner = sizes.get("input")
@@ -139,8 +172,9 @@ def _check_output_common_mode(conditions: Conditions, topology: Topology) -> Non
         )
 
 
-def _ranges(table: Mapping[str, Any], topology: Topology, process: Process) -> tuple[SizeRange, ...]:
+def _ranges(table: Mapping[str, Any], space: SizingSpace) -> tuple[SizeRange, ...]:
     """Return the range of every size of the stage, in the stage's order."""
+    topology = space.topology
     known = {size.name: size for size in topology.sizes}
     given = flatten(table, lambda name, _: name in known, "sizes")
     for name in given:
@@ -153,15 +187,15 @@ def _ranges(table: Mapping[str, Any], topology: Topology, process: Process) -> t
     if missing:
         what = "is missing" if len(missing) == 1 else f"is missing, and so are {listing(missing[1:])}"
         raise InputError(f"sizes.{missing[0]}: {what}; every size of the stage needs a value or a range")
-    return tuple(_range(size, given[size.name], topology, process) for size in topology.sizes)
+    return tuple(_range(size, given[size.name], space) for size in topology.sizes)
 
 
-def _range(size: Size, value: object, topology: Topology, process: Process) -> SizeRange:
+def _range(size: Size, value: object, space: SizingSpace) -> SizeRange:
     try:
         low, high = read_size(value, size.unit)
     except QuantityError as error:
         raise InputError(f"sizes.{size.name}: {error}") from None
-    smallest, largest = _drawable(size, topology, process)
+    smallest, largest = _drawable(size, space.topology, space.process)
     if low < smallest * (1 - 1e-9) or high > largest * (1 + 1e-9):
         parts = value if isinstance(value, list) else [value]
         bare = size.unit and any(not isinstance(part, str) for part in parts)
@@ -174,7 +208,11 @@ def _range(size: Size, value: object, topology: Topology, process: Process) -> S
     if size.kind == "count" and (low != round(low) or high != round(high)):
         raise InputError(f"sizes.{size.name}: found {shorten(value)}; whole numbers are needed")
     if low < high:
-        low, high = SizingSpace(topology, process, ()).fitted(size, low, high)
+        low, high = space.fitted(size, low, high)
+    allowed = space.lengths(size) if size.kind == "length" else None
+    if allowed is not None and not np.isclose(allowed, low, rtol=1e-9, atol=0.0).any():
+        listed = listing(write(float(x), "m") for x in allowed)
+        raise InputError(f"sizes.{size.name}: found {shorten(value)}; the lengths of the tables are {listed}")
     return SizeRange(size, low, high)
 
 
@@ -190,68 +228,3 @@ def _drawable(size: Size, topology: Topology, process: Process) -> tuple[float, 
     if size.kind == "resistance":
         return process.resistor.sheet_resistance * grid.step / process.resistor.width, 1e12
     return (1.0, 1e5) if size.kind == "count" else (1e-12, 10.0)
-
-
-def _goals(table: Mapping[str, Any], topology: Topology, own: Mapping[str, Measure]) -> tuple[Goal, ...]:
-    goals = []
-    for name, value in flatten(table, lambda name, _: _is_measure(name, topology, own), "goals").items():
-        measure = _find(name, topology, own, "goals")
-        if value not in ("max", "min"):
-            raise InputError(
-                f'goals.{name}: found {shorten(value)}; allowed are "max" and "min"'
-                f"{nearest(str(value).lower()[:3], ('max', 'min'))}"
-            )
-        goals.append(Goal(measure, value))
-    if not goals:
-        raise InputError("goals: there is none; name at least one measure to trade")
-    return tuple(goals)
-
-
-def _is_measure(name: str, topology: Topology, own: Mapping[str, Measure]) -> bool:
-    try:
-        find(name, topology, own)
-    except InputError:
-        return False
-    return True
-
-
-def _find(name: str, topology: Topology, own: Mapping[str, Measure], table: str) -> Measure:
-    """Return the measure that a key of a table names."""
-    if not _is_measure(name, topology, own):
-        known = [*own, *CATALOGUE, *(f"{t.name}.{figure}" for t in topology.transistors for figure in FIGURES)]
-        kind = "a size, not a measure" if name in topology.size_names else "no measure"
-        raise InputError(f'{table}.{name}: {kind}; "optisize measures" lists them{nearest(name, known)}')
-    return find(name, topology, own)
-
-
-def _limits(table: Mapping[str, Any], topology: Topology, own: Mapping[str, Measure]) -> tuple[Limit, ...]:
-    def is_leaf(name: str, value: Any) -> bool:
-        return _is_measure(name, topology, own) or not any(isinstance(part, dict) for part in value.values())
-
-    limits = []
-    for name, bounds in flatten(table, is_leaf, "limits").items():
-        measure = _find(name, topology, own, "limits")
-        if not isinstance(bounds, dict) or not bounds:
-            example = shorten(bounds) if isinstance(bounds, str) else f'"… {measure.unit}"'
-            raise InputError(
-                f"limits.{name}: found {shorten(bounds)}; a table with min, max or both is needed, "
-                f"such as {{ {'min' if measure.better == 'max' else 'max'} = {example} }}"
-            )
-        values = {}
-        for key, value in bounds.items():
-            if key not in ("min", "max"):
-                raise InputError(
-                    f"limits.{name}.{key}: unknown key; allowed are min, max{nearest(key, ('min', 'max'))}"
-                )
-            try:
-                values[key] = read(value, measure.unit)
-            except QuantityError as error:
-                raise InputError(f"limits.{name}.{key}: found {shorten(value)}; {error}") from None
-            if measure.scale == "log" and values[key] <= 0.0:
-                raise InputError(f"limits.{name}.{key}: found {shorten(value)}; a value above zero is needed")
-        if values.get("min", -np.inf) > values.get("max", np.inf):
-            raise InputError(f"limits.{name}: found {shorten(bounds)}; the bounds are inverted: min is above max")
-        limits.append(Limit(measure, values.get("min"), values.get("max")))
-    if not any(limit.measure.name == "headroom" for limit in limits):
-        limits.append(Limit(find("headroom", topology), 0.0, None, implied=True))
-    return tuple(limits)

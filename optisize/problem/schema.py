@@ -16,6 +16,8 @@ from optisize.stage.elements import Form, Piece
 from optisize.stage.measures import Parameter
 from optisize.stage.topology import FORMS, LOADS, STAGE_WORDS, TAILS
 
+LENGTHS = ("grid", "tabulated")
+
 
 @dataclass(frozen=True)
 class OneOf:
@@ -54,9 +56,9 @@ _QUANTITY = {"anyOf": [{"type": "number"}, {"type": "string"}]}
 _RANGE = {"anyOf": [*_QUANTITY["anyOf"], {"type": "array", "items": _QUANTITY, "minItems": 2, "maxItems": 2}]}
 _BOUNDS = {
     "type": "object",
-    "properties": {"min": _QUANTITY, "max": _QUANTITY},
+    "properties": {"min": _QUANTITY, "max": _QUANTITY, "margin": _QUANTITY},
     "additionalProperties": False,
-    "minProperties": 1,
+    "anyOf": [{"required": ["min"]}, {"required": ["max"]}],
 }
 
 
@@ -167,6 +169,11 @@ class ProblemFile(Parameters):
 
     title: Annotated[str, Field(max_length=200, description="what the stage is for")]
     process: Annotated[str, Field(description="a built-in process, or the path of a process file")]
+    lengths: Annotated[
+        str,
+        OneOf(LENGTHS),
+        Field(description="the channel lengths that are searched: on the process grid, or those of its tables only"),
+    ] = "grid"
     stage: StageTable
     conditions: ConditionsTable
     sizes: Annotated[
@@ -192,7 +199,11 @@ class ProblemFile(Parameters):
     limits: Annotated[
         dict[str, Any],
         WithJsonSchema(_named(_BOUNDS)),
-        Field(description='bounds on measures: { min = "…" }, { max = "…" } or both', default_factory=dict),
+        Field(
+            description='bounds on measures: { min = "…" }, { max = "…" } or both; with margin = "…", in the unit of '
+            'the measure or as "1 %" of the bound, a search keeps that far inside',
+            default_factory=dict,
+        ),
     ]
     search: SearchTable = SearchTable()
 

@@ -39,11 +39,16 @@ class SizeRange:
 
 @dataclass(frozen=True)
 class SizingSpace:
-    """All sizes of a stage with their ranges, on the grid of a process."""
+    """All sizes of a stage with their ranges, on the grid of a process.
+
+    Attributes:
+        tabulated: whether channel lengths are only those of the tables of the process.
+    """
 
     topology: Topology
     process: Process
     ranges: tuple[SizeRange, ...]
+    tabulated: bool = False
 
     @cached_property
     def free(self) -> tuple[SizeRange, ...]:
@@ -76,21 +81,40 @@ class SizingSpace:
         if size.kind == "width":
             return snap_width(values, grid, self._even(size))
         if size.kind == "length":
-            return snap_length(values, grid)
+            allowed = self.lengths(size)
+            return snap_length(values, grid) if allowed is None else _nearest(values, allowed)
         if size.kind == "resistance":
             return snap_resistance(values, self.process.resistor, grid)
         if size.kind == "count":
             return np.maximum(np.rint(values), 1.0)
         return round_significant(values, CURRENT_DIGITS)
 
+    def lengths(self, size: Size) -> Array | None:
+        """Return the lengths that a length may have, rising; None where any on the grid will do.
+
+        Raises InputError when the tables have none that is on the grid of every transistor of the group.
+        """
+        tables = self.process.tables
+        if not self.tabulated or tables is None:
+            return None
+        group = size.name.rpartition(".")[0]
+        channels = {self.topology.channel(t) for t in self.topology.transistors if t.group == group}
+        found = [snap_length(tables.sizes[c].lengths, self.process.grid) for c in sorted(channels)]
+        allowed = found[0] if len(found) == 1 else np.intersect1d(found[0], found[1])
+        allowed = np.unique(allowed[allowed <= self.process.grid.maximum_length * (1.0 + 1e-9)])
+        if not len(allowed):
+            raise InputError(f"sizes.{size.name}: no length is in the tables of both channels")
+        return allowed
+
     def neighbours(self, size: Size, value: float) -> tuple[float | None, float | None]:
         """Return the next values of one size below and above one value [SI] that can be drawn or set.
 
         None where there is none: below one unit, below what the process can draw, above its longest channel.
         """
+        allowed = self.lengths(size) if size.kind == "length" else None
         pitch, reach = self._pitch(size, value)
         near: Array = value + pitch * np.arange(-reach, reach + 1.0)
-        found = self.snap(size, near[near > 0.0])
+        found = self.snap(size, near[near > 0.0]) if allowed is None else allowed
         if size.kind == "length":
             found = found[found <= self.process.grid.maximum_length * (1.0 + 1e-9)]
         below, above = found[found < value * (1.0 - 1e-9)], found[found > value * (1.0 + 1e-9)]
@@ -121,12 +145,18 @@ class SizingSpace:
 
         Raises InputError when nothing between them can be drawn.
         """
+        allowed = self.lengths(size) if size.kind == "length" else None
         inward = np.linspace(0.0, 0.15, 3001)  # further than any step of a grid, and finer than any
-        found = np.concatenate([self.snap(size, low * (1.0 + inward)), self.snap(size, high * (1.0 - inward))])
+        found = (
+            allowed
+            if allowed is not None
+            else np.concatenate([self.snap(size, low * (1.0 + inward)), self.snap(size, high * (1.0 - inward))])
+        )
         found = found[(found >= low * (1.0 - 1e-12)) & (found <= high * (1.0 + 1e-12))]
         if not len(found):
             ends = f"{write(low, size.unit)} and {write(high, size.unit)}"
-            raise InputError(f"sizes.{size.name}: nothing between {ends} is on the process grid")
+            where = "on the process grid" if allowed is None else "a length of its tables"
+            raise InputError(f"sizes.{size.name}: nothing between {ends} is {where}")
         return float(found.min()), float(found.max())
 
     def snapped(self, sizes: Mapping[str, Array]) -> dict[str, Array]:
@@ -163,3 +193,8 @@ def round_significant(values: Array, digits: int) -> Array:
     up = 10.0 ** np.maximum(exponent, 0)
     down = 10.0 ** np.maximum(-exponent, 0)
     return np.rint(values * up / down) * down / up
+
+
+def _nearest(values: Array, allowed: Array) -> Array:
+    """Return the nearest of the allowed values, rising, by their ratio."""
+    return allowed[np.searchsorted(np.sqrt(allowed[:-1] * allowed[1:]), values)]

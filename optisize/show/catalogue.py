@@ -82,7 +82,8 @@ def _characteristics(process: Process) -> list[Characteristic]:
 def process_record(process: Process) -> dict[str, Any]:
     """Return a process as plain data: parameters in SI units, and its characteristics."""
     return {
-        **process.model_dump(),
+        **process.model_dump(exclude={"table", "library"}),
+        **(_table_record(process) if process.table or process.library else {}),
         "characteristics": [
             {
                 "channel": c.channel,
@@ -98,9 +99,38 @@ def process_record(process: Process) -> dict[str, Any]:
     }
 
 
+def _table_record(process: Process) -> dict[str, Any]:
+    """Return what there is of tables and library, as plain data."""
+    record: dict[str, Any] = {"table": None, "library": None}
+    if process.library is not None:
+        record["library"] = process.library.model_dump(mode="json")
+    if process.table is not None and process.tables is not None:
+        record["table"] = {
+            "file": str(process.table.file),
+            "conditions": [{"corner": c.corner, "temperature": c.temperature} for c in process.tables.conditions],
+            "lengths": {channel: s.lengths.tolist() for channel, s in process.tables.sizes.items()},
+            "widths": {channel: s.widths.tolist() for channel, s in process.tables.sizes.items()},
+            **process.tables.attributes,
+        }
+    return record
+
+
+def _table_rows(process: Process) -> list[list[str]]:
+    """Return what there is of tables, as rows of the table of parameters."""
+    if process.tables is None:
+        return []
+    conditions = ", ".join(str(c) for c in process.tables.conditions)
+    rows = [["table.conditions", conditions, "corners and temperatures that are tabulated"]]
+    for channel, of in process.tables.sizes.items():
+        for key, values, text in (("lengths", of.lengths, "channel lengths"), ("widths", of.widths, "finger widths")):
+            ends = f"{write(float(values[0]), 'm')} to {write(float(values[-1]), 'm')}, {len(values)} of them"
+            rows.append([f"table.{channel}mos.{key}", ends, f"tabulated {text}"])
+    return rows
+
+
 def print_process(name: str, process: Process) -> None:
     """Print every parameter of a process, and what its transistors can do."""
-    rows = [[f"{p.table}.{p.name}", p.value, p.meaning] for p in parameters(process)]
+    rows = [[f"{p.table}.{p.name}", p.value, p.meaning] for p in parameters(process)] + _table_rows(process)
     print_table(f"{name}: {process.title}; {process.note}", ["parameter", "value", "meaning"], rows, left=3)
     shown = []
     for c in _characteristics(process):

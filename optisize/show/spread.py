@@ -25,17 +25,17 @@ BAR_BINS = 24
 
 
 class Counter(StatusLine):
-    """Shows how many samples are done, once it takes longer than two seconds."""
+    """Shows how many samples, or other things, are done, once it takes longer than two seconds."""
 
-    def __init__(self, samples: int, quiet: bool) -> None:
+    def __init__(self, samples: int, quiet: bool, words: str = "samples") -> None:
         """Prepare for a number of samples."""
         super().__init__(quiet, patience=2.0)
-        self._samples = samples
+        self._samples, self._words = samples, words
 
     def __call__(self, done: int) -> None:
         """Show the number, if it is time to."""
         if self.due:
-            self.show(f"samples {done}/{self._samples}")
+            self.show(f"{self._words} {done}/{self._samples}")
 
 
 def bars(found: Distribution, bins: int = BAR_BINS) -> str:

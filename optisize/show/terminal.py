@@ -19,7 +19,7 @@ from optisize.evolution.state import State
 from optisize.front.assess import Assessment
 from optisize.front.run import Run
 from optisize.front.summary import Binding, Extreme
-from optisize.front.table import column, unit_of
+from optisize.front.table import column, simulated_column, unit_of
 from optisize.problem.evaluate import Problem
 from optisize.problem.own_measures import label
 from optisize.quantities import write
@@ -152,14 +152,17 @@ def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Bindin
 
 
 def print_front(run: Run, table: pd.DataFrame) -> None:
-    """Print designs: the goals first, then the sizes, then the limits, then other measures that the problem names."""
+    """Print designs: goals first, also as simulated, then sizes, limits, and other measures that the problem names."""
     problem = run.problem
     goals = [column(g.measure.name, g.measure.unit) for g in problem.goals]
+    simulated = [
+        c for c in (simulated_column(g.measure) for g in problem.goals) if c in table and table[c].notna().any()
+    ]
     sizes = [column(s.name, s.unit) for s in problem.topology.sizes]
     free = [column(r.size.name, r.size.unit) for r in problem.space.free]
     limits = [column(x.measure.name, x.measure.unit) for x in problem.limits]
     own = [c for c in (column(m.name, m.unit) for m in problem.own_measures.values()) if c in table]
-    chosen = list(dict.fromkeys(["design", *goals, *(c for c in sizes if c in free), *limits, *own]))
+    chosen = list(dict.fromkeys(["design", *goals, *simulated, *(c for c in sizes if c in free), *limits, *own]))
     headings = [c.split(" [")[0] for c in chosen]
     rows = [
         [str(int(row["design"]))] + [write(float(row[c]), unit_of(c)) for c in chosen[1:]]

@@ -50,7 +50,8 @@ from tests.benchmarks.searching import against_stock
 from tests.benchmarks.timing import least
 
 HERE = Path(__file__).resolve().parents[2]
-PROBLEMS = sorted((HERE / "problems").glob("*.toml"))
+OWN_MODELS = {"strain-gauge-amplifier"}  # its process has to be made first, see `tables`
+PROBLEMS = [p for p in sorted((HERE / "problems").glob("*.toml")) if p.stem not in OWN_MODELS]
 PROBLEM = HERE / "problems" / "thermopile-preamplifier.toml"
 FOUR_KINDS = KINDS[:2]
 SHORTER = {"hydrophone-recorder": 60, "low-supply-telescopic": 60}  # generations; their designs take longest

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import numpy as np
 import pytest
 
 from optisize.problem.load import load_problem
-from tests.benchmarks import evaluation, sampling, searching, speed
+from optisize.simulator.ngspice import find_simulator, run
+from tests.benchmarks import evaluation, sampling, searching, speed, tables
 from tests.benchmarks.catalogue import LEFT_OUT, CatalogueScript
 from tests.benchmarks.scripts import Script
 from tests.reference.samples import Kind
@@ -63,6 +66,21 @@ def test_against_stock() -> None:
     found = searching.against_stock(load_problem(speed.PROBLEM), [1], population=24, generations=6)
     assert found["ratio"] > 0.0
     assert 0.0 < found["share"] < 1.0
+
+
+def test_tables(open_process: Path) -> None:
+    """Both searches run, and the simulator has the currents of designs that are altered in place."""
+    problem = load_problem(tables.PROBLEM, open_process)
+    found = tables.against_charge(tables.PROBLEM, open_process, repeats=1, population=24, generations=6)
+    assert found["ratio"] > 0.0
+    assert tables.against_simulator(problem, designs=40, simulated=4, repeats=1)["ratio"] > 1.0
+    sizes = tables.feasible(problem, 20)
+    script = tables.TableScript(problem, sizes)
+    lines = [command for k in range(20) for command in (*script.alterations(k), "op", "print i(vsupply)")]
+    deck = [*script.deck, ".control", "set num_threads=1", *lines, "quit", ".endc", ".end"]
+    said = run(find_simulator(), open_process.parent, deck)
+    currents = [-float(line.split("=")[1]) for line in said.splitlines() if line.startswith("i(vsupply)")]
+    np.testing.assert_allclose(currents, problem.measure(sizes, ["supply_current"])["supply_current"], rtol=0.01)
 
 
 def test_scaling() -> None:

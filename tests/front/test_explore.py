@@ -137,6 +137,18 @@ def test_limits_that_bind_are_named_with_their_share(problem: Problem) -> None:
     assert list(found.values()) == sorted(found.values(), reverse=True)
 
 
+def test_a_search_keeps_the_margins_and_the_problem_its_bounds(tmp_path: Path) -> None:
+    edits = {"bandwidth": 'bandwidth = { min = "1 MHz", margin = "10 %" }'}
+    edits["output_swing"] = 'output_swing = { min = "0.6 V", margin = "0.1 V" }'
+    edits["power"] = 'power = { max = "60 uW", margin = "50 %" }'
+    problem = loaded(tmp_path, changed(RESISTOR, *edits.items()))
+    run = explore.search(problem)
+    assert run.front["bandwidth [Hz]"].min() >= 1.1e6 * (1.0 - 1e-9)
+    assert run.front["output_swing [V]"].min() >= 0.7 - 1e-9
+    assert run.front["power [W]"].max() <= 30e-6 * (1.0 + 1e-9)
+    assert {limit.measure.name: limit.low for limit in run.problem.limits}["bandwidth"] == 1e6
+
+
 def test_nothing_feasible_names_the_limits_and_how_near_the_best_design_came(tmp_path: Path) -> None:
     text = changed(RESISTOR, ("bandwidth", 'bandwidth = { min = "1 GHz" }'), ("area", 'area = { max = "1 mm^2" }'))
     with pytest.raises(NothingFeasible) as caught:

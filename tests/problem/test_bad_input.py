@@ -42,6 +42,23 @@ CASES = {
     "limit deep": (("bandwidth", "bandwidth = { min = { value = 1 } }"), ["limits.bandwidth.min", '"value"']),
     "limit negative": (("bandwidth", 'bandwidth = { min = "-1 MHz" }'), ["limits.bandwidth.min", "above zero"]),
     "limit inverted": (("bandwidth", "bandwidth = { min = 2, max = 1 }"), ["limits.bandwidth", "inverted"]),
+    "limit margin alone": (("bandwidth", 'bandwidth = { margin = "1 %" }'), ["limits.bandwidth", "min"]),
+    "limit margin unit": (
+        ("bandwidth", 'bandwidth = { min = "1 MHz", margin = "1 mV" }'),
+        ["limits.bandwidth.margin", '"1 mV"', '"1 MHz"'],
+    ),
+    "limit margin too wide": (
+        ("bandwidth", 'bandwidth = { min = "1 MHz", margin = "100 %" }'),
+        ["limits.bandwidth.margin", '"100 %"', "less than the bound"],
+    ),
+    "limit margin negative": (
+        ("headroom", 'headroom = { min = "50 mV", margin = "-1 mV" }'),
+        ["limits.headroom.margin", '"-1 mV"', "zero"],
+    ),
+    "limit margin leaves nothing": (
+        ("headroom", 'headroom = { min = "50 mV", max = "60 mV", margin = "6 mV" }'),
+        ["limits.headroom.margin", '"6 mV"', "nothing between"],
+    ),
     "limit unit": (("bandwidth", 'bandwidth = { min = "1 V" }'), ["limits.bandwidth.min", '"1 V"', '"1 MHz"']),
     "limit ratio": (("bandwidth", 'gain = { min = "100" }'), ["limits.gain.min", "no unit", '"40 dB"']),
     "limit prefix": (("bandwidth", 'bandwidth = { min = "1 mhz" }'), ["limits.bandwidth.min", "mhz", '"1 MHz"']),
