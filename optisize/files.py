@@ -172,6 +172,12 @@ def _table(model: type[BaseModel], location: Sequence[str]) -> type[BaseModel]:
     return current if isinstance(current, type) and issubclass(current, BaseModel) else model
 
 
+def quoted(text: str) -> str:
+    """Return a text as TOML writes it."""
+    escaped = text.replace("\\", "\\\\").replace('"', '\\"')
+    return f'"{"".join(c if c.isprintable() else "?" for c in escaped)}"'
+
+
 def write_text(path: Path, text: str) -> None:
     """Write a text file whole or not at all: beside first, then renamed.
 

@@ -29,6 +29,7 @@ COMMANDS = (
     "front",
     "assess",
     "plot",
+    "choose",
     "spread",
     "corners",
     "deck",

@@ -53,29 +53,23 @@ def assess(
     ] = False,
     as_json: Json = False,
 ) -> None:
-    """Assess a manual sizing: its measures, its limits, and the designs of a front that beat it."""
+    """Assess a manual sizing: its measures, its limits, the designs of a front that beat it, and the first moves."""
     from optisize.front.assess import assess_sizing
     from optisize.front.sensitivity import sensitivity as sensitivity_of
     from optisize.problem.load import load_problem, load_sizing
+    from optisize.show.assessment import assessment_record, print_assessment
     from optisize.show.sensitivity import print_sensitivity, sensitivity_record
-    from optisize.show.terminal import json_number, print_assessment, print_caution
+    from optisize.show.terminal import print_caution
 
     loaded = load_problem(problem)
     sizes = load_sizing(sizing, loaded)
     report = assess_sizing(loaded, sizes, against, str(sizing))
     found = sensitivity_of(loaded, sizes) if sensitivity else None
     if as_json:
-        data = {
-            "sizes": report.sizes,
-            "measures": {k: json_number(v) for k, v in report.measures.items()},
-            "limits": [{**row, "value": json_number(row["value"])} for row in report.limits],
-            "feasible": report.feasible,
-            "against": report.against,
-            "dominated_by": report.dominated_by,
-        }
+        data = assessment_record(report)
         print_json(data if found is None else {**data, "sensitivity": sensitivity_record(loaded, found)})
         return
-    print_assessment(loaded, report)
+    print_assessment(report)
     if found is not None:
         print_sensitivity(loaded, found)
     print_caution()

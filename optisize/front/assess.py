@@ -1,4 +1,4 @@
-"""A manual sizing: its measures, its operating point, its limits, and the designs of a front that beat it."""
+"""A manual sizing beside the designs of a front: which beat it, the nearest of them, and the first moves towards it."""
 
 from __future__ import annotations
 
@@ -7,16 +7,16 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import pandas as pd
+import numpy as np
 
 from optisize.errors import InputError
+from optisize.front.card import Card, card
 from optisize.front.compare import Better, dominating, latest_run_of
-from optisize.front.run import load_run
-from optisize.front.table import measure_names
+from optisize.front.moves import Target, moves_towards_nearest
+from optisize.front.run import Run, load_run
 from optisize.problem.evaluate import Problem
 from optisize.problem.own_measures import origin
 from optisize.process.law import Array
-from optisize.stage.measures import FIGURES
 
 
 @dataclass(frozen=True)
@@ -24,21 +24,17 @@ class Assessment:
     """What is known of one sizing.
 
     Attributes:
-        sizes, measures: SI values by name; the figures of each transistor are named like ``input.p.gm``.
-        limits: for each bound its name, kind, bound, unit, value, whether it is implied rather than stated, and met.
-        feasible: whether all are met.
+        card: its measures against limits, how it is drawn, its operating point.
         against: the run that it was compared with; None where there is none.
-        better: the designs of that run that beat it; None where there is no run.
+        better: the designs of that run that beat it, the furthest ahead first; None where there is no run.
+        nearest: the one of them whose sizes are nearest, and the moves towards it; None where none beats it, and where
+            none does of this very problem: the run is of another stage, or was searched under other conditions.
     """
 
-    sizes: dict[str, float]
-    measures: dict[str, float]
-    transistors: tuple[str, ...]
-    limits: list[dict[str, Any]]
-    feasible: bool
+    card: Card
     against: str | None
     better: list[Better] | None
-    front: pd.DataFrame | None
+    nearest: Target | None = None
 
     @property
     def dominated_by(self) -> list[dict[str, Any]] | None:
@@ -46,6 +42,14 @@ class Assessment:
         if self.better is None:
             return None
         return [{"design": b.design, "better_by": b.gains} for b in self.better]
+
+    @property
+    def left_on_the_table(self) -> dict[str, float] | None:
+        """How much better each goal can be on the front without losing in any other [the measure's unit]."""
+        if self.better is None:
+            return None
+        goals = [g.measure.name for g in self.card.problem.goals]
+        return {name: max((b.gains[name] for b in self.better), default=0.0) for name in goals}
 
 
 def assess_sizing(
@@ -55,53 +59,27 @@ def assess_sizing(
 
     A message calls the sizing by its `name`.
 
-    Raises InputError when the sizing has no operating point, or the run has other goals or another stage.
+    Raises InputError when the sizing has no operating point, or the run has other goals.
     """
-    transistors = tuple(t.name for t in problem.topology.transistors)
-    names = [*measure_names(problem), *(f"{t}.{figure}" for t in transistors for figure in FIGURES)]
-    values = problem.measure(sizes, names)
-    assessed = problem.judge(values)
-    if not assessed.solved[0]:
-        raise InputError(f"{name}: {problem.why_unsolved(sizes)}")
+    own = card(problem, sizes, name)
     directory = str(against) if against is not None else latest_run_of(problem)
-    run = load_run(directory) if directory is not None else None
-    better = None
-    if run is not None:
-        if _goals(problem) != _goals(run.problem):
-            raise InputError(f"{directory}: was searched for other goals than this problem's")
-        better = dominating(problem, values, run.front)
-    return Assessment(
-        sizes={name: float(v[0]) for name, v in sizes.items()},
-        measures={name: float(v[0]) for name, v in values.items()},
-        transistors=transistors,
-        limits=_limit_rows(problem, values),
-        feasible=bool((assessed.violations[:, 0] <= 1e-9).all()),
-        against=directory,
-        better=better,
-        front=None if run is None else run.front,
-    )
+    if directory is None:
+        return Assessment(own, None, None)
+    run = load_run(directory)
+    if _goals(problem) != _goals(run.problem):
+        raise InputError(f"{directory}: was searched for other goals than this problem's")
+    figures = {g.measure.name: np.array([own.measures[g.measure.name]]) for g in problem.goals}
+    better = dominating(problem, figures, run.front)
+    return Assessment(own, directory, better, _nearest(problem, sizes, run, better))
+
+
+def _nearest(problem: Problem, sizes: Mapping[str, Array], run: Run, better: list[Better]) -> Target | None:
+    """Return the nearest of the designs that beat a sizing, if they are of the same stage."""
+    if not better or problem.topology.size_names != run.problem.topology.size_names:
+        return None
+    return moves_towards_nearest(problem, sizes, run.front, [b.design for b in better])
 
 
 def _goals(problem: Problem) -> set[tuple[object, ...]]:
     """Return what tells the goals of one problem from another's: name, measure, settings and sense."""
     return {(g.measure.name, origin(g.measure), tuple(g.measure.taken_at.items()), g.sense) for g in problem.goals}
-
-
-def _limit_rows(problem: Problem, values: Mapping[str, Array]) -> list[dict[str, Any]]:
-    rows = []
-    for limit in problem.limits:
-        m = limit.measure
-        for kind, bound in limit.bounds:
-            alone = type(limit)(m, *((bound, None) if kind == "min" else (None, bound)))
-            rows.append(
-                {
-                    "name": m.name,
-                    "kind": kind,
-                    "bound": bound,
-                    "unit": m.unit,
-                    "value": float(values[m.name][0]),
-                    "implied": limit.implied,
-                    "met": bool(alone.met(values[m.name])[0]),
-                }
-            )
-    return rows

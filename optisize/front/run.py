@@ -8,10 +8,10 @@ import os
 import shutil
 import tempfile
 import zipfile
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
@@ -22,6 +22,9 @@ from optisize.files import near_file, read_bytes
 from optisize.front.table import UNLIMITED, column, to_csv, units
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_problem
+
+if TYPE_CHECKING:
+    from optisize.front.choice import Choice
 
 PROBLEM, PROCESS, FRONT, HISTORY, INFO = "problem.toml", "process.toml", "front.csv", "history.csv", "run.json"
 CHECKPOINT = "checkpoint.npz"
@@ -87,6 +90,35 @@ class Run:
             raise OptisizeError(f"{target}: cannot be written: {error.strerror or error}") from None
         self.path = target
         return target
+
+    def choose(
+        self,
+        *,
+        least: str | None = None,
+        most: str | None = None,
+        where: Sequence[str] = (),
+        wishes: Mapping[str, str | float] | None = None,
+        knee: bool = False,
+    ) -> Choice:
+        """Return one design of the front for a wish, with the reason and its neighbours; see `front.wish.choose`.
+
+        ``run.choose(least="supply_current", where=["gain>=20 dB"])``, ``run.choose(wishes={"gain": "20 dB"})``, or the
+        knee of the front where nothing is asked.
+        """
+        from optisize.front.wish import choose
+
+        return choose(self, least=least, most=most, where=where, wishes=wishes, knee=knee)
+
+    def short_list(self, count: int, where: Sequence[str] = ()) -> pd.DataFrame:
+        """Return a few designs, well spread over the front and with its extremes; see `front.wish.short_list`."""
+        from optisize.front.wish import short_list
+
+        return short_list(self, count, where).front
+
+    def _repr_html_(self) -> str:
+        from optisize.front.notebook import run_html
+
+        return run_html(self)
 
     def _write(self, directory: Path) -> None:
         (directory / PROBLEM).write_text(self.problem.text, encoding="utf-8")

@@ -16,12 +16,9 @@ from rich.table import Table
 
 from optisize.errors import printable
 from optisize.evolution.state import State
-from optisize.front.assess import Assessment
 from optisize.front.run import Run
 from optisize.front.summary import Binding, Extreme
 from optisize.front.table import column, simulated_column, unit_of
-from optisize.problem.evaluate import Problem
-from optisize.problem.own_measures import label
 from optisize.quantities import write
 
 CAUTION = "A starting point for your simulator, not a sign-off: layout, reliability and ESD need the foundry's models."
@@ -171,59 +168,9 @@ def print_front(run: Run, table: pd.DataFrame) -> None:
     print_table(f"{problem.title}: {len(table)} of {len(run.front)} designs", headings, rows, left=0)
 
 
-_SHOWN = {"id": "A", "vgs": "V", "vds": "V", "vdsat": "V", "gm": "S", "gds": "S", "inversion": ""}
-
-
-def print_assessment(problem: Problem, report: Assessment) -> None:
-    """Print a manual sizing: its measures, its operating point, its limits, and the front designs that beat it."""
-    units = {s.name: s.unit for s in problem.topology.sizes}
-    print_table(
-        "sizes, on the process grid", ["size", "value"], [[n, write(v, units[n])] for n, v in report.sizes.items()]
-    )
-    measures = [(problem.find(name), value) for name, value in report.measures.items() if "." not in name]
-    print_table("\nmeasures", ["measure", "value"], [[label(m), write(v, m.unit)] for m, v in measures])
-    rows = [
-        [t, *(write(report.measures[f"{t}.{figure}"], unit, 3) for figure, unit in _SHOWN.items())]
-        for t in report.transistors
-    ]
-    print_table("\noperating point", ["transistor", *_SHOWN], rows)
-    rows = [
-        [
-            x["name"],
-            f"{x['kind']} {write(x['bound'], x['unit'])}{' (implied)' if x['implied'] else ''}",
-            write(x["value"], x["unit"]),
-            "met" if x["met"] else "MISSED",
-        ]
-        for x in report.limits
-    ]
-    print_table("\nlimits", ["limit", "bound", "value", ""], rows)
-    _print_better(problem, report)
-
-
 def print_caution() -> None:
     """Print what no figure here replaces."""
     console().print(CAUTION)
-
-
-def _print_better(problem: Problem, report: Assessment) -> None:
-    out = console()
-    if report.better is None:
-        out.print("\nno run of this problem to compare with: search it first, or name one with --against")
-        return
-    if not report.better:
-        out.print(f"\nno design of {escape(str(report.against))} beats this sizing in its goals")
-        return
-    goals = [(g.measure.name, g.measure.unit) for g in problem.goals]
-    rows = [[str(b.design), *(_gain(b.gains[name], unit) for name, unit in goals)] for b in report.better[:10]]
-    print_table(
-        f"\n{len(report.better)} designs of {report.against} beat this sizing; the furthest ahead",
-        ["design", *(name for name, _ in goals)],
-        rows,
-    )
-
-
-def _gain(value: float, unit: str) -> str:
-    return "as good" if value == 0.0 else f"better by {write(value, unit, 3)}"
 
 
 def json_number(value: float) -> float | str | None:

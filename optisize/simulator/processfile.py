@@ -7,6 +7,7 @@ import os
 import re
 from pathlib import Path
 
+from optisize.files import quoted
 from optisize.process.library import Library, LibraryDevice
 from optisize.process.tabulated import CHANNELS, Tables
 from optisize.quantities import write
@@ -50,12 +51,6 @@ maximum_finger = "{maximum_finger}"
 diffusion      = "{diffusion}"              # FILL IN: drawn length of a contacted source or drain
 spacing_factor = 1.5
 {corners}"""
-
-
-def quoted(text: str) -> str:
-    """Return a text as TOML writes it."""
-    escaped = text.replace("\\", "\\\\").replace('"', '\\"')
-    return f'"{"".join(c if c.isprintable() else "?" for c in escaped)}"'
 
 
 def _key(name: str) -> str:

@@ -147,6 +147,11 @@ def _current_source(name: str, drain: str) -> Transistor:
     return Transistor(name, drain, "load_gate", "load_rail", "opposite", "load", "load.units", even_fingers=True)
 
 
+_LOAD_BIAS = Transistor(
+    "load.bias", "load_bias", "load_bias", "load_rail", "opposite", "load", saturates=False, even_fingers=True
+)  # of fingers like those of its mirror
+
+
 LOADS: dict[str, LoadKind] = {
     "resistor": LoadKind(
         summary="a resistor from each drain to the rail",
@@ -198,7 +203,7 @@ LOADS: dict[str, LoadKind] = {
             Transistor(
                 "load.n", "right", "load_gate", "load_rail", "opposite", "load", "load.units", even_fingers=True
             ),
-            Transistor("load.bias", "load_bias", "load_bias", "load_rail", "opposite", "load", saturates=False),
+            _LOAD_BIAS,
         ),
         sources=(CurrentSource("load.bias", "load_bias", "tail_rail", "bias.current"),),
         controls=(Control("load", "load_gate", ("left", "right")),),

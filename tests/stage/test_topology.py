@@ -204,6 +204,8 @@ def test_every_kind_is_complete(input: str, form: str, load: str, tail: str, out
     assert all(size.meaning for size in top.sizes)
     names = [x.name for x in (*top.transistors, *top.controls)]
     assert len(set(names)) == len(names)
+    # The units of a group are drawn alike, so all of them have an even number of fingers or none has.
+    assert len({(t.group, t.even_fingers) for t in top.transistors}) == len({t.group for t in top.transistors})
 
 
 @pytest.mark.parametrize(("input", "form", "load", "tail", "output"), ALL)
