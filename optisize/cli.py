@@ -6,10 +6,10 @@ from optisize.commands.common import app
 
 # The order of the help: first the main job.
 # isort: off
-from optisize.commands import search, designs, choose, mismatch, simulate, reference, characterise
+from optisize.commands import search, designs, choose, mismatch, sheet, simulate, reference, characterise
 # isort: on
 
-__all__ = ["app", "characterise", "choose", "designs", "main", "mismatch", "reference", "search", "simulate"]
+__all__ = ["app", "characterise", "choose", "designs", "main", "mismatch", "reference", "search", "sheet", "simulate"]
 
 
 def main() -> None:

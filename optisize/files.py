@@ -183,11 +183,19 @@ def write_text(path: Path, text: str) -> None:
 
     Raises OptisizeError when it cannot be written.
     """
+    write_bytes(path, text.encode("utf-8"))
+
+
+def write_bytes(path: Path, data: bytes) -> None:
+    """Write a file whole or not at all: beside first, then renamed.
+
+    Raises OptisizeError when it cannot be written.
+    """
     try:
         handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
         try:
-            with os.fdopen(handle, "w", encoding="utf-8") as file:
-                file.write(text)
+            with os.fdopen(handle, "wb") as file:
+                file.write(data)
             os.chmod(name, 0o644)
             os.replace(name, path)
         except BaseException:

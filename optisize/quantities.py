@@ -187,7 +187,13 @@ def written(unit: str) -> str:
 def write_in(value: float, unit: str, digits: int = 4) -> str:
     """Return a number in exactly the unit given, without choosing a prefix: ``8.5 fF/um^2``."""
     figure = value / _parse_unit(unit)[0] if unit else value
-    return f"{figure:.{digits}g} {unit}".strip()
+    return f"{_without_exponent(figure, digits)} {unit}".strip()
+
+
+def _without_exponent(figure: float, digits: int) -> str:
+    """Return a rounded number, 40000 as it is and not as 4e+04."""
+    text = f"{figure:.{digits}g}"
+    return f"{float(text):.0f}" if "e+" in text and abs(figure) < 1e9 else text
 
 
 @dataclass(frozen=True)

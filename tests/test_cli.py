@@ -32,6 +32,7 @@ COMMANDS = (
     "choose",
     "spread",
     "corners",
+    "sheet",
     "deck",
     "resimulate",
     "measures",

@@ -200,3 +200,9 @@ def _units_of(schema: object) -> set[str]:
 @pytest.mark.parametrize("unit", sorted(_units_of([m.model_json_schema() for m in (ProblemFile, Process)])))
 def test_every_unit_of_the_schemas_can_be_written_in_a_file(unit: str) -> None:
     assert read(f"2 {'' if unit == '1' else unit}", "" if unit == "1" else unit) > 0.0
+
+
+def test_a_large_area_is_written_without_an_exponent() -> None:
+    assert write(4e-8, "m^2") == "40000 um^2"
+    assert write(1.23456e-7, "m^2") == "123500 um^2"
+    assert write(9.9996e-9, "m^2") == "10000 um^2"
