@@ -6,10 +6,24 @@ from optisize.commands.common import app
 
 # The order of the help: first the main job.
 # isort: off
-from optisize.commands import search, designs, choose, mismatch, sheet, simulate, reference, characterise
+from optisize.commands import search, choose, designs, figures, compare, mismatch, sheet, simulate, reference
+from optisize.commands import characterise
 # isort: on
 
-__all__ = ["app", "characterise", "choose", "designs", "main", "mismatch", "reference", "search", "sheet", "simulate"]
+__all__ = [
+    "app",
+    "characterise",
+    "choose",
+    "compare",
+    "designs",
+    "figures",
+    "main",
+    "mismatch",
+    "reference",
+    "search",
+    "sheet",
+    "simulate",
+]
 
 
 def main() -> None:

@@ -30,6 +30,7 @@ COMMANDS = (
     "assess",
     "plot",
     "choose",
+    "compare",
     "spread",
     "corners",
     "sheet",

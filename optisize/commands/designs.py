@@ -1,4 +1,4 @@
-"""Designs of a run, and sizings by hand: tables, assessment, figures."""
+"""Designs of a run, and sizings by hand: tables and assessment."""
 
 from __future__ import annotations
 
@@ -8,7 +8,7 @@ from typing import Annotated
 import typer
 
 from optisize.commands.common import Json, ProblemPath, RunPath, app, guarded, print_json
-from optisize.errors import InputError, nearest
+from optisize.errors import InputError
 
 
 @app.command(epilog='Example: optisize front results/sample --where "gain>=20 dB" --sort supply_current')
@@ -73,26 +73,3 @@ def assess(
     if found is not None:
         print_sensitivity(loaded, found)
     print_caution()
-
-
-@app.command(epilog="Example: optisize plot results/sample --format svg")
-@guarded
-def plot(
-    run: RunPath,
-    to: Annotated[Path | None, typer.Option("--to", help="A directory; that of the run otherwise.")] = None,
-    formats: Annotated[list[str] | None, typer.Option("--format", help="png, svg or pdf; may be repeated.")] = None,
-    dpi: Annotated[int, typer.Option(min=50, max=1200, help="Dots per inch of a png.")] = 150,
-) -> None:
-    """Draw the trade-offs between the goals and the history of the search."""
-    from optisize.front.run import load_run
-    from optisize.show.plots import FORMATS, write_figures
-
-    for kind in formats or []:
-        if kind not in FORMATS:
-            raise InputError(f'--format: found "{kind}"; allowed are {", ".join(FORMATS)}{nearest(kind, FORMATS)}')
-    loaded = load_run(run)
-    directory = to or run
-    if not directory.is_dir():
-        raise InputError(f"{directory}: there is no such directory")
-    for path in write_figures(loaded, directory, formats or ["png"], dpi):
-        typer.echo(str(path))

@@ -36,10 +36,11 @@ def spread(
     from optisize.front.pick import pick
     from optisize.front.spread import OWN, check_measures
     from optisize.front.spread import spread as spread_of
-    from optisize.show.spread import Counter, check_figure, draw_spread, print_spread, spread_record
+    from optisize.show.plots import check_figure, write_one
+    from optisize.show.spread import Counter, draw_spread, print_spread, spread_record
 
     if figure is not None:
-        check_figure(figure)
+        check_figure("--figure", figure)
     picked = pick(run, design, sizing)
     check_measures(picked.problem, measure or ())
     with Counter(samples, quiet) as watch:
@@ -53,7 +54,7 @@ def spread(
             watch=watch,
         )
     if figure is not None:
-        draw_spread(found, picked.label, figure)
+        write_one(draw_spread(found, picked.label), figure)
     print_json(spread_record(found)) if as_json else print_spread(found, picked.label)
 
 

@@ -133,7 +133,7 @@ def _finish(
 
     def draw(directory: Path) -> None:
         """Draw the figures; a run without them is better than none."""
-        from optisize.show.plots import write_figures
+        from optisize.show.figures import write_figures
 
         try:
             write_figures(run, directory)

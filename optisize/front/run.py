@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import json
 import os
+import re
 import shutil
 import tempfile
 import zipfile
@@ -28,7 +29,8 @@ if TYPE_CHECKING:
 
 PROBLEM, PROCESS, FRONT, HISTORY, INFO = "problem.toml", "process.toml", "front.csv", "history.csv", "run.json"
 CHECKPOINT = "checkpoint.npz"
-FIGURES = ("trade-offs", "history", "resimulation")  # without their formats
+FIGURES = ("trade-offs", "parallel", "history", "resimulation")  # without their formats
+OF_A_DESIGN = re.compile(r"mismatch-\d+")  # likewise, of one design of the front
 COUNTS = ("seed", "population", "generations")  # what run.json has to say to go on
 RECORDS = ("evaluations", "hypervolume", "feasible_share")  # what history.csv has to hold
 
@@ -133,7 +135,7 @@ class Run:
 def _take_over(target: Path, beside: Path) -> None:
     """Copy what others have put into a run directory, but no older part of the run itself."""
     for found in target.iterdir():
-        own = found.name in (PROBLEM, PROCESS, FRONT, HISTORY, INFO, CHECKPOINT) or found.stem in FIGURES
+        own = found.name in (PROBLEM, PROCESS, FRONT, HISTORY, INFO, CHECKPOINT) or _is_figure(found)
         if not own and found.is_dir():
             shutil.copytree(found, beside / found.name, symlinks=True)
         elif not own:
@@ -143,8 +145,13 @@ def _take_over(target: Path, beside: Path) -> None:
 def copy_figures(source: Path, target: Path) -> None:
     """Copy the figures of a run into the directory that is to take its place."""
     for found in source.iterdir():
-        if found.stem in FIGURES and found.is_file():
+        if _is_figure(found) and found.is_file():
             shutil.copy2(found, target / found.name)
+
+
+def _is_figure(path: Path) -> bool:
+    """Tell whether a file of a run directory is a figure of the run, which a changed front makes out of date."""
+    return path.stem in FIGURES or OF_A_DESIGN.fullmatch(path.stem) is not None
 
 
 def _exchange(target: Path, beside: Path) -> None:

@@ -1,4 +1,7 @@
-"""Figures for a design review: what a figure shows is computed as a plain record, then drawn."""
+"""What the figures for a design review share: goals as axes, how an axis is dressed, and writing files.
+
+What a figure shows is computed as a plain record, then drawn; each figure has a file of its own beside this one.
+"""
 
 from __future__ import annotations
 
@@ -7,15 +10,15 @@ import textwrap
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
-from itertools import combinations
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from optisize.errors import OptisizeError
+from optisize.errors import InputError, OptisizeError, nearest
 from optisize.front.run import Run
 from optisize.front.table import measured
+from optisize.problem.evaluate import Goal, Limit
 from optisize.problem.own_measures import label
 from optisize.process.law import Array
 from optisize.quantities import UNPREFIXED, written
@@ -37,6 +40,7 @@ _PREFIXES = (
 )
 FORMATS = ("png", "svg", "pdf")
 BETTER = {"max": "higher", "min": "lower", "zero": "nearer to zero"}
+LIMIT = "#b5367a"  # the colour of a limit
 LINE = 40  # letters that fit beside an axis
 _LOG_SPAN = 8.0  # an axis whose figures span more than this factor is logarithmic
 
@@ -60,37 +64,32 @@ class Axis:
     bounds: tuple[tuple[str, float], ...]
 
 
-@dataclass(frozen=True)
-class TradeOff:
-    """Two goals against each other, the third as colour where there is one."""
-
-    x: Axis
-    y: Axis
-    colour: Axis | None
-
-
-@dataclass(frozen=True)
-class History:
-    """How a search went: hypervolume and feasible share over the evaluations."""
-
-    evaluations: Array
-    hypervolume: Array
-    feasible_share: Array
-
-
 def axis_of(run: Run, goal_index: int) -> Axis:
-    """Return the axis of one goal."""
+    """Return the axis of one goal of a run."""
     goal = run.problem.goals[goal_index]
+    return goal_axis(goal, measured(run.front, goal.measure), run.problem.limits)
+
+
+def goal_axis(goal: Goal, values: Array, limits: Sequence[Limit] = ()) -> Axis:
+    """Return the axis of a goal for designs with these values of its measure (N,), with the limits on it."""
     m = goal.measure
-    values = measured(run.front, m)
     factor, unit = readable(values, m.unit)
-    bounds = tuple(
-        (name, bound / factor) for x in run.problem.limits if x.measure.name == m.name for name, bound in x.bounds
-    )
+    bounds = tuple((name, bound / factor) for x in limits if x.measure.name == m.name for name, bound in x.bounds)
     positive = values[np.isfinite(values) & (values > 0)]
     wide = m.scale == "log" and len(positive) == len(values) > 0 and positive.max() / positive.min() > _LOG_SPAN
     name = label(m).replace("_", " ")
     return Axis(f"{name} [{unit}]" if unit else name, values / factor, goal.sense, bool(wide), bounds)
+
+
+def row_of(run: Run, design: int) -> int:
+    """Return the row of a design of the front, by its number.
+
+    Raises InputError when there is none.
+    """
+    rows = np.flatnonzero(run.front["design"] == design)
+    if not len(rows):
+        raise InputError(f"design {design}: the front has no such design")
+    return int(rows[0])
 
 
 def readable(values: Array, unit: str) -> tuple[float, str]:
@@ -107,132 +106,77 @@ def readable(values: Array, unit: str) -> tuple[float, str]:
     return factor, f"{prefix.strip()}{written(unit)}"
 
 
-def trade_offs(run: Run) -> list[TradeOff]:
-    """Return every pair of goals; with three or more, the next goal that is not in the pair is the colour."""
-    axes = [axis_of(run, i) for i in range(len(run.problem.goals))]
-    result = []
-    for i, j in combinations(range(len(axes)), 2):
-        rest = [k for k in range(len(axes)) if k not in (i, j)]
-        result.append(TradeOff(axes[j], axes[i], axes[rest[0]] if rest else None))
-    return result
-
-
-def history(run: Run) -> History:
-    """Return how the search went."""
-    table = run.history
-    return History(*(table[c].to_numpy(dtype=float) for c in ("evaluations", "hypervolume", "feasible_share")))
-
-
-def draw_trade_offs(run: Run) -> Figure:
-    """Draw every pair of goals side by side."""
-    figures = trade_offs(run)
-    if not figures:
-        axis = axis_of(run, 0)
-        raise OptisizeError(f"one goal ({axis.label}) has no trade-off to draw; see `optisize front`")
-    plt = pyplot()
-    columns = min(len(figures), 3)
-    rows = -(-len(figures) // columns)
-    figure, axes = plt.subplots(rows, columns, figsize=(5.2 * columns, 4.5 * rows), squeeze=False, layout="constrained")
-    for spot, trade_off in zip(axes.flat, figures, strict=False):
-        _draw_trade_off(figure, spot, trade_off)
-    for spot in axes.flat[len(figures) :]:
-        spot.set_visible(False)
-    figure.suptitle(f"{title_text(run.problem.title)}\n{len(run.front)} designs, each meets every limit", fontsize=11)
-    return figure
-
-
-def _draw_trade_off(figure: Figure, spot: Axes, shown: TradeOff) -> None:
-    colour = shown.colour
-    options: dict[str, Any] = {"s": 22, "linewidths": 0.3, "edgecolors": "0.25"}
-    if colour is not None:
-        norm = _norm(colour)
-        drawn = spot.scatter(shown.x.values, shown.y.values, c=colour.values, cmap="viridis", norm=norm, **options)
-        bar = figure.colorbar(drawn, ax=spot)
-        bar.set_label(heading(colour.label, colour.better))
+def heading(label: str, better: str) -> str:
+    """Return what stands at an axis, and which way is better, in lines that are no longer than the axis."""
+    way = f"{BETTER[better]} is better"
+    lines = textwrap.wrap(f"{label},", LINE)
+    if len(f"{lines[-1]} {way}") <= LINE:
+        lines[-1] += f" {way}"
     else:
-        spot.scatter(shown.x.values, shown.y.values, color="#31688e", **options)
+        lines.append(way)
+    return "\n".join(lines)
+
+
+def dress(spot: Axes, x: Axis, y: Axis) -> None:
+    """Give a picture its labels, scales, limits and grid, and say above it to which corner both goals get better."""
     for axis, set_label, set_scale, line in (
-        (shown.x, spot.set_xlabel, spot.set_xscale, spot.axvline),
-        (shown.y, spot.set_ylabel, spot.set_yscale, spot.axhline),
+        (x, spot.set_xlabel, spot.set_xscale, spot.axvline),
+        (y, spot.set_ylabel, spot.set_yscale, spot.axhline),
     ):
         set_label(heading(axis.label, axis.better))
         if axis.logarithmic:
             set_scale("log")
         for name, bound in axis.bounds:
-            if _near(bound, axis.values):
-                line(bound, color="#b5367a", linestyle="--", linewidth=1)
-                _label_bound(spot, axis is shown.x, bound, f"{name} {bound:g}")
-    _mark_better(spot, shown)
-    _plain_ticks(spot, shown)
+            if near(bound, axis.values):
+                line(bound, color=LIMIT, linestyle="--", linewidth=1)
+                _label_bound(spot, axis is x, name, bound)
+    _mark_better(spot, x, y)
+    _plain_ticks(x, spot.xaxis)
+    _plain_ticks(y, spot.yaxis)
     spot.grid(True, which="major", color="0.9", linewidth=0.6)
     spot.set_axisbelow(True)
 
 
-def heading(label: str, better: str) -> str:
-    """Return what stands at an axis, and which way is better, in lines that are no longer than the axis."""
-    way = f"{BETTER[better]} is better"
-    whole = f"{label}, {way}"
-    return whole if len(whole) <= LINE else f"{textwrap.fill(label, LINE)},\n{way}"
-
-
-def _norm(axis: Axis) -> Any:
-    from matplotlib.colors import LogNorm, Normalize
-
-    return LogNorm() if axis.logarithmic else Normalize()
-
-
-def _near(bound: float, values: Array) -> bool:
+def near(bound: float, values: Array) -> bool:
     """Tell whether a limit is near enough to the designs to be drawn with them."""
     low, high = float(values.min()), float(values.max())
     span = max(high - low, abs(high) * 1e-3)
     return low - 0.25 * span <= bound <= high + 0.25 * span
 
 
-def _label_bound(spot: Axes, vertical: bool, bound: float, text: str) -> None:
+def _label_bound(spot: Axes, vertical: bool, name: str, bound: float) -> None:
+    """Write a limit along its line, on the side where no design can be."""
+    style: dict[str, Any] = {"fontsize": 8, "color": LIMIT, "textcoords": "offset points", "rotation": 90 * vertical}
+    text, away = f"{name} {bound:g}", -1 if name == "min" else 1
     if vertical:
-        spot.text(bound, 0.02, f" {text}", transform=spot.get_xaxis_transform(), fontsize=8, color="#b5367a")
+        style |= {"xycoords": spot.get_xaxis_transform(), "va": "bottom", "ha": "right" if away < 0 else "left"}
+        spot.annotate(text, (bound, 0.02), (away, 0), **style)
     else:
-        spot.text(0.02, bound, text, transform=spot.get_yaxis_transform(), fontsize=8, color="#b5367a", va="bottom")
+        style |= {"xycoords": spot.get_yaxis_transform(), "va": "top" if away < 0 else "bottom"}
+        spot.annotate(text, (0.02, bound), (0, away), **style)
 
 
-def _mark_better(spot: Axes, shown: TradeOff) -> None:
+def _mark_better(spot: Axes, x: Axis, y: Axis) -> None:
     """Point above the picture to the corner where both goals are at their best; inside it would hide designs."""
-    right, up = shown.x.better == "max", shown.y.better == "max"
+    right, up = x.better == "max", y.better == "max"
     arrow = {(True, True): "\u2197", (True, False): "\u2198", (False, True): "\u2196", (False, False): "\u2199"}
     text = f"better {arrow[right, up]}" if right else f"{arrow[right, up]} better"
     spot.set_title(text, fontsize=10, color="0.2", loc="right" if right else "left")
 
 
-def _plain_ticks(spot: Axes, shown: TradeOff) -> None:
-    """Write ticks of logarithmic axes as plain numbers."""
+def _plain_ticks(axis: Axis, ticks: Any) -> None:
+    """Write the ticks of a logarithmic axis as plain numbers."""
     from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
-    for axis, ticks in ((shown.x, spot.xaxis), (shown.y, spot.yaxis)):
-        if axis.logarithmic:
-            ticks.set_major_locator(LogLocator(base=10, subs=(1.0, 2.0, 5.0)))
-            ticks.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
-            ticks.set_minor_formatter(NullFormatter())
+    if axis.logarithmic:
+        ticks.set_major_locator(LogLocator(base=10, subs=(1.0, 2.0, 5.0)))
+        ticks.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+        ticks.set_minor_formatter(NullFormatter())
 
 
-def draw_history(run: Run) -> Figure:
-    """Draw hypervolume and feasible share over the evaluations."""
-    record = history(run)
-    plt = pyplot()
-    figure, spot = plt.subplots(figsize=(6.4, 4.0), layout="constrained")
-    spot.plot(record.evaluations, record.hypervolume, color="#31688e", drawstyle="steps-post", label="hypervolume")
-    spot.set_xlabel("evaluations")
-    spot.set_ylabel("hypervolume of the archive, higher is better")
-    spot.set_ylim(bottom=0)
-    spot.set_xlim(left=0)
-    other = spot.twinx()
-    other.plot(record.evaluations, 100 * record.feasible_share, color="#b5367a", linestyle="--", label="feasible share")
-    other.set_ylabel("feasible share of the population [%]")
-    other.set_ylim(0, 105)
-    lines = [*spot.get_lines(), *other.get_lines()]
-    spot.legend(lines, [str(line.get_label()) for line in lines], loc="lower right", frameon=False)
-    spot.grid(True, color="0.9", linewidth=0.6)
-    figure.suptitle(f"Search history: {title_text(run.problem.title)}", fontsize=11)
-    return figure
+def plain_bar(bar: Any, axis: Axis) -> None:
+    """Write the ticks of a logarithmic colour bar as plain numbers."""
+    _plain_ticks(axis, bar.ax.yaxis)
 
 
 def title_text(text: str) -> str:
@@ -250,25 +194,6 @@ def pyplot() -> Any:
     return plt
 
 
-def write_figures(run: Run, directory: Path, formats: Sequence[str] = ("png",), dpi: int = 150) -> list[Path]:
-    """Draw the figures of a run into a directory, each file whole or not at all; return their paths.
-
-    Raises OptisizeError when they cannot be written.
-    """
-    plt = pyplot()
-    drawings = {"history": draw_history}
-    if len(run.problem.goals) > 1 and len(run.front):
-        drawings = {"trade-offs": draw_trade_offs, **drawings}
-    written = []
-    for name, draw in drawings.items():
-        figure = draw(run)
-        try:
-            written += [write_figure(figure, directory / f"{name}.{kind}", kind, dpi) for kind in formats]
-        finally:
-            plt.close(figure)
-    return written
-
-
 def write_figure(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
     """Write one figure beside its place, then put it there; a letter that the font lacks is drawn as a box."""
     beside = path.with_name(f".{path.name}")
@@ -283,3 +208,31 @@ def write_figure(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
         with contextlib.suppress(OSError):
             beside.unlink()
     return path
+
+
+def write_one(figure: Figure, path: Path, dpi: int = 150) -> None:
+    """Write a figure in the format of its file's name, and close it.
+
+    Raises OptisizeError when it cannot be written.
+    """
+    write_formats(figure, path.parent, path.stem, [path.suffix[1:]], dpi)
+
+
+def write_formats(figure: Figure, directory: Path, name: str, formats: Sequence[str], dpi: int) -> list[Path]:
+    """Write one figure in several formats, and close it; return the paths.
+
+    Raises OptisizeError when they cannot be written.
+    """
+    try:
+        return [write_figure(figure, directory / f"{name}.{kind}", kind, dpi) for kind in formats]
+    finally:
+        pyplot().close(figure)
+
+
+def check_figure(option: str, path: Path) -> None:
+    """Raise InputError for a figure file, given with an option, of a kind that cannot be drawn, or in no directory."""
+    kinds = [f".{kind}" for kind in FORMATS]
+    if path.suffix not in kinds:
+        raise InputError(f'{option}: found "{path.name}"; allowed are {", ".join(kinds)}{nearest(path.suffix, kinds)}')
+    if not path.parent.is_dir():
+        raise InputError(f"{option}: {path.parent}: there is no such directory")

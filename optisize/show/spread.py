@@ -3,22 +3,21 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from optisize.errors import InputError, nearest
 from optisize.front.spread import CONFIDENCE, Distribution, Spread, Yield, counts_sigmas
 from optisize.problem.own_measures import label as label_of
 from optisize.process.law import Array
 from optisize.quantities import write
-from optisize.show.plots import FORMATS, heading, pyplot, readable, title_text, write_figure
+from optisize.show.plots import heading, pyplot, readable, title_text
 from optisize.show.terminal import StatusLine, console, json_number, print_caution, print_table
 from optisize.stage.catalogue import Measure
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
 
 BARS = " ▁▂▃▄▅▆▇█"
 BAR_BINS = 24
@@ -150,20 +149,8 @@ def _better(measure: Measure, found: Spread) -> str:
     return "zero" if measure.signed and sense == "min" else sense
 
 
-def check_figure(path: Path) -> None:
-    """Raise InputError for a figure file of a kind that cannot be drawn, or in no directory."""
-    kinds = [f".{kind}" for kind in FORMATS]
-    if path.suffix not in kinds:
-        raise InputError(f'--figure: found "{path.name}"; allowed are {", ".join(kinds)}{nearest(path.suffix, kinds)}')
-    if not path.parent.is_dir():
-        raise InputError(f"--figure: {path.parent}: there is no such directory")
-
-
-def draw_spread(found: Spread, label: str, path: Path, dpi: int = 150) -> None:
-    """Draw the histograms into a file.
-
-    Raises OptisizeError when it cannot be written.
-    """
+def draw_spread(found: Spread, label: str) -> Figure:
+    """Draw the histogram of every measure that varies."""
     shown = histograms(found)
     plt = pyplot()
     columns = min(max(len(shown), 1), 3)
@@ -179,13 +166,12 @@ def draw_spread(found: Spread, label: str, path: Path, dpi: int = 150) -> None:
         f"{100 * everything.share:.2f} % meet every limit",
         fontsize=11,
     )
-    try:
-        write_figure(figure, path, path.suffix[1:], dpi)
-    finally:
-        plt.close(figure)
+    return figure
 
 
 def _draw(spot: Axes, shown: Histogram) -> None:
+    from matplotlib.ticker import MaxNLocator
+
     spot.stairs(shown.counts, shown.edges, fill=True, color="#8fb8d8", label="samples")
     spot.stairs(shown.linear, shown.edges, color="#1f3a52", linewidth=1.3, label="to first order")
     if np.isfinite(shown.matched):
@@ -196,6 +182,7 @@ def _draw(spot: Axes, shown: Histogram) -> None:
             spot.axvline(bound, color="#b5367a", linestyle="--", linewidth=1.2, label=f"limit: {name} {bound:g}")
     spot.set_xlabel(heading(shown.label, shown.better))
     spot.set_ylabel("samples in a bin")
+    spot.xaxis.set_major_locator(MaxNLocator(nbins=5))
     spot.set_ylim(top=1.35 * float(max(shown.counts.max(), shown.linear.max())))
     spot.legend(fontsize=7, framealpha=0.9, edgecolor="none", loc="upper right", ncols=2)
     spot.grid(True, color="0.9", linewidth=0.6)

@@ -38,7 +38,9 @@ def _table(headings: Iterable[str], left: int = 1) -> Table:
     """Return an empty table whose first `left` columns hold words and the rest numbers."""
     table = Table(box=None, pad_edge=False)
     for i, heading in enumerate(headings):
-        table.add_column(heading, justify="left" if i < left else "right", no_wrap=i >= left or i == 0, overflow="fold")
+        table.add_column(
+            escape(heading), justify="left" if i < left else "right", no_wrap=i >= left or i == 0, overflow="fold"
+        )
     return table
 
 
@@ -48,6 +50,7 @@ def print_table(title: str, headings: Sequence[str], rows: Iterable[Sequence[str
     Columns of numbers are never cut: those that do not fit into the terminal follow in further tables, each with the
     first column again.
     """
+    headings = [printable(heading) for heading in headings]
     cells = [[printable(cell) for cell in row] for row in rows]
     widths = [max(len(line[i]) for line in (headings, *cells)) for i in range(len(headings))]
     out = console(sum(widths) + GAP * len(widths) if left <= 1 else 0)

@@ -186,13 +186,14 @@ def test_a_failed_replacement_keeps_the_old_run(
 
 
 def test_a_replaced_run_keeps_what_others_put_there_and_no_older_part(finished_run: Path, run_copy: Path) -> None:
-    (run_copy / "notes.txt").write_text("mine", encoding="utf-8")
+    for name in ("notes.txt", "mismatch-of-mine.png"):
+        (run_copy / name).write_text("mine", encoding="utf-8")
     (run_copy / "decks").mkdir()
     (run_copy / "decks" / "design-3.cir").write_text("* deck", encoding="utf-8")
-    for name in ("checkpoint.npz", "trade-offs.png", "history.svg"):
+    for name in ("checkpoint.npz", "trade-offs.png", "history.svg", "parallel.pdf", "mismatch-3.png"):
         (run_copy / name).write_text("old", encoding="utf-8")
     load_run(finished_run).save(run_copy, replace=True)
-    assert sorted(p.name for p in run_copy.iterdir()) == sorted([*FILES, "decks", "notes.txt"])
+    assert sorted(p.name for p in run_copy.iterdir()) == sorted([*FILES, "decks", "mismatch-of-mine.png", "notes.txt"])
     assert (run_copy / "decks" / "design-3.cir").read_text(encoding="utf-8") == "* deck"
 
 

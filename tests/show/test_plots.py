@@ -15,11 +15,15 @@ from matplotlib.figure import Figure
 from optisize.errors import OptisizeError
 from optisize.front.run import Run, load_run
 from optisize.problem.evaluate import Limit
-from optisize.show.plots import axis_of, history, trade_offs, write_figures
+from optisize.show.figures import drawable, write_figures
+from optisize.show.history import history
+from optisize.show.plots import LINE, axis_of, heading
+from optisize.show.trade_offs import trade_offs
 from optisize.stage.measures import CATALOGUE
 from tests.conftest import Cli
 from tests.problem.test_bad_input import refused
 
+NOISE = ["noise low (input noise at 10 Hz)"]
 MAGIC = {"png": b"\x89PNG", "svg": b"<?xml", "pdf": b"%PDF"}
 
 
@@ -87,20 +91,49 @@ def test_the_history_is_that_of_the_run(run: Run, finished_run: Path) -> None:
 @pytest.mark.parametrize("kind", MAGIC)
 def test_figures_are_drawn_in_every_format(cli: Cli, run_copy: Path, kind: str) -> None:
     Path("elsewhere").mkdir()
-    result = cli("plot", "run", "--format", kind, "--to", "elsewhere", "--dpi", "60")
-    assert result.exit_code == 0, result.stderr
-    assert result.stdout.split() == [f"elsewhere/trade-offs.{kind}", f"elsewhere/history.{kind}"]
+    words = ("--design", "3", "--samples", "100", "--quiet")
+    result = cli("plot", "run", "--format", kind, "--to", "elsewhere", "--dpi", "60", *words)
+    assert (result.exit_code, result.stderr) == (0, "")
+    names = ("trade-offs", "parallel", "history", "mismatch-3")
+    assert result.stdout.split() == [f"elsewhere/{name}.{kind}" for name in names]
     for path in Path("elsewhere").iterdir():
         assert path.read_bytes().startswith(MAGIC[kind])
-    assert len(list(Path("elsewhere").iterdir())) == 2
+    assert len(list(Path("elsewhere").iterdir())) == 4
 
 
-def test_one_goal_has_a_history_only_and_many_goals_have_all_pairs(run: Run, tmp_path: Path) -> None:
-    assert [p.name for p in write_figures(_with_goals(run, 1), tmp_path)] == ["history.png"]
+def test_only_the_figures_that_are_asked_for_are_drawn(cli: Cli, run_copy: Path) -> None:
+    Path("elsewhere").mkdir()
+    words = ("--only", "history", "--only", "trade-offs", "--format", "png", "--format", "svg", "--format", "png")
+    result = cli("plot", "run", "--to", "elsewhere", "--dpi", "50", *words)
+    paths = [f"elsewhere/{name}.{kind}" for name in ("trade-offs", "history") for kind in ("png", "svg")]
+    assert result.stdout.split() == paths
+    result = cli("plot", "run", "--only", "mismatch", "--design", "1", "--samples", "50", "--dpi", "50")
+    assert result.stdout.split() == ["run/mismatch-1.png"]
+
+
+def test_a_png_has_the_dots_that_are_asked_for(run: Run, tmp_path: Path) -> None:
+    from matplotlib.image import imread
+
+    sizes = [imread(write_figures(run, tmp_path, dpi=dpi, names=["history"])[0]).shape[:2] for dpi in (100, 300)]
+    assert [3 * n for n in sizes[0]] == [*sizes[1]]
+
+
+def test_a_design_that_is_marked_changes_the_figures_that_have_designs(run: Run, tmp_path: Path) -> None:
+    for name, changes in (("trade-offs", True), ("parallel", True), ("history", False)):
+        plain, marked = (
+            write_figures(run, tmp_path, dpi=50, names=[name], design=design)[0].read_bytes() for design in (None, 3)
+        )
+        assert (plain != marked) is changes
+
+
+def test_one_goal_has_no_trade_off_and_many_goals_have_all_pairs(run: Run, tmp_path: Path) -> None:
+    assert [p.name for p in write_figures(_with_goals(run, 1), tmp_path, dpi=50)] == ["parallel.png", "history.png"]
     more = replace(run.problem.goals[0], measure=run.problem.limits[3].measure)
     four = replace(run, problem=replace(run.problem, goals=(*run.problem.goals, more)))
     assert len(trade_offs(four)) == 6
-    assert len(write_figures(four, tmp_path, dpi=50)) == 2
+    assert len(write_figures(four, tmp_path, dpi=50)) == 3
+    with pytest.raises(OptisizeError, match=r"--only: found trade-offs; .* one goal only, gain"):
+        drawable(_with_goals(run, 1), ["history", "trade-offs"])
 
 
 def test_a_run_without_a_design_has_a_history_only(run: Run, tmp_path: Path) -> None:
@@ -136,3 +169,19 @@ def test_a_run_whose_figures_fail_is_kept_and_said(
 def test_a_format_or_place_that_is_not_there_is_refused(cli: Cli, run_copy: Path) -> None:
     refused(cli, "--format", '"jpg"', "png, svg, pdf", words=("plot", "run", "--format", "jpg"))
     refused(cli, "nowhere", "no such directory", words=("plot", "run", "--to", "nowhere"))
+    refused(cli, "--only", '"paralel"', 'mean "parallel"?', words=("plot", "run", "--only", "paralel"))
+    refused(cli, "--only", "needs a design", words=("plot", "run", "--only", "mismatch"))
+    refused(cli, "--design: found 999", "its designs are 1 to", words=("plot", "run", "--design", "999"))
+
+
+@pytest.mark.parametrize(
+    ("label", "better", "lines"),
+    [
+        ("gain [dB]", "max", ["gain [dB], higher is better"]),
+        ("unity gain frequency [MHz]", "max", ["unity gain frequency [MHz],", "higher is better"]),
+        ("noise low (input noise at 10 Hz) [nV/√Hz]", "min", [*NOISE, "[nV/√Hz], lower is better"]),
+    ],
+)
+def test_a_heading_is_broken_where_it_is_read_best(label: str, better: str, lines: list[str]) -> None:
+    assert heading(label, better).splitlines() == lines
+    assert max(map(len, lines)) <= LINE

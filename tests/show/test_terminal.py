@@ -150,10 +150,10 @@ def test_a_process_is_shown_with_every_parameter(cli: Cli, name: str) -> None:
 
 
 def test_cells_are_printed_safely(capsys: pytest.CaptureFixture[str]) -> None:
-    print_table("\ntitle", ["name"], [["[red]a[/red]\x1b[31m\n"]])
+    print_table("\ntitle", ["[b]name[/b]\x1b"], [["[red]a[/red]\x1b[31m\n"]])
     assert [line.rstrip() for line in capsys.readouterr().out.splitlines()] == [
         "",
         "title",
-        "name",
+        "[b]name[/b]?",
         "[red]a[/red]?[31m?",
     ]
