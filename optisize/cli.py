@@ -6,8 +6,8 @@ from optisize.commands.common import app
 
 # The order of the help: first the main job.
 # isort: off
-from optisize.commands import search, choose, designs, figures, compare, mismatch, sheet, simulate, reference
-from optisize.commands import characterise
+from optisize.commands import search, choose, designs, page, figures, compare, mismatch, sheet, simulate
+from optisize.commands import reference, characterise
 # isort: on
 
 __all__ = [
@@ -19,6 +19,7 @@ __all__ = [
     "figures",
     "main",
     "mismatch",
+    "page",
     "reference",
     "search",
     "sheet",

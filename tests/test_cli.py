@@ -31,6 +31,7 @@ COMMANDS = (
     "plot",
     "choose",
     "compare",
+    "page",
     "spread",
     "corners",
     "sheet",

@@ -132,10 +132,14 @@ def _finish(
     failure: list[OptisizeError] = []
 
     def draw(directory: Path) -> None:
-        """Draw the figures; a run without them is better than none."""
+        """Draw the figures and renew the page that was there; a run without them is better than none."""
         from optisize.show.figures import write_figures
+        from optisize.show.page import renew_page
 
         try:
+            renew_page(run, target, directory)
+            if not figures:
+                return
             write_figures(run, directory)
             if checked is not None and checked.found is not None:
                 from optisize.show.resimulation import FIGURE, draw_resimulated
@@ -145,7 +149,7 @@ def _finish(
             failure.append(error)
 
     with on_ctrl_c(signal.SIG_IGN):
-        run.save(target, replace=replace, draw=draw if figures else None)
+        run.save(target, replace=replace, draw=draw)
     if as_json:
         keys = ("designs", "evaluations", "hypervolume", "seconds", "generations", "seed", "stopped", "archive")
         more = {} if checked is None or checked.kept is None else {"resimulation": run.info["resimulation"]}

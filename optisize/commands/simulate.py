@@ -132,10 +132,12 @@ def _counter(count: int, quiet: bool) -> Any:
 def _save(run: Run, found: Resimulated, target: Path, figure: bool) -> None:
     """Write a run that was read back with its simulated columns into its place; its other figures stay."""
     from optisize.front.run import copy_figures
+    from optisize.show.page import renew_page
     from optisize.show.resimulation import FIGURE, draw_resimulated
 
     def draw(directory: Path) -> None:
         copy_figures(target, directory)
+        renew_page(run, target, directory)
         if figure:
             draw_resimulated(found, str(target), directory / f"{FIGURE}.png")
 

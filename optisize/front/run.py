@@ -29,8 +29,9 @@ if TYPE_CHECKING:
 
 PROBLEM, PROCESS, FRONT, HISTORY, INFO = "problem.toml", "process.toml", "front.csv", "history.csv", "run.json"
 CHECKPOINT = "checkpoint.npz"
+PAGE = "page.html"
 FIGURES = ("trade-offs", "parallel", "history", "resimulation")  # without their formats
-OF_A_DESIGN = re.compile(r"mismatch-\d+")  # likewise, of one design of the front
+OF_A_DESIGN = re.compile(r"(mismatch|sheet)-\d+")  # likewise, of one design of the front
 COUNTS = ("seed", "population", "generations")  # what run.json has to say to go on
 RECORDS = ("evaluations", "hypervolume", "feasible_share")  # what history.csv has to hold
 
@@ -135,7 +136,7 @@ class Run:
 def _take_over(target: Path, beside: Path) -> None:
     """Copy what others have put into a run directory, but no older part of the run itself."""
     for found in target.iterdir():
-        own = found.name in (PROBLEM, PROCESS, FRONT, HISTORY, INFO, CHECKPOINT) or _is_figure(found)
+        own = found.name in (PROBLEM, PROCESS, FRONT, HISTORY, INFO, CHECKPOINT, PAGE) or _is_figure(found)
         if not own and found.is_dir():
             shutil.copytree(found, beside / found.name, symlinks=True)
         elif not own:
