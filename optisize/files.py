@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import difflib
 import os
+import shutil
 import tempfile
 import tomllib
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any, TypeVar, get_args
 
@@ -203,3 +204,22 @@ def write_bytes(path: Path, data: bytes) -> None:
             raise
     except OSError as error:
         raise OptisizeError(f"{path}: cannot be written: {error.strerror or error}") from None
+
+
+def write_directory(directory: Path, files: Mapping[str, str]) -> None:
+    """Write a new directory of text files, whole or not at all: beside first, then renamed.
+
+    Raises OptisizeError when it cannot be written.
+    """
+    try:
+        directory.parent.mkdir(parents=True, exist_ok=True)
+        beside = Path(tempfile.mkdtemp(prefix=f".{directory.name}.", dir=directory.parent))
+        try:
+            for name, text in files.items():
+                (beside / name).write_text(text, encoding="utf-8")
+            beside.chmod(0o755)
+            os.rename(beside, directory)
+        finally:
+            shutil.rmtree(beside, ignore_errors=True)
+    except OSError as error:
+        raise OptisizeError(f"{directory}: cannot be written: {error.strerror or error}") from None

@@ -15,7 +15,22 @@ class Parameters(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
 
-class TransistorParameters(Parameters):
+class MatchedParameters(Parameters):
+    """How well two transistors of one kind match."""
+
+    threshold_matching: Annotated[
+        float,
+        In("V*m", "mV*um"),
+        Field(ge=0, description="matching A_VT: sigma of the threshold difference is A_VT / sqrt(W L)"),
+    ]
+    factor_matching: Annotated[
+        float,
+        In("m", "%*um"),
+        Field(ge=0, description="matching A_beta: relative sigma of the current factors' difference times sqrt(W L)"),
+    ]
+
+
+class TransistorParameters(MatchedParameters):
     """What a process says of one kind of transistor, whatever its law; signs are those of an n-channel device."""
 
     threshold: Annotated[
@@ -61,13 +76,3 @@ class TransistorParameters(Parameters):
     flicker_exponent: Annotated[
         float, In(""), Field(gt=0, description="exponent Af of the frequency in flicker noise")
     ] = 1.0
-    threshold_matching: Annotated[
-        float,
-        In("V*m", "mV*um"),
-        Field(ge=0, description="matching A_VT: sigma of the threshold difference is A_VT / sqrt(W L)"),
-    ]
-    factor_matching: Annotated[
-        float,
-        In("m", "%*um"),
-        Field(ge=0, description="matching A_beta: relative sigma of the current factors' difference times sqrt(W L)"),
-    ]

@@ -9,20 +9,19 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Annotated, Any, NamedTuple, Self
+from typing import Any, NamedTuple, Self
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import Field
 
 from optisize.process.ladder import Between
 from optisize.process.law import Array, Capacitances, Drain, Pick, Saturation, Voltages, taken
-from optisize.process.parameters import Parameters
+from optisize.process.parameters import MatchedParameters
 from optisize.process.pinch import softplus
 from optisize.process.spline import Box
 from optisize.process.surfaces import Surfaces
 from optisize.process.tabulated import CHANNELS, gate_lift
-from optisize.quantities import In, write
+from optisize.quantities import write
 
 ROUNDING = 1e-6  # V; beyond the ends of a table by no more is inside
 GUESSES = 8  # Newton steps of the two estimates
@@ -33,19 +32,8 @@ LEAST_SLOPE = 0.2  # of the pinch-off voltage over the gate's
 STRONG = 30.0  # of the root of the inversion level; ln(exp(x) - 1) is x beyond
 
 
-class TableParameters(Parameters):
+class TableParameters(MatchedParameters):
     """What a table cannot say of one kind of transistor: how well two of them match."""
-
-    threshold_matching: Annotated[
-        float,
-        In("V*m", "mV*um"),
-        Field(ge=0, description="matching A_VT: sigma of the threshold difference is A_VT / sqrt(W L)"),
-    ]
-    factor_matching: Annotated[
-        float,
-        In("m", "%*um"),
-        Field(ge=0, description="matching A_beta: relative sigma of the current factors' difference times sqrt(W L)"),
-    ]
 
 
 class _Point(NamedTuple):

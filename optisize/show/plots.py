@@ -194,6 +194,17 @@ def pyplot() -> Any:
     return plt
 
 
+def panels(count: int, columns: int, width: float) -> tuple[Figure, list[Axes]]:
+    """Return a figure with so many panels, in rows of at most so many columns, each of a width [inch]."""
+    columns = min(max(count, 1), columns)
+    rows = max(-(-count // columns), 1)
+    size = width * columns, 3.6 * rows
+    figure, axes = pyplot().subplots(rows, columns, figsize=size, squeeze=False, layout="constrained")
+    for spot in axes.flat[count:]:
+        spot.set_visible(False)
+    return figure, list(axes.flat[:count])
+
+
 def write_figure(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
     """Write one figure beside its place, then put it there; a letter that the font lacks is drawn as a box."""
     beside = path.with_name(f".{path.name}")

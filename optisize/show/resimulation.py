@@ -15,7 +15,7 @@ from optisize.errors import printable
 from optisize.problem.own_measures import label
 from optisize.process.law import Array
 from optisize.quantities import write
-from optisize.show.plots import pyplot, readable, title_text, write_figure
+from optisize.show.plots import panels, pyplot, readable, title_text, write_figure
 from optisize.show.sensitivity import change_text
 from optisize.show.terminal import console, json_number, print_caution, print_table
 from optisize.simulator.resimulate import Comparison, Kept, Resimulated, tolerance
@@ -184,14 +184,9 @@ def draw_resimulated(found: Resimulated, name: str, path: Path, kind: str = "png
     Raises OptisizeError when it cannot be written.
     """
     shown = scatters(found)
-    plt = pyplot()
-    columns = min(max(len(shown), 1), 4)
-    rows = max(-(-len(shown) // columns), 1)
-    figure, axes = plt.subplots(rows, columns, figsize=(3.9 * columns, 3.6 * rows), squeeze=False, layout="constrained")
-    for spot, scatter in zip(axes.flat, shown, strict=False):
+    figure, spots = panels(len(shown), 4, 3.9)
+    for spot, scatter in zip(spots, shown, strict=True):
         _draw(spot, scatter)
-    for spot in axes.flat[len(shown) :]:
-        spot.set_visible(False)
     figure.suptitle(
         f"{title_text(found.problem.title)}\n{title_text(name)}: {int(found.ran.sum())} designs in {found.simulator}",
         fontsize=11,
@@ -199,7 +194,7 @@ def draw_resimulated(found: Resimulated, name: str, path: Path, kind: str = "png
     try:
         write_figure(figure, path, kind, dpi)
     finally:
-        plt.close(figure)
+        pyplot().close(figure)
 
 
 def _draw(spot: Axes, shown: Scatter) -> None:

@@ -11,7 +11,7 @@ from optisize.front.spread import CONFIDENCE, Distribution, Spread, Yield, count
 from optisize.problem.own_measures import label as label_of
 from optisize.process.law import Array
 from optisize.quantities import write
-from optisize.show.plots import heading, pyplot, readable, title_text
+from optisize.show.plots import heading, panels, readable, title_text
 from optisize.show.terminal import StatusLine, console, json_number, print_caution, print_table
 from optisize.stage.catalogue import Measure
 
@@ -152,14 +152,9 @@ def _better(measure: Measure, found: Spread) -> str:
 def draw_spread(found: Spread, label: str) -> Figure:
     """Draw the histogram of every measure that varies."""
     shown = histograms(found)
-    plt = pyplot()
-    columns = min(max(len(shown), 1), 3)
-    rows = max(-(-len(shown) // columns), 1)
-    figure, axes = plt.subplots(rows, columns, figsize=(4.6 * columns, 3.6 * rows), squeeze=False, layout="constrained")
-    for spot, histogram in zip(axes.flat, shown, strict=False):
+    figure, spots = panels(len(shown), 3, 4.6)
+    for spot, histogram in zip(spots, shown, strict=True):
         _draw(spot, histogram)
-    for spot in axes.flat[len(shown) :]:
-        spot.set_visible(False)
     everything = found.yields[-1]
     figure.suptitle(
         f"{title_text(found.problem.title)}\n{title_text(label)}: {found.samples} samples of mismatch, "

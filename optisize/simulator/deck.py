@@ -5,10 +5,7 @@ The same text is for a designer to read and go on with, and what `resimulate` ru
 
 from __future__ import annotations
 
-import os
 import re
-import shutil
-import tempfile
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -16,7 +13,8 @@ from pathlib import Path
 import numpy as np
 
 import optisize
-from optisize.errors import InputError, OptisizeError, SimulationFailed
+from optisize.errors import InputError, SimulationFailed
+from optisize.files import write_directory
 from optisize.problem.evaluate import Problem, measured
 from optisize.problem.own_measures import label
 from optisize.process.law import Array
@@ -143,23 +141,12 @@ def write_decks(
     Raises OptisizeError when it cannot be written.
     """
     decks = {
-        number: write_deck(
+        f"design-{number}.sp": write_deck(
             problem, {k: v[i : i + 1] for k, v in sizes.items()}, f"design {number} of {source}", measures
-        )
+        ).text
         for i, number in enumerate(designs)
     }
-    try:
-        directory.parent.mkdir(parents=True, exist_ok=True)
-        beside = Path(tempfile.mkdtemp(prefix=f".{directory.name}.", dir=directory.parent))
-        try:
-            for number, deck in decks.items():
-                (beside / f"design-{number}.sp").write_text(deck.text, encoding="utf-8")
-            beside.chmod(0o755)
-            os.rename(beside, directory)
-        finally:
-            shutil.rmtree(beside, ignore_errors=True)
-    except OSError as error:
-        raise OptisizeError(f"{directory}: cannot be written: {error.strerror or error}") from None
+    write_directory(directory, decks)
     return len(decks)
 
 

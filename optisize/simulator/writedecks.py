@@ -3,11 +3,10 @@
 from __future__ import annotations
 
 import os
-import shutil
-import tempfile
 from pathlib import Path
 
-from optisize.errors import InputError, OptisizeError
+from optisize.errors import InputError
+from optisize.files import write_directory
 from optisize.simulator import fromcsv
 from optisize.simulator.characterise import Request, plan
 
@@ -51,20 +50,10 @@ def write_decks(request: Request, to: Path) -> str:
         p_widths=microns[3],
         format=(fromcsv.__doc__ or "").partition("\n\n")[2],
     )
-    try:
-        to.parent.mkdir(parents=True, exist_ok=True)
-        beside = Path(tempfile.mkdtemp(prefix=f".{to.name}.", dir=to.parent))
-        try:
-            (beside / "README").write_text(readme, encoding="utf-8")
-            for number, (condition, channel, sweep) in enumerate(jobs, start=1):
-                celsius = f"{condition.temperature - 273.15:g}"
-                kind = sweep.title.split(" of ")[0].replace(" ", "-")
-                name = f"{number:03d}-{condition.corner}-{celsius}-{channel}-{kind}.sp"
-                (beside / name).write_text(sweep.deck(), encoding="utf-8")
-            beside.chmod(0o755)
-            os.rename(beside, to)
-        finally:
-            shutil.rmtree(beside, ignore_errors=True)
-    except OSError as error:
-        raise OptisizeError(f"{to}: cannot be written: {error.strerror or error}") from None
+    files = {"README": readme}
+    for number, (condition, channel, sweep) in enumerate(jobs, start=1):
+        celsius = f"{condition.temperature - 273.15:g}"
+        kind = sweep.title.split(" of ")[0].replace(" ", "-")
+        files[f"{number:03d}-{condition.corner}-{celsius}-{channel}-{kind}.sp"] = sweep.deck()
+    write_directory(to, files)
     return f"{to}: {len(jobs)} decks, and a README that says what is to come of them"
