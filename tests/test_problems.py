@@ -17,7 +17,9 @@ ROOT = Path(__file__).parents[1]
 PROBLEMS = sorted((ROOT / "problems").glob("*.toml"))
 
 
-@pytest.fixture(scope="module", params=PROBLEMS, ids=lambda path: path.stem)
+@pytest.fixture(
+    scope="module", params=[pytest.param(p, marks=pytest.mark.xdist_group(p.stem), id=p.stem) for p in PROBLEMS]
+)
 def run(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Run:
     """One search of a shipped problem, written and read back."""
     made = ProblemFile.model_validate(read_toml(request.param)).process == "process/open.toml"
