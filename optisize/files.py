@@ -188,11 +188,12 @@ def write_text(path: Path, text: str) -> None:
 
 
 def write_bytes(path: Path, data: bytes) -> None:
-    """Write a file whole or not at all: beside first, then renamed.
+    """Write a file whole or not at all, beside first, then renamed; its directory is made where there is none.
 
     Raises OptisizeError when it cannot be written.
     """
     try:
+        path.parent.mkdir(parents=True, exist_ok=True)
         handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
         try:
             with os.fdopen(handle, "wb") as file:

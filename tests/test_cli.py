@@ -301,7 +301,11 @@ def test_a_finished_run_is_resumed_into_its_place_or_another(cli: Cli, run_copy:
     (run_copy / "notes.txt").write_text("mine", encoding="utf-8")
     other = cli("resume", "run", "--to", "other", "--no-figures", "--quiet")
     assert other.exit_code == 0, other.stderr
-    assert cli("resume", "run", "--no-figures", "--quiet").exit_code == 0
+    (run_copy / "sheet-7.pdf").write_text("of an old design", encoding="utf-8")
+    again = cli("resume", "run", "--no-figures", "--quiet")
+    assert again.exit_code == 0
+    assert "numbered anew, so these of the old front are gone: sheet-7.pdf" in again.stderr
+    assert not (run_copy / "sheet-7.pdf").exists()
     assert Path("run/front.csv").read_bytes() == Path("other/front.csv").read_bytes()
     assert Path("run/notes.txt").read_text(encoding="utf-8") == "mine"
     assert sorted(p.name for p in Path.cwd().iterdir()) == ["other", "run"]

@@ -37,7 +37,7 @@ def test_a_disk_that_fails_leaves_the_old_file_and_nothing_else(
 
 def test_a_place_that_is_no_directory_is_said(tmp_path: Path) -> None:
     (tmp_path / "file").write_text("")
-    with pytest.raises(OptisizeError, match="cannot be written: Not a directory"):
+    with pytest.raises(OptisizeError, match=r"cannot be written: (Not a directory|File exists)"):
         write_text(tmp_path / "file" / "a.txt", "new")
 
 

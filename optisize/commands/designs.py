@@ -8,7 +8,7 @@ from typing import Annotated
 import typer
 
 from optisize.commands.common import Json, ProblemPath, RunPath, app, guarded, print_json
-from optisize.errors import InputError
+from optisize.errors import InputError, NothingFeasible
 
 
 @app.command(epilog='Example: optisize front results/sample --where "gain>=20 dB" --sort supply_current')
@@ -30,6 +30,9 @@ def front(
         raise InputError("--csv and --json: found both; one of them is allowed")
     loaded = load_run(run)
     table = choose.where(loaded.front, where or [])
+    if where and not len(table):
+        wanted = " and ".join(where)
+        raise NothingFeasible(f"{run}: no design has {wanted}; `optisize choose` with the same names the nearest")
     if sort is not None:
         table = choose.sort(loaded, table, sort)
     if as_csv:

@@ -53,8 +53,6 @@ def plot(
     loaded = load_run(run)
     picked = None if design is None else pick(run, design)
     directory = to or run
-    if not directory.is_dir():
-        raise InputError(f"{directory}: there is no such directory")
     kinds = list(dict.fromkeys(formats or ["png"]))
     wanted = drawable(loaded, only)
     paths = write_figures(loaded, directory, kinds, dpi, names=wanted, design=design)

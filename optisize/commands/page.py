@@ -10,6 +10,8 @@ import typer
 from optisize.commands.common import RunPath, app, guarded
 from optisize.errors import InputError
 
+SUFFIXES = (".html", ".htm")
+
 
 @app.command(epilog="Example: optisize page results/sample --to sample.html")
 @guarded
@@ -25,7 +27,7 @@ def page(
     path = run / PAGE if to is None else to
     if path.is_dir():
         raise InputError(f"--to: found {path}, which is a directory; a file is needed, such as {path / PAGE}")
-    if not path.parent.is_dir():
-        raise InputError(f"--to: found {path}, but there is no directory {path.parent}")
+    if path.suffix not in SUFFIXES:
+        raise InputError(f"--to: found {path}; allowed are names that end with {' or '.join(SUFFIXES)}")
     write_page(loaded, path)
     typer.echo(f"{path}: {len(loaded.front)} designs, {path.stat().st_size / 1e6:.1f} MB; open it in a browser")

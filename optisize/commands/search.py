@@ -21,7 +21,7 @@ from optisize.commands.common import (
     print_json,
     stop_once,
 )
-from optisize.errors import OptisizeError
+from optisize.errors import OptisizeError, listing
 
 if TYPE_CHECKING:
     from optisize.front.run import Run
@@ -127,9 +127,11 @@ def _finish(
     run: Run, target: Path, figures: bool, as_json: bool, replace: bool = False, checked: _Checked | None = None
 ) -> None:
     """Write a run, draw it, print it, and say so if it was interrupted."""
-    from optisize.front.summary import binding_limits, extremes
+    from optisize.front.run import of_single_designs
+    from optisize.front.summary import binding_limits, crowded_sizes, extremes
 
     failure: list[OptisizeError] = []
+    stale = of_single_designs(target) if replace else []
 
     def draw(directory: Path) -> None:
         """Draw the figures and renew the page that was there; a run without them is better than none."""
@@ -157,11 +159,14 @@ def _finish(
     else:
         from optisize.show.terminal import print_search
 
-        print_search(run, extremes(run), binding_limits(run))
+        print_search(run, extremes(run), binding_limits(run), crowded_sizes(run))
         if checked is not None and checked.kept is not None:
             from optisize.show.resimulation import print_kept
 
             print_kept(checked.kept, checked.before)
+    if stale:
+        gone = listing(stale)
+        typer.echo(f"optisize: the designs are numbered anew, so these of the old front are gone: {gone}", err=True)
     if failure:
         raise OptisizeError(f"{target}: is written, but not all of its figures: {failure[0]}")
     if run.info["stopped"] == "interrupted":

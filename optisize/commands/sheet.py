@@ -51,8 +51,6 @@ def _check_file(path: Path) -> None:
         raise InputError(f'--to: found "{path}"; a file in {" or ".join(SUFFIXES)}, or a directory, is needed{close}')
     if path.exists():
         raise InputError(f"{path}: already exists; give another file with --to, or remove it")
-    if not path.parent.is_dir():
-        raise InputError(f"--to: {path.parent}: there is no such directory")
 
 
 def _paths(run: Path, design: int | None, sizing: Path | None, to: Path | None) -> list[Path]:

@@ -7,6 +7,7 @@ import platform
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -22,6 +23,7 @@ from optisize.process.law import Array
 from optisize.quantities import write
 
 BATCH = 800  # designs that are evaluated at once where the population is smaller
+CUMULATIVE = ("evaluations", "generations", "seconds", "evaluation_seconds")  # of run.json, over all that was searched
 SURVEY = 512  # designs of the fixed sample that sets the box in which the hypervolume is measured
 Watch = Callable[[State], None]
 
@@ -96,12 +98,28 @@ def resume(run: Run, *, generations: int | None = None, threads: int | None = No
     wanted = generations or run.problem.settings.generations
     if run.state is not None:
         state = genetic.extended(run.state, wanted) if generations else run.state
-        return search(run.problem, threads=threads, watch=watch, state=state, settings=state.settings)
+        again = search(run.problem, threads=threads, watch=watch, state=state, settings=state.settings)
+        return _after(run.info.get("before"), run.history, again)
     if not len(run.front):
         raise InputError(f"{run.path}: has no design to go on from")
     population, seed = run.info["population"], run.info["seed"] + 1
     settings = settings_of(run.problem, population=population, seed=seed, generations=wanted)
-    return search(run.problem, threads=threads, watch=watch, seeds=sizes_of(run.problem, run.front), settings=settings)
+    seeds = sizes_of(run.problem, run.front)
+    again = search(run.problem, threads=threads, watch=watch, seeds=seeds, settings=settings)
+    before = {key: run.info[key] for key in CUMULATIVE} | {"records": len(run.history)}
+    return _after(before, run.history, again)
+
+
+def _after(before: Mapping[str, Any] | None, history: pd.DataFrame, again: Run) -> Run:
+    """Return a run that counts what was searched before a finished run went on from its front."""
+    if before is None:
+        return again
+    again.info |= {key: round(again.info[key] + before[key], 3) for key in CUMULATIVE} | {"before": dict(before)}
+    later = again.history.copy()
+    for name, key in (("generation", "generations"), ("evaluations", "evaluations")):
+        later[name] += before[key]
+    again.history = pd.concat([history.iloc[: before["records"]], later], ignore_index=True)
+    return again
 
 
 def search(

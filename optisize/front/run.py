@@ -143,6 +143,11 @@ def _take_over(target: Path, beside: Path) -> None:
             shutil.copy2(found, beside / found.name, follow_symlinks=False)
 
 
+def of_single_designs(target: Path) -> list[str]:
+    """Return the files of a run directory that show single designs by number, which a new front makes wrong."""
+    return sorted(x.name for x in target.iterdir() if OF_A_DESIGN.fullmatch(x.stem)) if target.is_dir() else []
+
+
 def copy_figures(source: Path, target: Path) -> None:
     """Copy the figures of a run into the directory that is to take its place."""
     for found in source.iterdir():

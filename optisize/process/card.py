@@ -253,9 +253,10 @@ def locate_process(name: str, beside: Path | None = None) -> Path:
     for candidate in ([beside / name] if beside is not None else []) + [Path(name)]:
         if os.path.isfile(candidate):
             return candidate
+    made = "; one of your own transistors is made by `optisize process characterise`" if name.endswith(".toml") else ""
     raise InputError(
         f"process {shorten(name)} is neither built in nor a file; built in are {listing(built_in_names())}"
-        f"{nearest(name, built_in_names())}"
+        f"{nearest(name, built_in_names())}{made}"
     )
 
 

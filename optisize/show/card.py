@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+import numpy as np
+
 from optisize.front.card import Card
 from optisize.front.details import Resistors, Transistors
 from optisize.problem.own_measures import label
@@ -115,11 +117,22 @@ def print_limits(card: Card) -> None:
             x["name"],
             f"{x['kind']} {write(x['bound'], x['unit'])}{' (implied)' if x['implied'] else ''}",
             write(x["value"], x["unit"]),
+            _left(x),
             "met" if x["met"] else "MISSED",
         ]
         for x in card.limits
     ]
-    print_table("\nlimits", ["limit", "bound", "value", ""], rows)
+    print_table("\nlimits", ["limit", "bound", "value", "left", ""], rows)
+
+
+def _left(x: Mapping[str, Any]) -> str:
+    """Return how far a value is inside of its bound, negative where it is beyond."""
+    value = abs(x["value"]) if x["bound"] >= 0.0 else x["value"]
+    left = value - x["bound"] if x["kind"] == "min" else x["bound"] - value
+    if not np.isfinite(left):
+        return "-"
+    share = f" ({100.0 * left / abs(x['bound']):.3g} %)" if x["bound"] and x["unit"] != "dB" else ""
+    return f"{write(float(left), x['unit'], 3)}{share}"
 
 
 def print_measures(card: Card, simulated: Mapping[str, float]) -> None:

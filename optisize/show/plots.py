@@ -209,6 +209,7 @@ def write_figure(figure: Figure, path: Path, kind: str, dpi: int) -> Path:
     """Write one figure beside its place, then put it there; a letter that the font lacks is drawn as a box."""
     beside = path.with_name(f".{path.name}")
     try:
+        path.parent.mkdir(parents=True, exist_ok=True)
         with warnings.catch_warnings():
             warnings.filterwarnings("ignore", "Glyph .* missing from font")
             figure.savefig(beside, dpi=dpi, format=kind)
@@ -241,9 +242,7 @@ def write_formats(figure: Figure, directory: Path, name: str, formats: Sequence[
 
 
 def check_figure(option: str, path: Path) -> None:
-    """Raise InputError for a figure file, given with an option, of a kind that cannot be drawn, or in no directory."""
+    """Raise InputError for a figure file, given with an option, of a kind that cannot be drawn."""
     kinds = [f".{kind}" for kind in FORMATS]
     if path.suffix not in kinds:
         raise InputError(f'{option}: found "{path.name}"; allowed are {", ".join(kinds)}{nearest(path.suffix, kinds)}')
-    if not path.parent.is_dir():
-        raise InputError(f"{option}: {path.parent}: there is no such directory")

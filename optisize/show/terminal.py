@@ -17,7 +17,7 @@ from rich.table import Table
 from optisize.errors import printable
 from optisize.evolution.state import State
 from optisize.front.run import Run
-from optisize.front.summary import Binding, Extreme
+from optisize.front.summary import Binding, Crowded, Extreme
 from optisize.front.table import column, simulated_column, unit_of
 from optisize.quantities import write
 
@@ -121,8 +121,8 @@ class Progress(StatusLine):
             )
 
 
-def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Binding]) -> None:
-    """Print what a search found: the extremes of the front, how many designs, which limits bind, time and place."""
+def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Binding], crowded: Sequence[Crowded]) -> None:
+    """Print what a search found: the extremes of the front, how many designs, what confines them, time and place."""
     info, problem = run.info, run.problem
     goals = [(g.measure.name, g.measure.unit, g.sense) for g in problem.goals]
     print_table(
@@ -131,8 +131,9 @@ def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Bindin
         [[e.goal, *(write(e.values[name], unit) for name, unit, _ in goals), str(e.design)] for e in extremes],
     )
     out = console()
+    count = "1 design" if info["designs"] == 1 else f"{info['designs']} designs"
     out.print(
-        f"{info['designs']} designs on the front, thinned from {info['archive']}; "
+        f"{count} on the front, thinned from {info['archive']}; "
         f"hypervolume {info['hypervolume']:.4f} of the box in run.json"
     )
     if not info["designs"]:
@@ -142,6 +143,9 @@ def print_search(run: Run, extremes: Sequence[Extreme], binding: Sequence[Bindin
         out.print("limits that bind, with the share of designs at each: " + escape(", ".join(parts)))
     else:
         out.print("no limit binds: the goals alone shape the front")
+    if crowded:
+        parts = [f"{c.name} ({write(c.end, c.unit)}: {100 * c.share:.0f} %)" for c in crowded]
+        out.print("sizes at an end of their range: " + escape(", ".join(parts)) + "; wider ranges may give more")
     stopped = {"budget": "budget used up", "stalled": "stalled: no more gain", "interrupted": "interrupted"}
     out.print(
         f"{info['evaluations']} evaluations in {info['seconds']:.1f} s, {info['generations']} generations "

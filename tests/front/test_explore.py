@@ -6,13 +6,14 @@ import re
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 
 from optisize.errors import InputError, NothingFeasible
 from optisize.evolution.state import State
 from optisize.front import explore
 from optisize.front.run import CHECKPOINT, Run, load_run
-from optisize.front.summary import binding_limits, extremes
+from optisize.front.summary import binding_limits, crowded_sizes, extremes
 from optisize.front.table import to_csv
 from optisize.problem.evaluate import Problem
 from optisize.problem.load import load_sizing
@@ -83,6 +84,11 @@ def test_a_finished_run_goes_on_from_its_front_and_gets_no_worse(finished_run: P
         goal = next(g for g in run.problem.goals if g.measure.name == was.goal)
         a, b = (goal.loss(np.array([e.values[was.goal]]))[0] for e in (was, now))
         assert b <= a + 1e-9
+    assert more.info["evaluations"] == run.info["evaluations"] + more.info["population"] * run.info["generations"]
+    assert more.info["generations"] == 2 * run.info["generations"]
+    assert (np.diff(more.history["evaluations"]) > 0).all()
+    assert more.history["evaluations"].iloc[-1] == more.info["evaluations"]
+    pd.testing.assert_frame_equal(more.history.iloc[: len(run.history)], run.history)
 
 
 def test_a_manual_sizing_is_part_of_the_search(problem: Problem, tmp_path: Path) -> None:
@@ -147,6 +153,21 @@ def test_a_search_keeps_the_margins_and_the_problem_its_bounds(tmp_path: Path) -
     assert run.front["output_swing [V]"].min() >= 0.7 - 1e-9
     assert run.front["power [W]"].max() <= 30e-6 * (1.0 + 1e-9)
     assert {limit.measure.name: limit.low for limit in run.problem.limits}["bandwidth"] == 1e6
+    bound = {(b.name, b.bound_name): b.bound for b in binding_limits(run)}
+    assert bound["bandwidth", "min"] == pytest.approx(1.1e6)
+
+
+def test_sizes_at_an_end_of_their_range_are_named_with_their_share(tmp_path: Path) -> None:
+    problem = loaded(tmp_path, changed(RESISTOR, ("tail.units", "tail.units = [1, 3]")))
+    run = explore.search(problem)
+    found = {(c.name, c.end): c.share for c in crowded_sizes(run)}
+    expected = {}
+    for r in problem.space.free:
+        values = run.front[f"{r.size.name} [{r.size.unit}]" if r.size.unit else r.size.name].to_numpy()
+        for end in (r.low, r.high):
+            expected[r.size.name, end] = np.mean(np.abs(values - end) <= 0.02 * end)
+    assert found == {key: share for key, share in expected.items() if share >= 0.25}
+    assert found
 
 
 def test_nothing_feasible_names_the_limits_and_how_near_the_best_design_came(tmp_path: Path) -> None:

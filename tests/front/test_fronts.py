@@ -157,7 +157,6 @@ def test_processes_of_one_name_are_told_apart(problem: Problem) -> None:
         (("run", "rum"), ["rum: there is no such run", 'did you mean "run"?']),
         (("run", "run/front.csv"), ["run/front.csv: is not a directory"]),
         (("run", ".", "--to", "x.jpg"), ["--to", '"x.jpg"', ".png, .svg, .pdf"]),
-        (("run", ".", "--to", "nowhere/x.png"), ["--to: nowhere: there is no such directory"]),
     ],
 )
 def test_runs_that_are_none_are_refused(cli: Cli, run_copy: Path, words: tuple[str, ...], expected: list[str]) -> None:

@@ -156,7 +156,9 @@ def test_the_command_says_what_it_wrote_and_refuses_what_it_cannot(cli: Cli, run
     assert result.stderr == ""
     refused(cli, "nowhere", "no such run", words=("page", "nowhere"))
     refused(cli, "--to", "directory", words=("page", "run", "--to", "run"))
-    refused(cli, "--to", "no directory", words=("page", "run", "--to", "nowhere/page.html"))
+    refused(cli, "--to", "front.pdf", ".html", words=("page", "run", "--to", "front.pdf"))
+    assert cli("page", "run", "--to", "somewhere/page.html").exit_code == 0
+    assert Path("somewhere/page.html").is_file()
     front = run_copy / "front.csv"
     front.write_text(front.read_text(encoding="utf-8").splitlines()[0] + "\n", encoding="utf-8")
     refused(cli, "front is empty", words=("page", "run"))

@@ -166,9 +166,18 @@ def test_a_run_whose_figures_fail_is_kept_and_said(
     assert sorted(p.name for p in Path("run").iterdir()) == sorted(p.name for p in finished_run.iterdir())
 
 
-def test_a_format_or_place_that_is_not_there_is_refused(cli: Cli, run_copy: Path) -> None:
+def test_a_directory_is_made_where_there_is_none(cli: Cli, run_copy: Path) -> None:
+    assert run_copy.is_dir()
+    result = cli("plot", "run", "--only", "history", "--to", "new/place")
+    assert result.exit_code == 0, result.stderr
+    assert Path("new/place/history.png").is_file()
+    result = cli("plot", "run", "--only", "history", "--to", "run/front.csv")
+    assert result.exit_code == 1
+    assert result.stderr.startswith("optisize: history.png: cannot be written: ")
+
+
+def test_a_format_or_name_that_is_not_there_is_refused(cli: Cli, run_copy: Path) -> None:
     refused(cli, "--format", '"jpg"', "png, svg, pdf", words=("plot", "run", "--format", "jpg"))
-    refused(cli, "nowhere", "no such directory", words=("plot", "run", "--to", "nowhere"))
     refused(cli, "--only", '"paralel"', 'mean "parallel"?', words=("plot", "run", "--only", "paralel"))
     refused(cli, "--only", "needs a design", words=("plot", "run", "--only", "mismatch"))
     refused(cli, "--design: found 999", "its designs are 1 to", words=("plot", "run", "--design", "999"))

@@ -86,7 +86,7 @@ def test_a_library_that_a_deck_cannot_name_is_refused(library: Library) -> None:
         TableDevices(problem_with(kind, None).circuit(sizing(kind, "handbook")), False)
 
 
-@pytest.mark.parametrize("kind", KINDS[2::9], ids=str)
+@pytest.mark.parametrize("kind", KINDS[2::14], ids=str)
 def test_decks_with_a_foundrys_own_models(kind: Kind, open_process: Path, ngspice: str, tmp_path: Path) -> None:
     """Full models run without a warning, and agree as the checks of the table law say."""
     names = ["gain", "supply_rejection", "supply_current", "headroom", "output_swing", "output_resistance"]
