@@ -18,12 +18,10 @@ from optisize.problem.schema import ProblemFile
 
 ROOT = Path(__file__).parents[1]
 PROBLEMS = sorted((ROOT / "problems").glob("*.toml"))
-GENERATIONS = 48
+GENERATIONS = 28
 
 
-@pytest.fixture(
-    scope="module", params=[pytest.param(p, marks=pytest.mark.xdist_group(p.stem), id=p.stem) for p in PROBLEMS]
-)
+@pytest.fixture(scope="module", params=PROBLEMS, ids=lambda path: path.stem)
 def run(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Run:
     """One search of a shipped problem, written and read back."""
     made = ProblemFile.model_validate(read_toml(request.param)).process == "process/open.toml"
@@ -46,7 +44,7 @@ def test_no_design_violates_a_limit_when_its_row_is_evaluated_again(run: Run) ->
         assert limit.met(again[limit.measure.name]).all(), limit.measure.name
     written = values_of(run.problem, run.front)
     for name, values in again.items():
-        np.testing.assert_allclose(written[name], values, rtol=1e-7, err_msg=name)
+        np.testing.assert_allclose(written[name], values, rtol=1e-6, err_msg=name)  # swings are in single precision
 
 
 def test_no_design_dominates_another(run: Run) -> None:

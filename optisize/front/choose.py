@@ -41,6 +41,9 @@ def parse_condition(text: str, table: pd.DataFrame) -> Condition:
 
     Raises InputError for an unknown column, a wrong unit or something else.
     """
+    turned = re.search("=[<>]", text)
+    if turned:
+        raise InputError(f'--where: found {shorten(text)}; did you mean "{turned[0][::-1]}" for "{turned[0]}"?')
     match = _CONDITION.fullmatch(text)
     if match is None:
         raise InputError(f'--where: found {shorten(text)}; a condition such as "gain>=40 dB" is needed')

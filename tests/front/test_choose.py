@@ -73,7 +73,7 @@ def test_json_holds_every_column_in_si_units(cli: Cli, run_copy: Path) -> None:
     [
         (("--where", "gian>=40 dB"), ['"gian"', "supply_current", 'mean "gain"?']),
         (("--where", "gain>=40 V"), ["--where", '"gain>=40 V"', '"dB"']),
-        (("--where", "gain=>40 dB"), ["--where", '"gain=>40 dB"']),
+        (("--where", "gain=>40 dB"), ["--where", '"gain=>40 dB"', 'did you mean ">=" for "=>"?']),
         (("--where", "gain"), ["--where", '"gain"', "gain>=40 dB"]),
         (("--where", ""), ["--where", "gain>=40 dB"]),
         (("--where", "gain>=\x1b[31m1"), ["--where", "gain>=?[31m1"]),
