@@ -7,7 +7,7 @@ import os
 import shutil
 import tempfile
 import tomllib
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any, TypeVar, get_args
 
@@ -188,16 +188,25 @@ def write_text(path: Path, text: str) -> None:
 
 
 def write_bytes(path: Path, data: bytes) -> None:
+    """Write a file as `write_beside` does."""
+    write_beside(path, lambda beside: beside.write_bytes(data))
+
+
+def write_beside(path: Path, fill: Callable[[Path], object]) -> None:
     """Write a file whole or not at all, beside first, then renamed; its directory is made where there is none.
+
+    Args:
+        path: of the file.
+        fill: called with the place beside it, which it writes.
 
     Raises OptisizeError when it cannot be written.
     """
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
         handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
+        os.close(handle)
         try:
-            with os.fdopen(handle, "wb") as file:
-                file.write(data)
+            fill(Path(name))
             os.chmod(name, 0o644)
             os.replace(name, path)
         except BaseException:

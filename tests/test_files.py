@@ -18,15 +18,15 @@ def test_a_text_is_written_as_it_is(tmp_path: Path) -> None:
     assert [p.name for p in tmp_path.iterdir()] == ["a.txt"]
 
 
-@pytest.mark.parametrize("step", ["replace", "fdopen", "chmod"])
+@pytest.mark.parametrize(("room", "step"), [(os, "replace"), (Path, "write_bytes"), (os, "chmod")])
 def test_a_disk_that_fails_leaves_the_old_file_and_nothing_else(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, step: str
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, room: object, step: str
 ) -> None:
     def full(*_: object, **__: object) -> None:
         raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
 
     write_text(tmp_path / "a.txt", "old")
-    monkeypatch.setattr(os, step, full)
+    monkeypatch.setattr(room, step, full)
     with pytest.raises(OptisizeError, match=r"a\.txt: cannot be written: No space left") as caught:
         write_text(tmp_path / "a.txt", "new")
     assert caught.value.exit_code == 1

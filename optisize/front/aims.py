@@ -11,13 +11,11 @@ from numpy.typing import NDArray
 from optisize.errors import InputError, shorten
 from optisize.front.choose import Condition, parse_condition
 from optisize.front.run import Run
-from optisize.front.table import find_column, measured, unit_of
+from optisize.front.table import SIMULATED, find_column, measured, unit_of
 from optisize.problem.evaluate import Goal, Problem
 from optisize.process.law import Array
 from optisize.quantities import QuantityError, read, write
 from optisize.stage.catalogue import Measure, Sense
-
-SIMULATED = "simulated "  # before the name of a column that the circuit simulator has filled
 
 
 @dataclass(frozen=True)

@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-from optisize.errors import InputError, OptisizeError
+from optisize.errors import InputError
 from optisize.files import write_text
 from optisize.front.aims import Aim, Axis
 from optisize.front.card import Card, card
@@ -145,8 +145,6 @@ class Choice:
 
 
 def check_new(path: Path) -> None:
-    """Raise InputError when a file is already there, OptisizeError when there is no directory for it."""
+    """Raise InputError when a file is already there."""
     if os.path.lexists(path):
         raise InputError(f"{path}: already exists; give another file, or remove it")
-    if not path.absolute().parent.is_dir():
-        raise OptisizeError(f"{path}: cannot be written: there is no directory {path.parent}")

@@ -13,6 +13,7 @@ from optisize.process.law import Array
 from optisize.stage.measures import CATALOGUE, Measure
 
 LISTED = 300  # characters of the columns' names in a message
+SIMULATED = "simulated "  # before the name of a column that the circuit simulator has filled
 UNLIMITED = {"unlimited": np.inf, "-unlimited": -np.inf}  # infinite figures in words
 
 
@@ -23,7 +24,7 @@ def column(name: str, unit: str) -> str:
 
 def simulated_column(measure: Measure) -> str:
     """Return the name of the column of a measure as the circuit simulator gives it: ``simulated gain [dB]``."""
-    return column(f"simulated {measure.name}", measure.unit)
+    return column(f"{SIMULATED}{measure.name}", measure.unit)
 
 
 def units(problem: Problem) -> dict[str, str]:

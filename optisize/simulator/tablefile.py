@@ -3,11 +3,10 @@
 from __future__ import annotations
 
 import os
-import tempfile
 from pathlib import Path
 
-from optisize.errors import InputError, OptisizeError
-from optisize.files import write_text
+from optisize.errors import InputError
+from optisize.files import write_beside, write_text
 from optisize.front.run import check_writable
 from optisize.process.tabulated import Tables, write_tables
 from optisize.simulator.characterise import Plan
@@ -50,18 +49,10 @@ def save(target: Path, tables: Tables, planned: Plan | None, supply: float, repl
     library = None if planned is None else planned.request.library
     text = process_text(tables, planned, library, supply, target)
     path = table_of(target)
-    try:
-        path.parent.mkdir(parents=True, exist_ok=True)
-        handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
-        os.close(handle)
-        try:
-            write_tables(Path(name), tables)
-            os.chmod(name, 0o644)
-            if not replace:
-                write_text(target, text)
-            os.replace(name, path)
-        except BaseException:
-            os.unlink(name)
-            raise
-    except OSError as error:
-        raise OptisizeError(f"{path}: cannot be written: {error.strerror or error}") from None
+
+    def fill(beside: Path) -> None:
+        write_tables(beside, tables)
+        if not replace:
+            write_text(target, text)
+
+    write_beside(path, fill)

@@ -205,13 +205,15 @@ def test_the_sizing_file_is_what_other_commands_read(cli: Cli, run_copy: Path) -
     assert cli("search", "run/problem.toml", "--from", "knee.toml", *words).exit_code == 0
 
 
-def test_a_file_that_is_there_is_not_overwritten_and_a_place_that_is_not_is_said(cli: Cli, run_copy: Path) -> None:
+def test_a_file_that_is_there_is_not_overwritten_and_a_place_that_is_not_is_made(cli: Cli, run_copy: Path) -> None:
     Path("there.toml").write_text("mine", encoding="utf-8")
     refused(cli, "there.toml: already exists", words=("choose", "run", "--save", "there.toml"))
     assert Path("there.toml").read_text(encoding="utf-8") == "mine"
-    result = cli("choose", "run", "--save", "no/where.toml")
-    assert (result.exit_code, result.stdout) == (1, "")
-    assert "no/where.toml: cannot be written" in result.stderr
+    assert cli("choose", "run", "--save", "new/place.toml").exit_code == 0
+    assert Path("new/place.toml").is_file()
+    result = cli("choose", "run", "--save", "there.toml/x.toml")
+    assert result.exit_code == 1
+    assert "there.toml/x.toml: cannot be written" in result.stderr
 
 
 def test_what_nothing_meets_is_exit_code_3_with_the_nearest_design_and_what_is_missing(

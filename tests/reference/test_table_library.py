@@ -117,6 +117,23 @@ def test_at_tabulated_lengths(process: Process, channel: str, ngspice: str, tmp_
     assert {name: percentile(found[name]) for name in bounds if percentile(found[name]) > bounds[name]} == {}
 
 
+@pytest.mark.parametrize("channel", ["n", "p"])
+def test_at_the_knee(channel: str, process: Process, ngspice: str, tmp_path: Path) -> None:
+    """The output conductance within 70 mV of vdsat, where the grid of gate voltages tells. Found: 5 %."""
+    assert process.tables is not None
+    sizes, rng = process.tables.sizes[channel], np.random.default_rng(1)
+    width = sizes.widths[0] * (sizes.widths[-1] / sizes.widths[0]) ** rng.random(2000)
+    at = drawn(2, width, rng.choice(sizes.lengths, 2000))
+    at |= {"vgs": rng.uniform(0.5, 1.4, 2000), "vds": rng.uniform(0.08, 0.6, 2000)}
+    found = simulated(process, channel, at, ngspice, tmp_path)
+    law, _ = process.bind_law([channel], width[None], at["length"][None], NOMINAL, "typical", np.ones((1, 2000)))
+    v = [x[None] for x in (at["vgs"] + at["vsb"], at["vds"] + at["vsb"], at["vsb"])]
+    room = at["vds"] - found["vdsat"]
+    near = (room > 0.0) & (room < 0.07) & (found["id"] > 1e-9)
+    assert near.sum() > 100
+    assert percentile(np.abs(law.drain(*v).gds[0] / found["gds"] - 1.0)[near]) < 0.08
+
+
 def test_what_flows_to_the_bulk(process: Process, ngspice: str, tmp_path: Path) -> None:
     """Slopes of impact ionisation, which set common-mode gains of stacks. Found: 0.6 % over vds, 1 % over vgs."""
     assert process.tables is not None
@@ -246,7 +263,7 @@ BOUNDS = {
 def test_whole_stages(kind: str, tail: str, process: Process, ngspice: str, tmp_path: Path) -> None:
     """Predicted against simulated: random feasible stages, 30 with each tail, so 60 of a kind.
 
-    A rejection beyond 140 dB is what is left of terms that cancel; there the two only have to agree that it is so high.
+    A rejection beyond 140 dB may be what is left of terms that cancel; it counts for the median, not for the worst.
     """
     assert process.table is not None
     input, load, sizes, common_mode = KINDS[kind]
@@ -272,10 +289,9 @@ def test_whole_stages(kind: str, tail: str, process: Process, ngspice: str, tmp_
     for c in found.comparisons:
         name = c.measure.name
         away = np.abs(c.simulated - c.predicted)
-        if name == "cmrr":
-            away = away[np.minimum(c.simulated, c.predicted) < CANCELS]
         away = away if c.measure.scale == "linear" else away / np.abs(c.simulated)
-        median, worst = float(np.median(away)), float(np.max(away))
+        counts = (c.simulated < CANCELS) | (c.predicted < CANCELS) if name == "cmrr" else np.isfinite(away)
+        median, worst = float(np.median(away)), float(np.max(away[counts]))
         print(f"{kind} {tail} {name}: {median:.3g} {worst:.3g}")
         if not (median < BOUNDS[name][0] and worst < BOUNDS[name][1]):
             beyond[name] = (median, worst)
